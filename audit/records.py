@@ -16,6 +16,8 @@ from enum import StrEnum
 import numpy as np
 from numpy.typing import NDArray
 
+from audit.errors import Fault
+
 SECOND_US = 1_000_000
 DAY_US = 86_400 * SECOND_US
 
@@ -610,3 +612,88 @@ class PastStep:
     set_aside: tuple[Reason, ...]
     measured: Mapping[Quantity, Measured]
     band_pct: float
+
+
+@dataclass(frozen=True, eq=False)
+class MeasuredStep:
+    """A step with what the store keeps beside it.
+
+    ``curve``: the slice it was measured from. ``depends_from_us``/``depends_to_us``: stamps of the
+    outermost bounding samples it rests on; None where the bounding sample is not known yet, so that
+    any sample found there later makes it be measured again.
+    """
+
+    step: Step
+    curve: Record
+    depends_from_us: int | None
+    depends_to_us: int | None
+
+
+@dataclass(frozen=True, eq=False)
+class Edge:
+    """The slice kept at one border of a covered span. ``side``: "from" or "to"."""
+
+    border_us: int
+    side: str
+    record: Record
+
+
+@dataclass(frozen=True, eq=False)
+class KeptDay:
+    """A local day's record with the state runs it was counted from (encoded by days.py)."""
+
+    record: DayRecord
+    runs: bytes
+
+
+@dataclass(frozen=True, eq=False)
+class LoopResult:
+    """What one audit of one loop's new samples leads to; written in one transaction.
+
+    ``steps``: new or measured again (one that equals the stored one changes nothing).
+    ``withdrawn``: at_us of stored steps that are not found any more. ``edges``/``days`` replace those
+    of the same border and side, or day; ``dropped_edges``: (border_us, side).
+    """
+
+    tag: str
+    steps: tuple[MeasuredStep, ...] = ()
+    withdrawn: tuple[int, ...] = ()
+    edges: tuple[Edge, ...] = ()
+    dropped_edges: tuple[tuple[int, str], ...] = ()
+    days: tuple[KeptDay, ...] = ()
+
+
+@dataclass(frozen=True)
+class ExportFile:
+    """One file or object an export source names. ``stamp``: modification time or ETag, as text."""
+
+    source: str
+    path: str
+    size: int
+    stamp: str
+    revision: int
+
+
+@dataclass(frozen=True, eq=False)
+class ExportRead:
+    """What one export file holds of the wanted tags, and what became of each of its cells."""
+
+    content_hash: str
+    first_us: int | None
+    last_us: int | None
+    named: tuple[str, ...]
+    columns: Mapping[str, RawSamples]
+    account: CellAccount
+    faults: tuple[Fault, ...] = ()
+
+
+@dataclass(frozen=True)
+class Coverage:
+    """A tag's time from the first to the last stamp of an export file that names it."""
+
+    tag: str
+    from_us: int
+    to_us: int
+    source: str
+    path: str
+    revision: int
