@@ -651,7 +651,7 @@ class LoopResult:
     """What one audit of one loop's new samples leads to; written in one transaction.
 
     ``steps``: new or measured again (one that equals the stored one changes nothing).
-    ``withdrawn``: at_us of stored steps that are not found any more. ``edges``/``days`` replace those
+    ``withdrawn``: at_us of stored steps not found any more. ``edges`` and ``days`` replace those
     of the same border and side, or day; ``dropped_edges``: (border_us, side).
     """
 
