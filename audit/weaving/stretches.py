@@ -1,0 +1,117 @@
+"""A loop's record around what is new: put together from kept slices, and cut into slices to keep.
+
+Pure. In: the slices the store kept and the fresh samples. Out: one record to look at, which
+instants have to be looked at again, and the edge slices that a change across a later border needs.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+
+import numpy as np
+
+from audit.records import (
+    Between,
+    Edge,
+    Reading,
+    Record,
+    Role,
+    Samples,
+    SetpointChange,
+    Windows,
+)
+from audit.weaving.spans import Span, inside, pick, union
+
+
+def weave(
+    kept: Sequence[Record],
+    fresh: Mapping[Role, Samples],
+    replaced: Mapping[Role, Sequence[Span]],
+) -> Record:
+    """Kept slices and fresh samples as one record; kept samples in replaced spans are dropped."""
+    signals: dict[Role, Samples] = {}
+    for role in Role:
+        parts = [record.signals[role] for record in kept if role in record.signals]
+        known = _merge(parts)
+        known = pick(known, ~inside(known.t_us, union(replaced.get(role, ()))))
+        new = fresh.get(role, Samples.empty())
+        if parts or role in fresh:
+            signals[role] = _merge([known, new])
+    return Record(signals)
+
+
+def _merge(parts: Sequence[Samples]) -> Samples:
+    """All samples once, in order; the same stamp in several parts is the same sample."""
+    parts = [part for part in parts if len(part)]
+    if not parts:
+        return Samples.empty()
+    if len(parts) == 1:
+        return parts[0]
+    stamps = np.concatenate([part.t_us for part in parts])
+    t_us, first = np.unique(stamps, return_index=True)
+    value = np.concatenate([part.value for part in parts])[first]
+    good = np.concatenate([part.good for part in parts])[first]
+    return Samples(t_us, value, good)
+
+
+def to_look_at(spans: Iterable[Span], windows: Windows) -> list[Span]:
+    """The instants at which a change may be found differently once the spans are known."""
+    return union(
+        (start - windows.after_us - windows.join_us, end + windows.before_us + windows.join_us)
+        for start, end in spans
+    )
+
+
+def context(spans: Iterable[Span], windows: Windows) -> list[Span]:
+    """What has to be known of the record to look at those instants."""
+    return union((start - windows.reach_us, end + windows.reach_us) for start, end in spans)
+
+
+def curve(record: Record, change: SetpointChange, windows: Windows) -> Record:
+    """The slice a change is found and measured in, with each tag's bounding good samples."""
+    return record.around(
+        change.at_us - windows.before_us - windows.join_us,
+        change.at_us + windows.after_us + windows.join_us,
+    )
+
+
+def dependence(
+    slice_: Record, at_us: int, roles: Iterable[Role], windows: Windows, reading: Reading
+) -> tuple[int | None, int | None]:
+    """From which to which stamp a change rests on the record; None: bounding sample unknown.
+
+    Setpoint, mode and a held output run on until their next sample, so that their first sample
+    after the window changes nothing and is not waited for.
+    """
+    start_us = at_us - windows.before_us - windows.join_us
+    end_us = at_us + windows.after_us + windows.join_us
+    waited = {Role.PV}
+    if reading.output_between is Between.LINEAR:
+        waited.add(Role.OUTPUT)
+    starts: list[int | None] = []
+    ends: list[int | None] = []
+    for role in roles:
+        good_us = slice_.of(role).only_good().t_us
+        starts.append(int(good_us[0]) if len(good_us) and good_us[0] < start_us else None)
+        if role in waited:
+            ends.append(int(good_us[-1]) if len(good_us) and good_us[-1] > end_us else None)
+    before, after = _all_known(starts), _all_known(ends)
+    return (
+        None if before is None else min([*before, start_us]),
+        None if after is None else max([*after, end_us]),
+    )
+
+
+def _all_known(stamps: Sequence[int | None]) -> list[int] | None:
+    known = [stamp for stamp in stamps if stamp is not None]
+    return known if len(known) == len(stamps) else None
+
+
+def edges(record: Record, spans: Iterable[Span], windows: Windows) -> list[Edge]:
+    """The slices to keep at both borders of each newly covered span."""
+    reach_us = windows.reach_us
+    kept: list[Edge] = []
+    for start, end in spans:
+        kept.append(Edge(start, "from", record.around(start, start + reach_us)))
+        kept.append(Edge(end, "to", record.around(end - reach_us, end)))
+    return kept
