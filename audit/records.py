@@ -8,7 +8,7 @@ sample that is not good: what was not measured is ``None`` with a ``Reason``.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import date, datetime
 from enum import StrEnum
@@ -232,6 +232,12 @@ class Spec:
     reason: str = ""
     version: int = 0
     entered_at: datetime | None = None
+
+
+def spec_in_force(specs: Sequence[Spec], at: datetime) -> Spec | None:
+    """Of one loop's specs the one that holds at an instant; of equal dates the newest version."""
+    held = [spec for spec in specs if spec.valid_from <= at]
+    return max(held, key=lambda spec: (spec.valid_from, spec.version)) if held else None
 
 
 @dataclass(frozen=True, eq=False)

@@ -1,0 +1,158 @@
+"""One loop's new samples, from the record to what the store is to keep: find, measure, judge.
+
+This is the middle of the way of the data for one loop. It knows no file, clock or database: all it
+needs comes in a ``LoopWork`` and all it found goes out in a ``LoopResult``, so that it runs the
+same in this process or another.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Collection, Mapping
+from dataclasses import dataclass
+from datetime import UTC, date, datetime, timedelta
+from zoneinfo import ZoneInfo
+
+from audit import days, quality, response, setpoints, verdict
+from audit.records import (
+    DAY_US,
+    KeptDay,
+    Loop,
+    LoopResult,
+    MeasuredStep,
+    MeasureSettings,
+    RawSamples,
+    Reading,
+    Record,
+    Role,
+    Samples,
+    SetpointChange,
+    Spec,
+    Step,
+    spec_in_force,
+)
+from audit.weaving.precedence import FreshTag
+from audit.weaving.spans import Span, union
+from audit.weaving.stretches import curve, dependence, edges, to_look_at, weave
+
+
+@dataclass(frozen=True, eq=False)
+class LoopWork:
+    """All that one loop's audit needs.
+
+    ``kept``: stored slices around the fresh spans. ``touched``: at_us of the stored steps whose
+    result may change. ``days``: the stored day's records around the fresh spans.
+    """
+
+    loop: Loop
+    specs: tuple[Spec, ...]
+    reading: Reading
+    error_u_eu: float | None
+    zone: ZoneInfo
+    kept: tuple[Record, ...]
+    fresh: Mapping[Role, FreshTag]
+    touched: tuple[int, ...]
+    days: tuple[KeptDay, ...]
+
+    def spans(self) -> list[Span]:
+        """Every span some tag of the loop has fresh word of."""
+        return union(span for tag in self.fresh.values() for span in tag.spans)
+
+
+def audit_loop(work: LoopWork) -> LoopResult:
+    """Find, measure and judge the setpoint changes that the fresh samples concern."""
+    fresh = {role: _as_samples(role, tag.raw, work.loop) for role, tag in work.fresh.items()}
+    replaced = {role: tag.spans for role, tag in work.fresh.items()}
+    record = weave(work.kept, fresh, replaced)
+    steps = [measure_step(record, change, work) for change in _concerned(record, work)]
+    found = {measured.step.change.at_us for measured in steps}
+    borders = sorted({span for tag in work.fresh.values() for span in tag.spans})
+    return LoopResult(
+        tag=work.loop.tag,
+        steps=tuple(steps),
+        withdrawn=tuple(at_us for at_us in work.touched if at_us not in found),
+        edges=tuple(edges(record, borders, work.loop.windows)),
+        days=tuple(_days(work, fresh, replaced)),
+    )
+
+
+def _as_samples(role: Role, raw: RawSamples, loop: Loop) -> Samples:
+    return quality.in_automatic(raw, loop.auto_modes) if role is Role.MODE else raw.samples
+
+
+def _concerned(record: Record, work: LoopWork) -> list[SetpointChange]:
+    """The changes near the fresh spans, and those stored earlier that rest on them."""
+    spans = to_look_at(work.spans(), work.loop.windows)
+    touched = set(work.touched)
+    return [
+        change
+        for change in setpoints.find(record, work.loop, work.reading)
+        if change.at_us in touched or any(a <= change.at_us <= b for a, b in spans)
+    ]
+
+
+def measure_step(record: Record, change: SetpointChange, work: LoopWork) -> MeasuredStep:
+    """Measure one change from its own slice of the record and judge it by the spec in force."""
+    loop = work.loop
+    slice_ = curve(record, change, loop.windows)
+    spec = spec_in_force(work.specs, instant(change.at_us))
+    measured = response.measure(
+        slice_, change, settings_for(loop, spec, work.reading, work.error_u_eu)
+    )
+    verdicts, usable, set_aside = verdict.judge(measured, change, spec, loop)
+    first, last = dependence(slice_, change.at_us, loop.tags(), loop.windows, work.reading)
+    step = Step(change, measured, verdicts, usable, set_aside)
+    return MeasuredStep(step, slice_, first, last)
+
+
+def settings_for(
+    loop: Loop, spec: Spec | None, reading: Reading, error_u_eu: float | None
+) -> MeasureSettings:
+    """What a measurement of this loop under this spec rests on beside the samples."""
+    return MeasureSettings(
+        band_pct=2.0 if spec is None else spec.settling_band_pct,
+        min_step_eu=None if spec is None else spec.min_step_eu,
+        span_eu=loop.span_eu,
+        error_u_eu=error_u_eu,
+        output_low=loop.output_low,
+        output_high=loop.output_high,
+        reading=reading,
+        before_us=loop.windows.before_us,
+        after_us=loop.windows.after_us,
+    )
+
+
+def instant(at_us: int) -> datetime:
+    """Microseconds since 1970 as an aware UTC time."""
+    return datetime.fromtimestamp(0, UTC) + timedelta(microseconds=at_us)
+
+
+def local_day(at_us: int, zone: ZoneInfo) -> date:
+    """The site's calendar day of an instant."""
+    return instant(at_us).astimezone(zone).date()
+
+
+def days_padding(reading: Reading) -> int:
+    """Days on either side of fresh samples whose record can depend on them."""
+    longest_us = max(reading.silence_us.values())
+    return 1 + -(-longest_us // DAY_US)
+
+
+def _days(
+    work: LoopWork, fresh: Mapping[Role, Samples], replaced: Mapping[Role, Collection[Span]]
+) -> list[KeptDay]:
+    """The day's records that the fresh samples concern, counted again."""
+    spans = work.spans()
+    kept = days.join_days([days.decode(day.runs) for day in work.days], work.reading)
+    new = days.runs_of(Record(fresh), work.loop, work.reading)
+    cleared = {role: tuple(spans) for role, spans in replaced.items()}
+    merged = days.merge(kept, new, cleared, work.reading)
+    pad = timedelta(days=days_padding(work.reading) - 1)
+    parts = {
+        day: runs
+        for day, runs in days.split_days(merged, work.zone).items()
+        if any(
+            local_day(a, work.zone) - pad <= day <= local_day(b, work.zone) + pad for a, b in spans
+        )
+    }
+    records = days.day_records(merged, work.loop, work.reading, work.zone, sorted(parts))
+    return [KeptDay(record, days.encode(parts[record.day])) for record in records]
