@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass
-from datetime import UTC, date, datetime, timedelta
+from datetime import date, timedelta
 from zoneinfo import ZoneInfo
 
 from audit import days, quality, response, setpoints, verdict
@@ -28,6 +28,7 @@ from audit.records import (
     SetpointChange,
     Spec,
     Step,
+    instant,
     spec_in_force,
 )
 from audit.weaving.precedence import FreshTag
@@ -119,11 +120,6 @@ def settings_for(
         before_us=loop.windows.before_us,
         after_us=loop.windows.after_us,
     )
-
-
-def instant(at_us: int) -> datetime:
-    """Microseconds since 1970 as an aware UTC time."""
-    return datetime.fromtimestamp(0, UTC) + timedelta(microseconds=at_us)
 
 
 def local_day(at_us: int, zone: ZoneInfo) -> date:

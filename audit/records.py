@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from datetime import date, datetime
+from datetime import UTC, date, datetime, timedelta
 from enum import StrEnum
 
 import numpy as np
@@ -20,6 +20,17 @@ from audit.errors import Fault
 
 SECOND_US = 1_000_000
 DAY_US = 86_400 * SECOND_US
+EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
+
+
+def instant(at_us: int) -> datetime:
+    """Microseconds since 1970-01-01T00:00Z as an aware UTC time."""
+    return EPOCH + timedelta(microseconds=at_us)
+
+
+def to_us(at: datetime) -> int:
+    """An aware time as microseconds since 1970-01-01T00:00Z, exactly."""
+    return (at - EPOCH) // timedelta(microseconds=1)
 
 
 class Role(StrEnum):

@@ -1,0 +1,149 @@
+"""What the store knows that one loop's audit, or its standing, needs: read, nothing decided."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from datetime import date, datetime, timedelta
+
+from audit.config import Config
+from audit.loopwork import LoopWork, days_padding, local_day
+from audit.records import (
+    ExportSource,
+    Loop,
+    PastStep,
+    Reading,
+    Record,
+    Role,
+    SetpointChange,
+    Spec,
+    to_us,
+)
+from audit.standings import DAYS_LOOKED_AT, StandingWork, band_changed
+from audit.store import Store, queries
+from audit.weaving.precedence import FreshTag
+from audit.weaving.spans import Span, union
+from audit.weaving.stretches import context
+
+
+def reading_of(
+    loop: Loop, tag_sources: Mapping[str, str], sources: Sequence[ExportSource]
+) -> Reading:
+    """How the loop's signals are read between stamps: each by the export kind that brings it."""
+    by_name = {source.name: source.reading for source in sources}
+
+    def of(role: Role) -> Reading:
+        tag = loop.tags().get(role, loop.pv)
+        return by_name.get(tag_sources.get(tag, ""), sources[0].reading)
+
+    return Reading(
+        pv_between=of(Role.PV).pv_between,
+        output_between=of(Role.OUTPUT).output_between,
+        silence_us={role: of(role).silence_us[role] for role in Role},
+    )
+
+
+@dataclass(frozen=True)
+class LoopContext:
+    """What stays the same for all loops of one audit."""
+
+    config: Config
+    specs: Mapping[str, Sequence[Spec]]
+    tag_sources: Mapping[str, str]
+
+    def reading(self, loop: Loop) -> Reading:
+        return reading_of(loop, self.tag_sources, self.config.exports)
+
+
+def loop_work(
+    store: Store, context_: LoopContext, loop: Loop, fresh: Mapping[str, FreshTag]
+) -> LoopWork | None:
+    """The work that fresh samples mean for a loop; None where they do not concern it."""
+    own = {role: fresh[tag] for role, tag in loop.tags().items() if tag in fresh}
+    spans = union(span for tag in own.values() for span in tag.spans)
+    if not spans:
+        return None
+    reading = context_.reading(loop)
+    config = context_.config
+    pad = timedelta(days=days_padding(reading))
+    first_day = local_day(spans[0][0], config.timezone) - pad
+    last_day = local_day(spans[-1][1], config.timezone) + pad
+    with store.read() as session:
+        touched = sorted(
+            {s.at_us for span in spans for s in queries.touched(session, loop.tag, *span)}
+        )
+        kept = [
+            record
+            for a, b in _to_recall(spans, touched, loop)
+            for record in queries.kept(session, loop.tag, a, b)
+        ]
+        days = queries.kept_days(session, loop.tag, first_day, last_day)
+    return LoopWork(
+        loop=loop,
+        specs=tuple(context_.specs.get(loop.tag, ())),
+        reading=reading,
+        error_u_eu=config.standing.error_u_eu,
+        zone=config.timezone,
+        kept=tuple(kept),
+        fresh=own,
+        touched=tuple(touched),
+        days=tuple(days),
+    )
+
+
+def _to_recall(spans: Sequence[Span], touched: Sequence[int], loop: Loop) -> list[Span]:
+    """The spans whose kept slices are needed: around what is new and around touched steps."""
+    around = [(at_us, at_us) for at_us in touched]
+    return context([*spans, *around], loop.windows)
+
+
+def standing_works(
+    store: Store,
+    context_: LoopContext,
+    loops: Sequence[Loop],
+    nights: Sequence[tuple[date, datetime]],
+    loops_at_once: int = 200,
+) -> Iterator[StandingWork]:
+    """Each loop's evidence for the standings of the nights, loaded for many loops at once."""
+    first = nights[0][0] - timedelta(days=DAYS_LOOKED_AT)
+    last, cutoff = nights[-1]
+    for start in range(0, len(loops), loops_at_once):
+        some = loops[start : start + loops_at_once]
+        tags = [loop.tag for loop in some]
+        with store.read() as session:
+            steps = queries.past_steps_many(session, tags, to_us(cutoff))
+            days = queries.day_records_many(session, tags, first, last)
+        for loop in some:
+            own = steps.get(loop.tag, [])
+            yield StandingWork(
+                loop=loop,
+                specs=tuple(context_.specs.get(loop.tag, ())),
+                steps=tuple(own),
+                days=tuple(days.get(loop.tag, [])),
+                nights=tuple(nights),
+                rule=context_.config.standing,
+                zone=context_.config.timezone,
+                reading=context_.reading(loop),
+                curves=_curves(store, context_, loop, own, [at for _, at in nights]),
+            )
+
+
+def _curves(
+    store: Store,
+    context_: LoopContext,
+    loop: Loop,
+    steps: Sequence[PastStep],
+    cutoffs: Sequence[datetime],
+) -> dict[int, tuple[SetpointChange, Record]]:
+    """Kept curves of the steps measured in another settling band than a night's spec has."""
+    specs = context_.specs.get(loop.tag, ())
+    stale = {step.at_us for step in steps if band_changed(step, specs, cutoffs)}
+    if not stale:
+        return {}
+    found: dict[int, tuple[SetpointChange, Record]] = {}
+    with store.read() as session:
+        for step in queries.history(session, loop.tag, min(stale), max(stale)):
+            curve = queries.curve(session, loop.tag, step.change.at_us)
+            if step.change.at_us in stale and curve is not None:
+                found[step.change.at_us] = (step.change, curve)
+    return found

@@ -1,0 +1,114 @@
+"""What one audit did, counted while it runs and told at its end."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, fields
+from datetime import date
+from typing import Protocol
+
+from audit.errors import Fault
+from audit.records import CellAccount, LoopResult
+from audit.store.writes import SavedLoop
+
+
+class Progress(Protocol):
+    """Told how far a stage has come; ``total`` may grow."""
+
+    def __call__(self, stage: str, done: int, total: int) -> None: ...
+
+
+@dataclass(frozen=True)
+class RunReport:
+    """The outcome of one audit.
+
+    ``account``: cells of all files read in this run, summed. ``files_refused``: one fault a file.
+    ``refused_share``: cells refused, of the cells read. ``quiet``: what is missing from the feed.
+    ``faults``: examples of refused cells.
+    """
+
+    nights: tuple[date, ...]
+    files_new: int
+    files_skipped: int
+    files_refused: tuple[Fault, ...]
+    account: CellAccount
+    steps_new: int
+    steps_changed: int
+    steps_withdrawn: int
+    quiet: tuple[str, ...]
+    faults: tuple[Fault, ...]
+
+    @property
+    def refused_share(self) -> float:
+        refused = sum(self.account.refused.values())
+        return refused / self.account.read if self.account.read else 0.0
+
+
+@dataclass
+class Tally:
+    """Counts gathered while an audit runs."""
+
+    files_new: int = 0
+    files_skipped: int = 0
+    files_refused: list[Fault] = field(default_factory=list)
+    account: CellAccount = field(default_factory=CellAccount)
+    steps: Counter[str] = field(default_factory=Counter)
+    faults: list[Fault] = field(default_factory=list)
+    nights: list[date] = field(default_factory=list)
+    quiet: tuple[str, ...] = ()
+    earliest_changed_us: int | None = None
+
+    def read(self, account: CellAccount, faults: Iterable[Fault]) -> None:
+        """One file was read."""
+        self.files_new += 1
+        self.account = add(self.account, account)
+        self.faults.extend(faults)
+
+    def saved(self, result: LoopResult, saved: SavedLoop) -> None:
+        """One loop was written."""
+        self.steps["new"] += saved.new
+        self.steps["changed"] += saved.changed
+        self.steps["withdrawn"] += saved.withdrawn
+        if saved.new + saved.changed + saved.withdrawn:
+            ends = [measured.step.change.window_end_us for measured in result.steps]
+            known = [] if self.earliest_changed_us is None else [self.earliest_changed_us]
+            self.earliest_changed_us = min([*ends, *result.withdrawn, *known])
+
+    def counts(self) -> Mapping[str, int]:
+        """For the run's record in the store."""
+        return {
+            "files_new": self.files_new,
+            "files_skipped": self.files_skipped,
+            "files_refused": len(self.files_refused),
+            "cells_read": self.account.read,
+            "steps_new": self.steps["new"],
+            "steps_changed": self.steps["changed"],
+            "steps_withdrawn": self.steps["withdrawn"],
+            "nights": len(self.nights),
+        }
+
+    def report(self) -> RunReport:
+        return RunReport(
+            nights=tuple(self.nights),
+            files_new=self.files_new,
+            files_skipped=self.files_skipped,
+            files_refused=tuple(self.files_refused),
+            account=self.account,
+            steps_new=self.steps["new"],
+            steps_changed=self.steps["changed"],
+            steps_withdrawn=self.steps["withdrawn"],
+            quiet=self.quiet,
+            faults=tuple(self.faults),
+        )
+
+
+def add(one: CellAccount, other: CellAccount) -> CellAccount:
+    """The account of two files together."""
+    sums = {
+        item.name: getattr(one, item.name) + getattr(other, item.name)
+        for item in fields(CellAccount)
+        if item.name != "refused"
+    }
+    refused = Counter(one.refused) + Counter(other.refused)
+    return CellAccount(**sums, refused=dict(sorted(refused.items())))
