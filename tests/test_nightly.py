@@ -1,0 +1,260 @@
+"""The whole job on small sites: from export files to the store's canonical content."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from datetime import UTC, date, datetime
+from pathlib import Path
+
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+
+import sites
+from audit import nightly
+from audit.run_report import RunReport
+from audit.site import open_site
+from audit.store import Store, open_store
+from audit.store.dump import dump
+
+NOW = datetime(2026, 3, 3, 6, 0, tzinfo=UTC)
+
+LOOPS = (
+    "tag,process_unit,service,kind,pv,sp,output,mode,eu,range_low,range_high,auto_modes,"
+    "criticality\n"
+    "FIC-101,U1,feed,flow,F101.PV,F101.SP,F101.OP,F101.MODE,m3/h,0,100,AUTO;CAS,4\n"
+    "TIC-102,U1,bath,temperature,T102.PV,T102.SP,,,degC,0,200,,2\n"
+)
+SPECS = (
+    "tag,valid_from,rise_time_s,settling_time_s,settling_band_pct,overshoot_pct,set_by,reason\n"
+    "FIC-101,2026-01-01,20,60,5,20,N. Quay,commissioning\n"
+    "TIC-102,2026-01-01,60,300,5,30,N. Quay,commissioning\n"
+)
+
+
+def plant(hours: float = 3.0, scan_s: float = 2.0, seed: int = 7) -> sites.Plant:
+    """Two loops moved every quarter of an hour, with noise, a manual period and a staircase."""
+    rng = np.random.default_rng(seed)
+    t_s = np.arange(0, hours * 3600, scan_s)
+    level = 40.0
+    flow_moves: list[tuple[float, float]] = []
+    for start in np.arange(600, hours * 3600 - 60, 900.0):
+        level += float(rng.choice([-5.0, 5.0, 8.0])) if level < 70 else -12.0
+        flow_moves.append((float(start + rng.integers(0, 200)), level))
+    flow_moves.insert(4, (flow_moves[3][0] + 6, flow_moves[3][1] + 2.0))
+    sp, pv = sites.follow(t_s, flow_moves, 40.0, 0.5, 0.35, 2.0)
+    warm_moves = [(at + 311, 100 + value / 4) for at, value in flow_moves[::2]]
+    warm_sp, warm_pv = sites.follow(t_s, warm_moves, 110.0, 0.7, 0.08, 6.0)
+    manual = (t_s > 2 * 3600) & (t_s < 2 * 3600 + 1000)
+    return sites.Plant(
+        t_s,
+        {
+            "F101.PV": pv + rng.normal(0, 0.05, len(t_s)),
+            "F101.SP": sp,
+            "F101.OP": 50 + (pv - 50) * 0.8,
+            "F101.MODE": ["MAN" if m else "AUTO" for m in manual],
+            "T102.PV": warm_pv + rng.normal(0, 0.02, len(t_s)),
+            "T102.SP": warm_sp,
+        },
+    )
+
+
+def audit(
+    folder: Path, url: str | None = None, now: datetime = NOW, **options: object
+) -> RunReport:
+    """Run one nightly audit of a site's folder; the store is upgraded first."""
+    site = open_site(folder, {} if url is None else {"LOOPASSAY_STORE_URL": url})
+    with opened(folder, url) as store:
+        return nightly.run(site, store, now=now, cores=1, **options)  # type: ignore[arg-type]
+
+
+@contextmanager
+def opened(folder: Path, url: str | None = None) -> Iterator[Store]:
+    store = open_store(url or f"sqlite:///{folder / 'site.db'}")
+    try:
+        store.upgrade()
+        yield store
+    finally:
+        store.close()
+
+
+def content(folder: Path, url: str | None = None) -> list[str]:
+    """The store's canonical content."""
+    with opened(folder, url) as store, store.read() as session:
+        return list(dump(session))
+
+
+def lay(folder: Path, exports: str = sites.WIDE) -> Path:
+    return sites.SiteFiles(LOOPS, SPECS, exports).lay(folder)
+
+
+@pytest.fixture(scope="module")
+def record() -> sites.Plant:
+    return plant()
+
+
+@pytest.fixture(scope="module")
+def reference(record: sites.Plant, tmp_path_factory: pytest.TempPathFactory) -> list[str]:
+    """The content after one audit of one wide CSV."""
+    folder = lay(tmp_path_factory.mktemp("reference"))
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    report = audit(folder)
+    assert report.account.balance == 0
+    assert report.steps_new > 15
+    lines = content(folder)
+    usable = [line for line in lines if '"usable":true' in line.replace(" ", "")]
+    assert len(usable) > 10
+    return lines
+
+
+@pytest.mark.parametrize("ending", ["", ".gz", ".bz2", ".xz", ".zst"])
+@pytest.mark.parametrize("layout", ["wide", "narrow"])
+def test_any_layout_and_packing_gives_the_same_content(
+    record: sites.Plant, reference: list[str], tmp_path: Path, layout: str, ending: str
+) -> None:
+    folder = lay(tmp_path, sites.WIDE if layout == "wide" else sites.NARROW)
+    text = sites.wide_csv(record) if layout == "wide" else sites.narrow_csv(record)
+    sites.write_csv(folder / "exports" / f"all.csv{ending}", text)
+    audit(folder)
+    assert content(folder) == reference
+
+
+@pytest.mark.parametrize("layout", ["wide", "narrow"])
+def test_parquet_gives_the_same_content(
+    record: sites.Plant, reference: list[str], tmp_path: Path, layout: str
+) -> None:
+    folder = lay(tmp_path, sites.PARQUET_WIDE if layout == "wide" else sites.PARQUET_NARROW)
+    sites.write_parquet(folder / "exports" / "all.parquet", record, layout)
+    audit(folder)
+    assert content(folder) == reference
+
+
+def pieces(record: sites.Plant, seed: int, count: int = 20) -> list[tuple[str, str]]:
+    """The record cut into files at random rows, with names in no order of time."""
+    rng = np.random.default_rng(seed)
+    rows = len(record.t_s)
+    cuts = sorted({0, rows, *rng.choice(np.arange(1, rows), count - 1, replace=False).tolist()})
+    names = rng.permutation(len(cuts) - 1)
+    return [
+        (f"part{name:02d}.csv", sites.wide_csv(record.rows(a, b)))
+        for name, a, b in zip(names, cuts[:-1], cuts[1:], strict=True)
+    ]
+
+
+@pytest.mark.parametrize("seed", [1, 2])
+def test_twenty_files_at_once_give_the_same_content(
+    record: sites.Plant, reference: list[str], tmp_path: Path, seed: int
+) -> None:
+    folder = lay(tmp_path)
+    for name, text in pieces(record, seed):
+        sites.write_csv(folder / "exports" / name, text)
+    audit(folder)
+    assert content(folder) == reference
+
+
+@pytest.mark.parametrize("seed", [3, 4, 5])
+def test_files_that_come_in_any_order_over_many_audits_give_the_same_content(
+    record: sites.Plant, reference: list[str], tmp_path: Path, seed: int
+) -> None:
+    folder = lay(tmp_path)
+    parts = pieces(record, seed)
+    order = np.random.default_rng(seed).permutation(len(parts))
+    for count, index in enumerate(order):
+        name, text = parts[int(index)]
+        sites.write_csv(folder / "exports" / name, text)
+        if count % 3 == 0:
+            audit(folder)
+    audit(folder)
+    assert content(folder) == reference
+
+
+def test_a_second_audit_changes_nothing(
+    record: sites.Plant, reference: list[str], tmp_path: Path
+) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    audit(folder)
+    again = audit(folder)
+    assert (again.files_new, again.files_skipped) == (0, 1)
+    assert (again.steps_new, again.steps_changed, again.steps_withdrawn) == (0, 0, 0)
+    assert content(folder) == reference
+
+
+def test_both_databases_hold_the_same_content(
+    record: sites.Plant, reference: list[str], tmp_path: Path, store_url: str
+) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    audit(folder, store_url)
+    assert content(folder, store_url) == reference
+
+
+def test_two_cores_give_what_one_gives(
+    record: sites.Plant, reference: list[str], tmp_path: Path
+) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    with opened(folder) as store:
+        nightly.run(open_site(folder, {}), store, now=NOW, cores=2)
+    assert content(folder) == reference
+
+
+def test_an_audit_cut_off_in_the_middle_is_completed_by_the_next(
+    record: sites.Plant,
+    reference: list[str],
+    tmp_path: Path,
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    whole = nightly.audit_loop
+    calls: list[str] = []
+
+    def cut_off(work: nightly.LoopWork) -> object:
+        calls.append(work.loop.tag)
+        if len(calls) == 2:
+            raise KeyboardInterrupt
+        return whole(work)
+
+    with monkeypatch.context() as patch:
+        patch.setattr(nightly, "audit_loop", cut_off)
+        with pytest.raises(KeyboardInterrupt):
+            audit(folder)
+    assert content(folder) != reference
+    audit(folder)
+    assert content(folder) == reference
+
+
+def test_new_content_of_a_path_replaces_the_old(
+    record: sites.Plant, reference: list[str], tmp_path: Path
+) -> None:
+    folder = lay(tmp_path)
+    wrong = plant(seed=8)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(wrong))
+    audit(folder)
+    assert content(folder) != reference
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record) + "\n")
+    report = audit(folder)
+    assert report.steps_withdrawn > 0
+    assert content(folder) == reference
+
+
+def measured(lines: list[str], tag: str) -> list[Mapping[str, object]]:
+    """The measurements of one loop's steps out of the canonical content."""
+    found = [json.loads(line) for line in lines]
+    return [entry for entry in found if entry.get("kind") == "step" and entry.get("tag") == tag]
+
+
+def ideal(levels: tuple[float, float], scan_s: float = 0.5) -> sites.Plant:
+    t_s: NDArray[np.float64] = np.arange(0, 900, scan_s)
+    sp, pv = sites.follow(t_s, [(200.0, levels[1])], levels[0], 0.5, 0.35, 2.0)
+    return sites.Plant(t_s, {"F101.PV": pv, "F101.SP": sp})
+
+
+def test_nights_asked_for_are_published_each_as_of_its_day(tmp_path: Path) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(plant(hours=3)))
+    report = audit(folder, nights=(date(2026, 3, 1), date(2026, 3, 3)))
+    assert report.nights == (date(2026, 3, 1), date(2026, 3, 2), date(2026, 3, 3))
