@@ -8,12 +8,14 @@ from __future__ import annotations
 
 import bz2
 import gzip
+import json
 import lzma
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
-from typing import cast
+from typing import Any, cast
 
 import numpy as np
 import pyarrow as pa
@@ -21,7 +23,14 @@ import pyarrow.parquet as pq
 import zstandard
 from numpy.typing import NDArray
 
+from audit import nightly
+from audit.run_report import RunReport
+from audit.site import open_site
+from audit.store import Store, open_store
+from audit.store.dump import dump
+
 START = datetime(2026, 3, 1, 6, 0, tzinfo=UTC)
+NOW = datetime(2026, 3, 3, 6, 0, tzinfo=UTC)
 
 
 @dataclass(frozen=True, eq=False)
@@ -174,3 +183,34 @@ def follow(
         )
         held = value
     return sp, pv
+
+
+def audit(
+    folder: Path, url: str | None = None, now: datetime = NOW, **options: object
+) -> RunReport:
+    """Run one nightly audit of a site's folder; the store is upgraded first."""
+    site = open_site(folder, {} if url is None else {"LOOPASSAY_STORE_URL": url})
+    with opened(folder, url) as store:
+        return nightly.run(site, store, now=now, cores=1, **options)  # type: ignore[arg-type]
+
+
+@contextmanager
+def opened(folder: Path, url: str | None = None) -> Iterator[Store]:
+    store = open_store(url or f"sqlite:///{folder / 'site.db'}")
+    try:
+        store.upgrade()
+        yield store
+    finally:
+        store.close()
+
+
+def content(folder: Path, url: str | None = None) -> list[str]:
+    """The store's canonical content."""
+    with opened(folder, url) as store, store.read() as session:
+        return list(dump(session))
+
+
+def steps_of(lines: Sequence[str], tag: str) -> list[Mapping[str, Any]]:
+    """One loop's current steps out of the canonical content, by time."""
+    found = [json.loads(line) for line in lines]
+    return [line["step"] for line in found if "step" in line and line["step"]["tag"] == tag]

@@ -2,24 +2,16 @@
 
 from __future__ import annotations
 
-import json
-from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
-from datetime import UTC, date, datetime
+from datetime import date
 from pathlib import Path
 
 import numpy as np
 import pytest
-from numpy.typing import NDArray
 
 import sites
 from audit import nightly
-from audit.run_report import RunReport
 from audit.site import open_site
-from audit.store import Store, open_store
-from audit.store.dump import dump
-
-NOW = datetime(2026, 3, 3, 6, 0, tzinfo=UTC)
+from sites import NOW, audit, content, opened
 
 LOOPS = (
     "tag,process_unit,service,kind,pv,sp,output,mode,eu,range_low,range_high,auto_modes,"
@@ -59,31 +51,6 @@ def plant(hours: float = 3.0, scan_s: float = 2.0, seed: int = 7) -> sites.Plant
             "T102.SP": warm_sp,
         },
     )
-
-
-def audit(
-    folder: Path, url: str | None = None, now: datetime = NOW, **options: object
-) -> RunReport:
-    """Run one nightly audit of a site's folder; the store is upgraded first."""
-    site = open_site(folder, {} if url is None else {"LOOPASSAY_STORE_URL": url})
-    with opened(folder, url) as store:
-        return nightly.run(site, store, now=now, cores=1, **options)  # type: ignore[arg-type]
-
-
-@contextmanager
-def opened(folder: Path, url: str | None = None) -> Iterator[Store]:
-    store = open_store(url or f"sqlite:///{folder / 'site.db'}")
-    try:
-        store.upgrade()
-        yield store
-    finally:
-        store.close()
-
-
-def content(folder: Path, url: str | None = None) -> list[str]:
-    """The store's canonical content."""
-    with opened(folder, url) as store, store.read() as session:
-        return list(dump(session))
 
 
 def lay(folder: Path, exports: str = sites.WIDE) -> Path:
@@ -239,18 +206,6 @@ def test_new_content_of_a_path_replaces_the_old(
     report = audit(folder)
     assert report.steps_withdrawn > 0
     assert content(folder) == reference
-
-
-def measured(lines: list[str], tag: str) -> list[Mapping[str, object]]:
-    """The measurements of one loop's steps out of the canonical content."""
-    found = [json.loads(line) for line in lines]
-    return [entry for entry in found if entry.get("kind") == "step" and entry.get("tag") == tag]
-
-
-def ideal(levels: tuple[float, float], scan_s: float = 0.5) -> sites.Plant:
-    t_s: NDArray[np.float64] = np.arange(0, 900, scan_s)
-    sp, pv = sites.follow(t_s, [(200.0, levels[1])], levels[0], 0.5, 0.35, 2.0)
-    return sites.Plant(t_s, {"F101.PV": pv, "F101.SP": sp})
 
 
 def test_nights_asked_for_are_published_each_as_of_its_day(tmp_path: Path) -> None:
