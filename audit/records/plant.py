@@ -1,0 +1,157 @@
+"""What a site says of itself: loops, specs, export sources, settings."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from datetime import datetime
+
+from audit.records.instants import SECOND_US
+from audit.records.words import Between, LoopKind, Quantity, Role
+
+
+@dataclass(frozen=True)
+class Windows:
+    """How far around a setpoint change the record is looked at."""
+
+    before_us: int
+    after_us: int
+    join_us: int
+
+    @property
+    def reach_us(self) -> int:
+        """How far from a border of the record a change can still depend on what lies across it."""
+        return self.before_us + self.after_us + 2 * self.join_us
+
+
+@dataclass(frozen=True)
+class Reading:
+    """How a site's samples are to be read between stamps, and which silence is a gap."""
+
+    pv_between: Between = Between.LINEAR
+    output_between: Between = Between.HOLD
+    silence_us: Mapping[Role, int] = field(
+        default_factory=lambda: {
+            Role.PV: 900 * SECOND_US,
+            Role.OUTPUT: 900 * SECOND_US,
+            Role.SP: 90_000 * SECOND_US,
+            Role.MODE: 90_000 * SECOND_US,
+        }
+    )
+
+
+@dataclass(frozen=True)
+class Loop:
+    """One row of the loop register. ``windows`` is the site's, with the row's own put in."""
+
+    tag: str
+    pv: str
+    sp: str
+    windows: Windows
+    process_unit: str = ""
+    service: str = ""
+    kind: LoopKind = LoopKind.OTHER
+    output: str | None = None
+    mode: str | None = None
+    eu: str = ""
+    range_low: float | None = None
+    range_high: float | None = None
+    output_low: float = 0.0
+    output_high: float = 100.0
+    auto_modes: tuple[str, ...] = ()
+    criticality: int = 3
+    cascade_primary: str | None = None
+    averaging: bool = False
+    notes: str = ""
+
+    @property
+    def span_eu(self) -> float | None:
+        """Width of the range, engineering units; None where the range is unknown."""
+        if self.range_low is None or self.range_high is None:
+            return None
+        return self.range_high - self.range_low
+
+    def tags(self) -> dict[Role, str]:
+        """The historian's tags of this loop by role, blank ones left out."""
+        named = {
+            Role.PV: self.pv,
+            Role.SP: self.sp,
+            Role.OUTPUT: self.output,
+            Role.MODE: self.mode,
+        }
+        return {role: tag for role, tag in named.items() if tag}
+
+
+@dataclass(frozen=True)
+class Spec:
+    """The limits of one loop from ``valid_from`` (UTC) on. Every limit is a maximum of the size."""
+
+    tag: str
+    valid_from: datetime
+    limits: Mapping[Quantity, float]
+    settling_band_pct: float = 2.0
+    min_step_eu: float | None = None
+    set_by: str = ""
+    reason: str = ""
+    version: int = 0
+    entered_at: datetime | None = None
+
+
+def spec_in_force(specs: Sequence[Spec], at: datetime) -> Spec | None:
+    """Of one loop's specs the one that holds at an instant; of equal dates the newest version."""
+    held = [spec for spec in specs if spec.valid_from <= at]
+    return max(held, key=lambda spec: (spec.valid_from, spec.version)) if held else None
+
+
+@dataclass(frozen=True)
+class ExportSource:
+    """One ``[[exports]]`` table of site.toml, checked; ``files`` is relative to ``folder``."""
+
+    name: str
+    files: str
+    folder: str = "."
+    format: str = "csv"
+    layout: str = "wide"
+    time: str = "timestamp"
+    time_format: str = "iso8601"
+    timezone: str = "UTC"
+    tag: str = "tag"
+    value: str = "value"
+    quality: str | None = None
+    quality_scheme: str = "words"
+    good: tuple[str, ...] = ("Good",)
+    uncertain_is_good: bool = False
+    reading: Reading = field(default_factory=Reading)
+    revision: str = ""
+    delimiter: str = ","
+    decimal: str = "."
+
+
+@dataclass(frozen=True)
+class StandingRule:
+    """``[standing]``: a loop is judged on its last ``steps`` usable steps of ``days`` days."""
+
+    steps: int = 10
+    days: int = 30
+    error_u_eu: float | None = None
+
+
+@dataclass(frozen=True)
+class MeasureSettings:
+    """What a measurement rests on beside the samples; all of it enters ``method_version``'s hash.
+
+    ``band_pct``: the spec's settling band, percent of the change. ``min_step_eu``: smaller changes
+    are set aside. ``span_eu``: width of the loop's range. ``error_u_eu``: standard uncertainty of
+    "ends at its setpoint" for a response that was cut; None: 0.5 % of the range, or without a
+    range no number of that kind.
+    """
+
+    band_pct: float = 2.0
+    min_step_eu: float | None = None
+    span_eu: float | None = None
+    error_u_eu: float | None = None
+    output_low: float = 0.0
+    output_high: float = 100.0
+    reading: Reading = field(default_factory=Reading)
+    before_us: int = 120 * SECOND_US
+    after_us: int = 3600 * SECOND_US
