@@ -71,6 +71,15 @@ class Loop:
             return None
         return self.range_high - self.range_low
 
+    @property
+    def output_limits(self) -> tuple[float, float]:
+        """Output at or below the first, at or above the second counts as saturated.
+
+        Within 0.1 % of the output's span of its end: a limit is seldom reached to the last digit.
+        """
+        margin = 0.001 * (self.output_high - self.output_low)
+        return self.output_low + margin, self.output_high - margin
+
     def tags(self) -> dict[Role, str]:
         """The historian's tags of this loop by role, blank ones left out."""
         named = {
