@@ -57,12 +57,9 @@ def bad_spans(samples: Samples) -> list[tuple[int, int]]:
     """
     bad = np.concatenate(([False], ~samples.good, [False]))
     firsts = np.flatnonzero(bad[1:] & ~bad[:-1])
-    stops = np.flatnonzero(~bad[1:] & bad[:-1])
-    last = len(samples) - 1
-    return [
-        (int(samples.t_us[first]), int(samples.t_us[min(stop, last)]))
-        for first, stop in zip(firsts, stops, strict=True)
-    ]
+    stops = np.minimum(np.flatnonzero(~bad[1:] & bad[:-1]), len(samples) - 1)
+    spans = np.column_stack((samples.t_us[firsts], samples.t_us[stops]))
+    return [(int(start), int(end)) for start, end in spans]
 
 
 def _words(modes: Iterable[str]) -> set[str]:
