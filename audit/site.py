@@ -23,9 +23,9 @@ class Site:
 def open_site(path: Path, env: Mapping[str, str]) -> Site:
     """The site whose site.toml, or folder, is ``path``.
 
-    Raises FilesWrong with the faults of site.toml, loops.csv and specs.csv together. Where the first
-    cannot say what the others are called, they are looked for under their default names; one that
-    is not there is then no fault of its own.
+    Raises FilesWrong with the faults of site.toml, loops.csv and specs.csv together. Where the
+    first cannot say what the others are called, they are looked for under their default names; one
+    that is not there is then no fault of its own.
     """
     settings = config.examine(path, env)
     found, faults = register.examine(
