@@ -1,1 +1,1 @@
-"""TEMP."""
+"""One file a revision of the schema."""

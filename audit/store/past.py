@@ -1,0 +1,287 @@
+"""What the store keeps of loops' pasts: steps, curves, edges of the record, days."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Collection, Iterator, Sequence
+from datetime import date
+from typing import Any, TypeVar
+
+from sqlalchemy import RowMapping, and_, func, or_, select
+from sqlalchemy.orm import Session
+
+from audit.records import (
+    ChangeKind,
+    DayRecord,
+    KeptDay,
+    Outcome,
+    PastStep,
+    Quantity,
+    Reason,
+    Record,
+    Response,
+    Step,
+    Verdict,
+)
+from audit.store.codec import decode
+from audit.store.entries import StoredStep
+from audit.store.payload import change_of, measured_of, reasons_of
+from audit.store.tables import (
+    CurveRow,
+    DayRow,
+    EdgeRow,
+    LoopRow,
+    MeasurementRow,
+    SpecVersionRow,
+    VerdictRow,
+)
+
+T = TypeVar("T")
+
+_AT_ONCE = 500
+_SAME_CURVE = and_(
+    CurveRow.loop_id == MeasurementRow.loop_id,
+    CurveRow.at_us == MeasurementRow.at_us,
+    CurveRow.number == MeasurementRow.curve_number,
+)
+_CURRENT = MeasurementRow.superseded_at.is_(None)
+
+
+def kept(s: Session, tag: str, from_us: int, to_us: int) -> list[Record]:
+    """The current curves and the edges of a loop whose stamps overlap a span, by first stamp."""
+    curves = (
+        select(CurveRow.from_us, CurveRow.data)
+        .join_from(CurveRow, MeasurementRow, _SAME_CURVE)
+        .where(
+            CurveRow.loop_id == _loop_id(tag),
+            CurveRow.to_us >= from_us,
+            CurveRow.from_us <= to_us,
+            _CURRENT,
+        )
+    )
+    slices = select(EdgeRow.from_us, EdgeRow.data).where(
+        EdgeRow.loop_id == _loop_id(tag), EdgeRow.to_us >= from_us, EdgeRow.from_us <= to_us
+    )
+    found = [*s.execute(curves), *s.execute(slices)]
+    return [decode(data) for _, data in sorted(found, key=lambda row: row[0])]
+
+
+def edges(s: Session, tag: str) -> list[tuple[int, str]]:
+    """The borders (microseconds, side) of a loop at which a slice is kept."""
+    query = select(EdgeRow.border_us, EdgeRow.side).where(EdgeRow.loop_id == _loop_id(tag))
+    return sorted((row.border_us, row.side) for row in s.execute(query))
+
+
+def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
+    """The current steps of a loop that rest on samples in a span, by time."""
+    query = (
+        select(
+            MeasurementRow.at_us,
+            MeasurementRow.depends_from_us,
+            MeasurementRow.depends_to_us,
+            MeasurementRow.window_end_us,
+        )
+        .where(
+            MeasurementRow.loop_id == _loop_id(tag),
+            _CURRENT,
+            or_(MeasurementRow.depends_to_us.is_(None), MeasurementRow.depends_to_us >= from_us),
+            or_(MeasurementRow.depends_from_us.is_(None), MeasurementRow.depends_from_us <= to_us),
+        )
+        .order_by(MeasurementRow.at_us)
+    )
+    return [StoredStep(*row) for row in s.execute(query)]
+
+
+def curve(s: Session, tag: str, at_us: int) -> Record | None:
+    """The samples a current step was measured from; None where there is no such step."""
+    data = s.execute(
+        select(CurveRow.data)
+        .join_from(CurveRow, MeasurementRow, _SAME_CURVE)
+        .where(MeasurementRow.loop_id == _loop_id(tag), MeasurementRow.at_us == at_us, _CURRENT)
+    ).scalar()
+    return None if data is None else decode(data)
+
+
+def past_steps(s: Session, tag: str, until_us: int | None = None) -> list[PastStep]:
+    """A loop's current steps whose window ended before ``until_us`` (None: all), by time."""
+    return past_steps_many(s, [tag], until_us)[tag]
+
+
+def past_steps_many(
+    s: Session, tags: Collection[str], until_us: int | None, since_us: int | None = None
+) -> dict[str, list[PastStep]]:
+    """As ``past_steps`` for many loops, each tag with a list; not before ``since_us``."""
+    query = select(
+        LoopRow.tag,
+        MeasurementRow.at_us,
+        MeasurementRow.window_end_us,
+        MeasurementRow.sp_from,
+        MeasurementRow.sp_to,
+        MeasurementRow.kind,
+        MeasurementRow.usable,
+        MeasurementRow.set_aside,
+        MeasurementRow.measured,
+        MeasurementRow.spec_band_pct,
+    ).join_from(LoopRow, MeasurementRow, LoopRow.id == MeasurementRow.loop_id)
+    query = query.where(_CURRENT)
+    if until_us is not None:
+        query = query.where(MeasurementRow.window_end_us < until_us)
+    if since_us is not None:
+        query = query.where(MeasurementRow.at_us >= since_us)
+    query = query.order_by(MeasurementRow.loop_id, MeasurementRow.at_us)
+    return _by_tag(s, tags, query, _past_step_of)
+
+
+def _past_step_of(row: Sequence[Any]) -> PastStep:
+    _, at_us, window_end_us, sp_from, sp_to, kind, usable, set_aside, measured, band = row
+    return PastStep(
+        at_us=at_us,
+        window_end_us=window_end_us,
+        sp_from=sp_from,
+        sp_to=sp_to,
+        kind=ChangeKind(kind),
+        usable=usable,
+        set_aside=reasons_of(set_aside),
+        measured=measured_of(measured),
+        band_pct=band,
+    )
+
+
+def _by_tag(
+    s: Session, tags: Collection[str], query: Any, record_of: Callable[[Sequence[Any]], T]
+) -> dict[str, list[T]]:
+    """Runs a query whose first column is the tag for some tags, a few hundred at once."""
+    found: dict[str, list[T]] = {tag: [] for tag in tags}
+    for some in _portions(list(found)):
+        for row in s.execute(query.where(LoopRow.tag.in_(some))):
+            found[row[0]].append(record_of(row))
+    return found
+
+
+def _portions(items: Sequence[str]) -> Iterator[Sequence[str]]:
+    for first in range(0, len(items), _AT_ONCE):
+        yield items[first : first + _AT_ONCE]
+
+
+def history(
+    s: Session, tag: str, from_us: int | None = None, to_us: int | None = None
+) -> list[Step]:
+    """A loop's current steps with their verdicts, from_us <= at <= to_us, by time."""
+    span = [MeasurementRow.loop_id == _loop_id(tag), _CURRENT]
+    if from_us is not None:
+        span.append(MeasurementRow.at_us >= from_us)
+    if to_us is not None:
+        span.append(MeasurementRow.at_us <= to_us)
+    verdicts: dict[int, dict[Quantity, Verdict]] = {}
+    for row in s.execute(_verdicts_query().where(*span)).mappings():
+        verdicts.setdefault(row["at_us"], {})[Quantity(row["quantity"])] = _verdict_of(row)
+    rows = s.execute(
+        select(*MeasurementRow.__table__.columns).where(*span).order_by(MeasurementRow.at_us)
+    ).mappings()
+    return [_step_of(row, verdicts.get(row["at_us"], {})) for row in rows]
+
+
+def _verdicts_query() -> Any:
+    return (
+        select(*VerdictRow.__table__.columns, SpecVersionRow.valid_from)
+        .join_from(
+            VerdictRow,
+            MeasurementRow,
+            and_(
+                VerdictRow.loop_id == MeasurementRow.loop_id,
+                VerdictRow.at_us == MeasurementRow.at_us,
+                VerdictRow.number == MeasurementRow.number,
+            ),
+        )
+        .join(
+            SpecVersionRow,
+            and_(
+                VerdictRow.loop_id == SpecVersionRow.loop_id,
+                VerdictRow.spec_version == SpecVersionRow.version,
+            ),
+        )
+    )
+
+
+def _verdict_of(row: RowMapping) -> Verdict:
+    return Verdict(
+        limit=row["limit_value"],
+        outcome=Outcome(row["outcome"]),
+        spec_valid_from=row["valid_from"],
+        spec_version=row["spec_version"],
+        why=None if row["why"] is None else Reason(row["why"]),
+    )
+
+
+def _step_of(row: RowMapping, verdicts: dict[Quantity, Verdict]) -> Step:
+    response = Response(
+        measured=measured_of(row["measured"]),
+        method_version=row["method_version"],
+        spec_band_pct=row["spec_band_pct"],
+        y0_eu=row["y0_eu"],
+        y_end_eu=row["y_end_eu"],
+        noise_eu=row["noise_eu"],
+    )
+    return Step(
+        change=change_of(row),
+        response=response,
+        verdicts=verdicts,
+        usable=row["usable"],
+        set_aside=reasons_of(row["set_aside"]),
+    )
+
+
+def step_counts(s: Session) -> dict[str, int]:
+    """How many steps are current, how many of them usable, and how often steps were measured."""
+    every = s.execute(select(func.count()).select_from(MeasurementRow)).scalar_one()
+    query = select(MeasurementRow.usable, func.count()).where(_CURRENT)
+    current = {row[0]: row[1] for row in s.execute(query.group_by(MeasurementRow.usable))}
+    return {
+        "current": sum(current.values()),
+        "usable": current.get(True, 0),
+        "measurements": every,
+    }
+
+
+def day_records(s: Session, tag: str, from_day: date, to_day: date) -> list[DayRecord]:
+    """A loop's days from one to another, both inclusive, by day."""
+    return day_records_many(s, [tag], from_day, to_day)[tag]
+
+
+def day_records_many(
+    s: Session, tags: Collection[str], from_day: date, to_day: date
+) -> dict[str, list[DayRecord]]:
+    """As ``day_records`` for many loops, each tag with a list."""
+    query = _days_query(from_day, to_day).order_by(DayRow.loop_id, DayRow.day)
+    return _by_tag(s, tags, query, _day_of)
+
+
+def kept_days(s: Session, tag: str, from_day: date, to_day: date) -> list[KeptDay]:
+    """As ``day_records``, with the runs each was counted from."""
+    query = _days_query(from_day, to_day).add_columns(DayRow.runs).where(LoopRow.tag == tag)
+    return [KeptDay(_day_of(row), row.runs) for row in s.execute(query.order_by(DayRow.day))]
+
+
+def _days_query(from_day: date, to_day: date) -> Any:
+    return (
+        select(
+            LoopRow.tag,
+            DayRow.day,
+            DayRow.span_us,
+            DayRow.auto_us,
+            DayRow.mode_us,
+            DayRow.saturated_us,
+            DayRow.output_us,
+            DayRow.pv_bad_us,
+        )
+        .join_from(LoopRow, DayRow, LoopRow.id == DayRow.loop_id)
+        .where(DayRow.day >= from_day, DayRow.day <= to_day)
+    )
+
+
+def _day_of(row: Sequence[Any]) -> DayRecord:
+    _, day, span_us, auto_us, mode_us, saturated_us, output_us, pv_bad_us, *_ = row
+    return DayRecord(day, span_us, auto_us, mode_us, saturated_us, output_us, pv_bad_us)
+
+
+def _loop_id(tag: str) -> Any:
+    return select(LoopRow.id).where(LoopRow.tag == tag).scalar_subquery()

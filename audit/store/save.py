@@ -1,0 +1,240 @@
+"""What one audit of a loop found -> its rows, in one transaction and a handful of statements."""
+
+from __future__ import annotations
+
+import hashlib
+from collections import defaultdict
+from collections.abc import Sequence
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any
+
+from sqlalchemy import delete, insert, select, tuple_, update
+from sqlalchemy.orm import Session
+
+from audit.errors import UnknownLoop
+from audit.records import LoopResult, MeasuredStep, Record
+from audit.store.codec import Packed, pack
+from audit.store.engine import compact_json
+from audit.store.entries import SavedLoop
+from audit.store.payload import step_values
+from audit.store.tables import (
+    CurveRow,
+    DayRow,
+    EdgeRow,
+    LoopRow,
+    MeasurementRow,
+    VerdictRow,
+)
+
+_AT_ONCE = 500
+
+
+@dataclass
+class _Past:
+    """What is stored of one step: numbers used, its curves, and its current measurement."""
+
+    number: int = 0
+    curve_number: int = 0
+    current: int | None = None
+    fingerprint: bytes = b""
+    curves: dict[bytes, int] | None = None
+
+
+def save_loop(s: Session, result: LoopResult, now: datetime) -> SavedLoop:
+    """Writes a loop's result. A step that equals the stored one, its curve included, is left alone;
+    one that differs gets a new measurement, the old one a ``superseded_at``; a withdrawn one only
+    that. Verdicts rest on a stored version of the loop's spec. Raises UnknownLoop.
+    """
+    loop_id = s.execute(select(LoopRow.id).where(LoopRow.tag == result.tag)).scalar()
+    if loop_id is None:
+        raise UnknownLoop(f"{result.tag} is no loop of the register")
+    stamps = [one.step.change.at_us for one in result.steps]
+    past = _past(s, loop_id, [*stamps, *result.withdrawn])
+    withdrawn = [at for at in result.withdrawn if past[at].current is not None]
+    fresh = _fresh(loop_id, result.steps, past, now)
+    changed = [row["at_us"] for row in fresh.measurements if past[row["at_us"]].current is not None]
+    _supersede(s, loop_id, [*withdrawn, *changed], now)
+    fresh.insert(s)
+    _replace_edges(s, loop_id, result)
+    _replace_days(s, loop_id, result)
+    return SavedLoop(len(fresh.measurements) - len(changed), len(changed), len(withdrawn))
+
+
+@dataclass
+class _Fresh:
+    """Rows to be added."""
+
+    curves: list[dict[str, Any]]
+    measurements: list[dict[str, Any]]
+    verdicts: list[dict[str, Any]]
+
+    def insert(self, s: Session) -> None:
+        if self.curves:
+            s.execute(insert(CurveRow), self.curves)
+        if self.measurements:
+            s.execute(insert(MeasurementRow), self.measurements)
+        if self.verdicts:
+            s.execute(insert(VerdictRow), self.verdicts)
+
+
+def _fresh(
+    loop_id: int, steps: Sequence[MeasuredStep], past: dict[int, _Past], now: datetime
+) -> _Fresh:
+    fresh = _Fresh([], [], [])
+    for one in steps:
+        packed = pack(one.curve)
+        values = step_values(one.step) | {
+            "depends_from_us": one.depends_from_us,
+            "depends_to_us": one.depends_to_us,
+        }
+        verdicts = _verdict_values(one)
+        fingerprint = _fingerprint(values, verdicts, packed)
+        known = past[values["at_us"]]
+        if known.current is not None and known.fingerprint == fingerprint:
+            continue
+        key = {"loop_id": loop_id, "at_us": values["at_us"], "number": known.number + 1}
+        curve_number = (known.curves or {}).get(packed.digest)
+        if curve_number is None:
+            curve_number = known.curve_number + 1
+            fresh.curves.append(_curve_values(key | {"number": curve_number}, one.curve, packed))
+        fresh.measurements.append(
+            values
+            | key
+            | {"curve_number": curve_number, "fingerprint": fingerprint, "measured_at": now}
+        )
+        fresh.verdicts += [verdict | key for verdict in verdicts]
+    return fresh
+
+
+def _past(s: Session, loop_id: int, stamps: Sequence[int]) -> dict[int, _Past]:
+    past: dict[int, _Past] = defaultdict(_Past)
+    for first in range(0, len(stamps), _AT_ONCE):
+        rows = s.execute(
+            select(
+                MeasurementRow.at_us,
+                MeasurementRow.number,
+                MeasurementRow.superseded_at,
+                MeasurementRow.fingerprint,
+                MeasurementRow.curve_number,
+                CurveRow.digest,
+            )
+            .join_from(MeasurementRow, CurveRow, _same_curve())
+            .where(
+                MeasurementRow.loop_id == loop_id,
+                MeasurementRow.at_us.in_(stamps[first : first + _AT_ONCE]),
+            )
+        )
+        for row in rows:
+            one = past[row.at_us]
+            one.number = max(one.number, row.number)
+            one.curve_number = max(one.curve_number, row.curve_number)
+            one.curves = (one.curves or {}) | {row.digest: row.curve_number}
+            if row.superseded_at is None:
+                one.current, one.fingerprint = row.number, row.fingerprint
+    return past
+
+
+def _same_curve() -> Any:
+    return (
+        (MeasurementRow.loop_id == CurveRow.loop_id)
+        & (MeasurementRow.at_us == CurveRow.at_us)
+        & (MeasurementRow.curve_number == CurveRow.number)
+    )
+
+
+def _supersede(s: Session, loop_id: int, stamps: Sequence[int], now: datetime) -> None:
+    for first in range(0, len(stamps), _AT_ONCE):
+        s.execute(
+            update(MeasurementRow)
+            .where(
+                MeasurementRow.loop_id == loop_id,
+                MeasurementRow.at_us.in_(stamps[first : first + _AT_ONCE]),
+                MeasurementRow.superseded_at.is_(None),
+            )
+            .values(superseded_at=now)
+            .execution_options(synchronize_session=False)
+        )
+
+
+def _verdict_values(one: MeasuredStep) -> list[dict[str, Any]]:
+    return [
+        {
+            "quantity": quantity.value,
+            "spec_version": verdict.spec_version,
+            "limit_value": verdict.limit,
+            "outcome": verdict.outcome.value,
+            "why": None if verdict.why is None else verdict.why.value,
+        }
+        for quantity, verdict in sorted(one.step.verdicts.items())
+    ]
+
+
+def _fingerprint(values: dict[str, Any], verdicts: list[dict[str, Any]], packed: Packed) -> bytes:
+    content = compact_json([values, verdicts]).encode() + packed.digest
+    return hashlib.blake2b(content, digest_size=16).digest()
+
+
+def _curve_values(key: dict[str, Any], curve: Record, packed: Packed) -> dict[str, Any]:
+    from_us, to_us = _span(curve, key["at_us"])
+    return key | {"from_us": from_us, "to_us": to_us, "digest": packed.digest, "data": packed.data}
+
+
+def _span(record: Record, otherwise_us: int) -> tuple[int, int]:
+    """First and last stamp of a record; of one without samples the given instant."""
+    filled = [samples.t_us for samples in record.signals.values() if len(samples)]
+    first = min((int(stamps[0]) for stamps in filled), default=otherwise_us)
+    last = max((int(stamps[-1]) for stamps in filled), default=otherwise_us)
+    return first, last
+
+
+def _replace_edges(s: Session, loop_id: int, result: LoopResult) -> None:
+    rows = []
+    for edge in result.edges:
+        from_us, to_us = _span(edge.record, edge.border_us)
+        rows.append(
+            {
+                "loop_id": loop_id,
+                "border_us": edge.border_us,
+                "side": edge.side,
+                "from_us": from_us,
+                "to_us": to_us,
+                "data": pack(edge.record).data,
+            }
+        )
+    gone = [(row["border_us"], row["side"]) for row in rows] + list(result.dropped_edges)
+    for first in range(0, len(gone), _AT_ONCE):
+        s.execute(
+            delete(EdgeRow).where(
+                EdgeRow.loop_id == loop_id,
+                tuple_(EdgeRow.border_us, EdgeRow.side).in_(gone[first : first + _AT_ONCE]),
+            )
+        )
+    if rows:
+        s.execute(insert(EdgeRow), rows)
+
+
+def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
+    rows = [
+        {
+            "loop_id": loop_id,
+            "day": kept.record.day,
+            "span_us": kept.record.span_us,
+            "auto_us": kept.record.auto_us,
+            "mode_us": kept.record.mode_us,
+            "saturated_us": kept.record.saturated_us,
+            "output_us": kept.record.output_us,
+            "pv_bad_us": kept.record.pv_bad_us,
+            "runs": kept.runs,
+        }
+        for kept in result.days
+    ]
+    days = [row["day"] for row in rows]
+    for first in range(0, len(days), _AT_ONCE):
+        s.execute(
+            delete(DayRow).where(
+                DayRow.loop_id == loop_id, DayRow.day.in_(days[first : first + _AT_ONCE])
+            )
+        )
+    if rows:
+        s.execute(insert(DayRow), rows)

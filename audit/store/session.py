@@ -1,0 +1,155 @@
+"""Store URL -> ``Store``: short transactions to read and to write in, and the lease for writing.
+
+Opening a store changes nothing in it; only ``Store.upgrade`` touches the schema.
+"""
+
+from __future__ import annotations
+
+import sqlite3
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
+from pathlib import Path
+from threading import Event, Thread
+
+from sqlalchemy import Connection
+from sqlalchemy.exc import OperationalError
+from sqlalchemy.orm import Session
+
+from audit.errors import StoreUnready
+from audit.store import lease as lease_row
+from audit.store import schema as schema_of
+from audit.store.engine import Purpose, checked_url, connected, make_engine, sqlite_file
+from audit.store.entries import Lease, Schema
+
+__all__ = ["Lease", "Schema", "Store", "backup", "open_store", "take_lease"]
+
+
+class Store:
+    """One site's store. ``close`` it, or use it as a context manager."""
+
+    def __init__(self, url: str) -> None:
+        self._url = checked_url(url)
+        self._engine = make_engine(self._url)
+
+    @property
+    def url(self) -> str:
+        """The store's URL, a password in it hidden."""
+        return self._url.render_as_string()
+
+    def close(self) -> None:
+        """Closes all connections."""
+        self._engine.dispose()
+
+    def __enter__(self) -> Store:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def schema(self) -> Schema:
+        """The schema's revision and the one this program needs; makes no file where none is."""
+        file = sqlite_file(self._url)
+        if file is not None and not file.exists():
+            return Schema(None, schema_of.head())
+        with connected(self._engine, Purpose.READ) as connection:
+            return schema_of.read_schema(connection)
+
+    def require_current(self) -> None:
+        """Raises StoreUnready, with what to do, unless the schema is this program's."""
+        schema_of.require(self.schema())
+
+    def upgrade(self) -> None:
+        """Brings the schema up to this program's revision, all or nothing.
+
+        Raises StoreUnready for a schema newer than this program.
+        """
+        with self._writing(Purpose.RESHAPE) as connection:
+            schema_of.upgrade(connection)
+
+    @contextmanager
+    def read(self) -> Iterator[Session]:
+        """One consistent snapshot; writing in it fails."""
+        with (
+            connected(self._engine, Purpose.READ) as connection,
+            Session(connection, autoflush=False) as session,
+        ):
+            yield session
+
+    @contextmanager
+    def write(self, lease: Lease) -> Iterator[Session]:
+        """One short transaction, committed at its end; raises StoreUnready if the lease is lost."""
+        with (
+            self._writing() as connection,
+            Session(connection, autoflush=False) as session,
+        ):
+            lease_row.prove(session, lease)
+            yield session
+
+    @contextmanager
+    def _writing(self, purpose: Purpose = Purpose.WRITE) -> Iterator[Connection]:
+        with connected(self._engine, purpose) as connection:
+            try:
+                transaction = connection.begin()
+            except OperationalError as error:
+                raise StoreUnready(
+                    f"the store {self.url} is busy: {error.orig}", "try again when it is free"
+                ) from error
+            with transaction:
+                yield connection
+
+    def _renew(self, lease: Lease) -> bool:
+        with self._writing() as connection:
+            return lease_row.renew(connection, lease)
+
+
+def open_store(url: str) -> Store:
+    """A store by its URL. Opens no connection yet; raises StoreUnready for an unusable URL."""
+    return Store(url)
+
+
+@contextmanager
+def take_lease(store: Store, holder: str, ttl_s: float = 90.0) -> Iterator[Lease]:
+    """Holds the right to write while the block runs.
+
+    ``holder`` is what others are told (who, where). A thread puts off the end of the lease every
+    third of ``ttl_s`` seconds; a holder that dies is replaced after ``ttl_s``. Raises StoreUnready,
+    naming the holder, if another run holds it.
+    """
+    with store._writing() as connection:
+        lease = lease_row.claim(connection, holder, ttl_s)
+    ended = Event()
+    beat = Thread(target=_beat, args=(store, lease, ended), name="store-lease", daemon=True)
+    beat.start()
+    try:
+        yield lease
+    finally:
+        ended.set()
+        beat.join()
+        with store._writing() as connection:
+            lease_row.release(connection, lease)
+
+
+def _beat(store: Store, lease: Lease, ended: Event) -> None:
+    while not ended.wait(lease.ttl_s / 3):
+        try:
+            held = store._renew(lease)
+        except (StoreUnready, OperationalError):
+            continue  # the next beat tries again; each write proves the lease for itself
+        if not held:
+            return
+
+
+def backup(store: Store, path: Path) -> None:
+    """A copy of an SQLite store while it is in use, by SQLite's online backup.
+
+    Raises StoreUnready if ``path`` is there already or the store is not on SQLite.
+    """
+    file = sqlite_file(store._url)
+    if file is None:
+        raise StoreUnready("only an SQLite store is copied this way", "use pg_dump for PostgreSQL")
+    if path.exists():
+        raise StoreUnready(f"{path} is there already", "name a file that is not there yet")
+    if not file.exists():
+        raise StoreUnready(f"there is no store at {file} yet", "run: loopassay store upgrade")
+    with closing(sqlite3.connect(file)) as source, closing(sqlite3.connect(path)) as copy:
+        source.backup(copy)
