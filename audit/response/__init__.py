@@ -1,1 +1,12 @@
-"""TEMP."""
+"""Measure one setpoint change: from the record around it to a value for every quantity.
+
+``measure`` is the direct way, from the samples. The room, in the order of the data: ``curve``
+(made ready), ``noise``, ``levels`` and ``ends`` (y0, final level), ``shape`` over ``localfit``
+(crossings, extrema), ``settling``, ``transient`` (the quantities of the shape), ``integral``, ``output``,
+``screening`` (what is spoiled and why), ``uncertainty``, ``direct`` (strings them together).
+"""
+
+from audit.response.constants import METHOD_VERSION, method_version
+from audit.response.direct import measure
+
+__all__ = ["METHOD_VERSION", "measure", "method_version"]

@@ -1,0 +1,88 @@
+"""The numbers the direct way rests on, in one place; their hash is part of the method's version.
+
+In: nothing. Out: ``CONSTANTS`` and ``METHOD_VERSION``.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from dataclasses import asdict, dataclass
+
+from audit.records import MeasureSettings
+
+
+@dataclass(frozen=True)
+class Constants:
+    """Parameters of the direct way. ``sd``: standard deviation. ``rise``: the rise time."""
+
+    cover_z: float = 1.959964
+    """Normal quantile of a 95 % interval with equal tails."""
+    draws: int = 200
+    """Random draws for the settling time's interval."""
+    spike_sd: float = 8.0
+    spike_share: float = 0.05
+    """A one-sample spike stands out by this many sd and this share of the change."""
+    hampel_clip: float = 3.5
+    """A level's outlying samples are drawn in to this many robust sd."""
+    fill_ratio: float = 3.0
+    """A silence longer than this many typical intervals is drawn as the signal runs between."""
+    fill_points: int = 8
+    eta_gain: float = 20.0
+    eta_cap: float = 0.35
+    """Half-width of the local fit in rise times: (eta_gain sd / sqrt(samples a rise))^(1/4.5)."""
+    eta_peak: float = 1.4
+    eta_peak_cap: float = 0.5
+    """At an extremum the fit is wider by this factor, up to this cap."""
+    least_half_samples: float = 2.2
+    turn_sd: float = 3.0
+    """A turn of the smoothed curve counts beyond this many of its sd."""
+    coarse_sd: float = 0.03
+    """Share of the change the noise is brought down to for a first look."""
+    grid_points: int = 400
+    settle_band: float = 0.05
+    settle_sd: float = 5.0
+    band_sd: float = 4.0
+    """Settled at all: inside 5 % or 5 sd of the smoothed curve for the dwell."""
+    dwell_samples: int = 10
+    drift_share: float = 0.02
+    drift_sd: float = 3.5
+    """Drifting before: beyond 2 % of the change over the window and beyond 3.5 standard errors."""
+    moving_share: float = 0.05
+    moving_sd: float = 6.0
+    """Still moving before: slow excursions beyond 5 % of the change and 6 sd."""
+    no_response_share: float = 0.2
+    no_response_u: float = 4.0
+    sparse_rise: float = 4.0
+    """Fewer samples a rise: the rise time is bounded only."""
+    compressed_share: float = 0.05
+    compressed_band: float = 2.5
+    """Deadband beyond 5 % of the change, or beyond the band / 2.5 for settling."""
+    saturated_share: float = 0.1
+    saturated_tolerance: float = 0.0005
+    """Saturated: within 0.05 % of the output's range of its limit; material from 10 % of the
+    time to settling."""
+    default_error_share: float = 0.005
+    """Standard uncertainty of "ends at its setpoint", of the range."""
+    peak_u: float = 2.5
+    """A peak is one beyond this many of its standard uncertainties."""
+    oscillation_share: float = 0.02
+    oscillation_sd: float = 3.0
+    oscillation_crossings: int = 8
+    oscillation_regularity: float = 1.0
+    oscillation_ratio: float = 2.0
+
+
+CONSTANTS = Constants()
+
+
+def _digest(values: object) -> str:
+    return hashlib.sha256(json.dumps(values, sort_keys=True).encode()).hexdigest()[:8]
+
+
+METHOD_VERSION = f"direct-1-{_digest(asdict(CONSTANTS))}"
+
+
+def method_version(settings: MeasureSettings) -> str:
+    """Code, its parameters and the settings a response was measured with."""
+    return f"{METHOD_VERSION}-{_digest(asdict(settings))}"

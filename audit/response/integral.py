@@ -1,0 +1,63 @@
+"""Integral of the absolute control error, trapezoid on the real stamps, noise part taken off.
+
+In: a ``Curve``, the setpoint's moves. Out: IAE in parts of the change x s, with its uncertainty.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy.special import erf
+
+from audit.response.curve import Curve
+from audit.response.localfit import Array
+from audit.response.noise import Noise
+from audit.response.shape import boxcar
+
+
+def absolute_error(
+    curve: Curve, noise: Noise, moves: tuple[tuple[float, float], ...], end_s: float
+) -> tuple[float, float]:
+    """Integral of |sp - y| over [0, end_s] and its standard uncertainty.
+
+    ``moves``: (s from t0, setpoint after it in parts of the change), the first at 0. The
+    setpoint holds between its moves; the process variable runs as the curve says.
+    """
+    at = np.array([t for t, _ in moves])
+    held = np.array([value for _, value in moves])
+    cuts = at[(at > 0) & (at < end_s)]
+    inside = curve.ft[(curve.ft > 0) & (curve.ft < end_s)]
+    grid = np.unique(np.concatenate([[0.0], inside, cuts, [end_s]]))
+    sp = held[np.searchsorted(at, grid[:-1], "right") - 1]
+    start, stop = _sides(curve, grid)
+    width = np.diff(grid)
+    left, right = start - sp, stop - sp
+    plain = float(width @ (0.5 * (np.abs(left) + np.abs(right))))
+    excess = _folded(0.5 * (left + right), noise)
+    value = max(plain - float(width @ excess), 0.0)
+    step = end_s / max(len(inside), 1)
+    random = noise.sd * np.sqrt(noise.inflation * end_s * step)
+    doubt = 0.5 * float(width @ excess) + noise.coarse * np.sqrt(end_s * step)
+    return value, float(np.hypot(random, doubt))
+
+
+def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
+    """The process variable at the start and at the end of each interval of the grid."""
+    if curve.hold:
+        place = np.searchsorted(curve.ft, grid[:-1], "right") - 1
+        value = curve.fv[np.clip(place, 0, len(curve.fv) - 1)]
+        return value, value
+    value = np.interp(grid, curve.ft, curve.fv)
+    return value[:-1], value[1:]
+
+
+def _folded(error: Array, noise: Noise) -> Array:
+    """What noise adds to the mean of |error| (folded normal), its own error smoothed first."""
+    if noise.sd <= 0:
+        return np.zeros(len(error))
+    smooth = boxcar(error, 9)
+    size = np.abs(smooth)
+    size = np.where(size < noise.sd, np.abs(boxcar(error, 41)), size)
+    ratio = size / noise.sd
+    near = noise.sd * np.sqrt(2.0 / np.pi) * np.exp(-0.5 * ratio**2)
+    added: Array = near + size * erf(ratio / np.sqrt(2.0)) - size
+    return np.maximum(added, 0.0)

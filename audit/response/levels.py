@@ -1,0 +1,133 @@
+"""The level before the change and the level it ends at, each with its uncertainty and drift.
+
+In: a ``Curve`` and its ``Noise``. Out: ``Level`` values in parts of the change.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from audit.response.constants import CONSTANTS
+from audit.response.curve import Curve
+from audit.response.localfit import Array
+from audit.response.noise import ALIKE, Noise
+
+TAILS = (0.5, 0.35, 0.25, 0.15, 0.08)
+"""Shares of the time to the end that are tried as the final stretch."""
+
+
+@dataclass(frozen=True)
+class Level:
+    """A level, its standard uncertainty, and what moved while it was taken.
+
+    ``chance``: the part of u that is noise and recording. ``drift``: change over the stretch
+    beyond chance. ``samples``: how many lie inside.
+    ``moving``: drifts or swings too much to be a level.
+    """
+
+    value: float
+    u: float
+    chance: float
+    drift: float
+    samples: int
+    moving: bool
+
+
+def before(curve: Curve, noise: Noise) -> Level | None:
+    """The level over [-before, 0]; None without any sample to take it from."""
+    upto = curve.t <= 0
+    if not bool(upto.any()):
+        return None
+    return level(curve.t[upto], curve.v[upto], -curve.before_s, 0.0, curve.hold, noise)
+
+
+def final(curve: Curve, noise: Noise, from_s: float, end_s: float) -> Level | None:
+    """The level at the end of from_s..end_s: of several final stretches the least uncertain."""
+    best: Level | None = None
+    for share in TAILS:
+        lo = end_s - share * (end_s - from_s)
+        upto = curve.t <= end_s
+        if not bool(upto.any()):
+            return None
+        found = level(curve.t[upto], curve.v[upto], lo, end_s, curve.hold, noise)
+        ahead = 0.35 * found.drift / share
+        found = replace(found, u=float(np.hypot(found.u, ahead)))
+        enough = found.samples >= CONSTANTS.dwell_samples or best is None
+        if enough and (best is None or found.u < 0.98 * best.u):
+            best = found
+    return best
+
+
+def level(t: Array, v: Array, lo: float, hi: float, hold: bool, noise: Noise) -> Level:
+    weight = _durations(t, lo, hi, hold)
+    used = weight > 0
+    if not bool(used.any()):
+        weight = np.where(np.arange(len(t)) == len(t) - 1, 1.0, 0.0)
+        used = weight > 0
+    t, v, weight = t[used], v[used], weight[used] / weight[used].sum()
+    value = _robust_mean(v, weight)
+    inside = int(((t >= lo) & (t <= hi)).sum())
+    count = max(1.0, 1.0 / float(weight @ weight))
+    chance = noise.sd * np.sqrt(min(noise.inflation / count, 1.0))
+    drift, swing, moving = _motion(t, v, weight, noise)
+    chance = float(np.hypot(chance, noise.coarse))
+    u = np.sqrt(chance**2 + (0.3 * drift) ** 2 + (0.3 * swing) ** 2)
+    return Level(value, float(u), chance, drift, inside, moving)
+
+
+def _durations(t: Array, lo: float, hi: float, hold: bool) -> Array:
+    """Seconds of lo..hi that each sample stands for."""
+    if hold:
+        edges = np.append(t, max(hi, float(t[-1])))
+    else:
+        edges = np.concatenate([[-np.inf], 0.5 * (t[1:] + t[:-1]), [np.inf]])
+    edges = np.clip(edges, lo, hi)
+    return np.diff(edges)
+
+
+def _robust_mean(v: Array, weight: Array) -> float:
+    """Mean with samples beyond 3.5 robust sd of the median drawn in (Huber's one step)."""
+    order = np.argsort(v, kind="stable")
+    middle = float(v[order][np.searchsorted(np.cumsum(weight[order]), 0.5 - 1e-12)])
+    off = v - middle
+    far = np.sort(np.abs(off))
+    robust = 1.4826 * float(far[len(far) // 2])
+    if robust > ALIKE:
+        reach = CONSTANTS.hampel_clip * robust
+        off = np.clip(off, -reach, reach)
+    return middle + float(weight @ off)
+
+
+def _motion(t: Array, v: Array, weight: Array, noise: Noise) -> tuple[float, float, bool]:
+    """Drift and slow swing beyond chance over a stretch, and whether it is no level at all."""
+    if len(t) < 4:
+        return 0.0, 0.0, False
+    z = t - float(weight @ t)
+    spread = float(weight @ (z * z))
+    if spread <= 0:
+        return 0.0, 0.0, False
+    mean = float(weight @ v)
+    slope = float(weight @ (z * (v - mean))) / spread
+    length = float(t[-1] - t[0])
+    count = max(2.0, 1.0 / float(weight @ weight))
+    error = noise.sd * np.sqrt(noise.inflation / count) * length / np.sqrt(spread)
+    error = float(np.hypot(error, noise.coarse))
+    drift = abs(slope * length)
+    beyond = float(np.sqrt(max(0.0, drift**2 - 2.0 * error**2)))
+    left = v - mean - slope * z
+    swing = float(np.sqrt(max(0.0, float(weight @ (left * left)) - 1.3 * noise.sd**2)))
+    drifting = drift > max(CONSTANTS.drift_share, CONSTANTS.drift_sd * error)
+    reach = float(np.ptp(_smoothed(left)))
+    swinging = reach > max(CONSTANTS.moving_share, CONSTANTS.moving_sd * noise.total)
+    return beyond, swing, drifting or swinging
+
+
+def _smoothed(v: Array) -> Array:
+    """Running mean of five, for the look at slow swings."""
+    if len(v) < 8:
+        return v
+    total = np.concatenate([[0.0], np.cumsum(v)])
+    mean: Array = (total[5:] - total[:-5]) / 5.0
+    return mean

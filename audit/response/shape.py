@@ -1,0 +1,219 @@
+"""Crossings and extrema of the response, from local fits and never from one raw sample.
+
+In: a ``Curve`` seen as x = (y - y0) / (y_end - y0), and its noise in the same unit. Out: the rise,
+and the turning points with their standard uncertainties. Reference levels 10 and 90 % as in IEEE
+Std 181; first crossings, counted from the last time below 10 % before the first 50 %.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from audit.response.constants import CONSTANTS
+from audit.response.curve import Curve
+from audit.response.localfit import Array, Fit, fit
+from audit.response.noise import Noise, value_sd
+
+SLOPE_OF_VALUE = 1.31
+"""sd of a fitted slope x half-width / sd of the fitted value, Epanechnikov weights, quadratic."""
+
+
+@dataclass(frozen=True)
+class Look:
+    """A first look: crossings of 10 and 90 %, s, where there are any."""
+
+    t10: float | None
+    t90: float | None
+
+    @property
+    def rise_s(self) -> float | None:
+        return None if self.t10 is None or self.t90 is None else self.t90 - self.t10
+
+
+@dataclass(frozen=True)
+class Crossing:
+    """A refined crossing: when, s; slope of x there, 1/s; sd of x there."""
+
+    t: float
+    slope: float
+    sd: float
+
+
+@dataclass(frozen=True, eq=False)
+class Path:
+    """The smoothed response: ``t`` [m] s, ``x`` [m], ``sd`` of one value, turning points [k]."""
+
+    t: Array
+    x: Array
+    sd: float
+    turns: NDArray[np.int64]
+    turn_t: Array
+    turn_x: Array
+    turn_sd: Array
+    turn_t_sd: Array
+
+
+def boxcar(x: Array, width: int) -> Array:
+    """Centred running mean over an odd number of points, shorter at the ends."""
+    if width <= 1 or len(x) <= 2:
+        return x
+    half = width // 2
+    total = np.concatenate([[0.0], np.cumsum(x)])
+    place = np.arange(len(x))
+    reach = np.minimum(half, np.minimum(place, len(x) - 1 - place))
+    mean: Array = (total[place + reach + 1] - total[place - reach]) / (2 * reach + 1)
+    return mean
+
+
+def first_look(curve: Curve, x: Array, noise: Noise) -> Look:
+    """Crossings of a running mean that brings the noise down to 3 % of the change."""
+    width = int(np.ceil((noise.sd / CONSTANTS.coarse_sd) ** 2 * noise.inflation)) | 1
+    smooth = boxcar(x, min(width, len(x) // 4 | 1))
+    start = max(int(np.searchsorted(curve.ft, 0.0, "right")) - 1, 0)
+    stop = int(np.searchsorted(curve.ft, curve.window_s, "right"))
+    t, s = curve.ft[start:stop], smooth[start:stop]
+    high = np.flatnonzero(s >= 0.5)
+    if len(high) == 0:
+        low = np.flatnonzero(s >= 0.1)
+        return Look(_cross(t, s, int(low[0]), 0.1) if len(low) else None, None)
+    half = int(high[0])
+    below = np.flatnonzero(s[: half + 1] < 0.1)
+    t10 = _cross(t, s, int(below[-1]) + 1, 0.1) if len(below) else max(float(t[0]), 0.0)
+    above = np.flatnonzero(s[half:] >= 0.9)
+    t90 = _cross(t, s, half + int(above[0]), 0.9) if len(above) else None
+    return Look(t10, t90)
+
+
+def _cross(t: Array, s: Array, at: int, level: float) -> float:
+    """When s crosses a level between the points at - 1 and at, s; not before t0."""
+    if at == 0:
+        return max(float(t[0]), 0.0)
+    share = (level - s[at - 1]) / (s[at] - s[at - 1])
+    return max(float(t[at - 1] + share * (t[at] - t[at - 1])), 0.0)
+
+
+def samples_a_rise(curve: Curve, t10: float, t90: float) -> float:
+    """Rise time over the mean interval of the samples that span it."""
+    first = max(int(np.searchsorted(curve.t, t10, "right")) - 1, 0)
+    last = min(int(np.searchsorted(curve.t, t90, "left")), len(curve.t) - 1)
+    if last <= first:
+        return 0.0
+    return (t90 - t10) * (last - first) / float(curve.t[last] - curve.t[first])
+
+
+def half_width(curve: Curve, rise_s: float, noise: Noise) -> float:
+    """Half-width of the local fit, s: where its bias and its noise weigh about the same.
+
+    A local quadratic's bias grows with the fourth power of its width, its variance falls with it
+    (Fan and Gijbels, Local Polynomial Modelling; constants for a second-order response).
+    """
+    step = max(curve.step_s, 1e-9)
+    count = max(rise_s / step, 1.0)
+    eta = (CONSTANTS.eta_gain * noise.total / np.sqrt(count)) ** (1.0 / 4.5)
+    eta = min(float(eta), CONSTANTS.eta_cap)
+    return max(eta * rise_s, CONSTANTS.least_half_samples * step)
+
+
+def crossings(
+    curve: Curve, x: Array, noise: Noise, look: tuple[float, float], half: float
+) -> tuple[Crossing, Crossing]:
+    """The crossings of 10 and 90 % from local fits; none reaches back over the response's start."""
+    t10, t90 = look
+    level = np.array([0.1, 0.9])
+    floor = min(max(0.01, 2.5 * noise.sd), 0.06)
+    quiet = np.flatnonzero((curve.ft < t10) & (x <= floor))
+    start = float(curve.ft[quiet[-1]]) if len(quiet) else t10 - half
+    step = curve.step_s
+    place = np.array([t10, t90])
+    for _ in range(3):
+        reach = max(min(half, place[0] - start + 0.5 * step), 0.5 * step)
+        left = np.array([reach, half])
+        right = np.array([max(half, 3.2 * step), half])
+        found = fit(curve.ft, x, place, left, right)
+        place = place + np.clip(_root(found, level), -0.5 * half, 0.5 * half)
+        place = np.maximum(place, 0.0)
+    found = fit(curve.ft, x, place, left, right)
+    place = np.maximum(place + np.clip(_root(found, level), -half, half), 0.0)
+    sd = value_sd(found, noise, curve)
+    least = 0.1 / max(t90 - t10, 1e-9)
+    slope = np.maximum(found.slope, least)
+    low, high = (Crossing(float(place[i]), float(slope[i]), float(sd[i])) for i in (0, 1))
+    return low, high
+
+
+def _root(found: Fit, level: Array) -> Array:
+    """Step from each fit's place to where its parabola crosses the level upwards."""
+    slope = np.maximum(found.slope, 1e-9)
+    short = level - found.value
+    inner = np.maximum(slope**2 + 4.0 * found.curvature * short, 0.0)
+    root: Array = 2.0 * short / (slope + np.sqrt(inner))
+    return root
+
+
+def turning(x: Array, threshold: float) -> NDArray[np.int64]:
+    """Places of alternating extremes, ends included, with every swing at least the threshold.
+
+    Small swings go first, each with both its ends (as in rainflow counting, ASTM E1049).
+    """
+    step = np.diff(x)
+    moving = np.flatnonzero(step != 0)
+    if len(moving) == 0:
+        return np.array([0], np.int64)
+    sign = np.sign(step[moving])
+    flips = np.flatnonzero(sign[1:] != sign[:-1])
+    keep = np.concatenate([[0], moving[flips + 1], [len(x) - 1]]).astype(np.int64)
+    while len(keep) > 2:
+        swing = np.abs(np.diff(x[keep]))
+        wall = np.concatenate([[np.inf], swing, [np.inf]])
+        small = (swing < threshold) & (swing <= wall[:-2]) & (swing < wall[2:])
+        if not bool(small.any()):
+            break
+        gone = np.zeros(len(keep), np.bool_)
+        gone[:-1] |= small
+        gone[1:] |= small
+        gone[[0, -1]] = False
+        keep = keep[~gone]
+    return keep
+
+
+def smooth(curve: Curve, x: Array, noise: Noise, end_s: float, half: float, rise_s: float) -> Path:
+    """The response from t0 to end_s, smoothed, and its turning points refined."""
+    inside = (curve.ft > 0) & (curve.ft < end_s)
+    grid = np.concatenate([[0.0], curve.ft[inside], [end_s]])
+    if len(grid) > CONSTANTS.grid_points:
+        grid = np.linspace(0.0, end_s, CONSTANTS.grid_points)
+    width = np.full(len(grid), half)
+    start = np.maximum(np.minimum(grid, half), 0.6 * curve.step_s)
+    values = fit(curve.ft, x, grid, start, width).value
+    middle = grid[[len(grid) // 2]]
+    sample = fit(curve.ft, x, middle, width[:1], width[:1])
+    sd = float(value_sd(sample, noise, curve)[0])
+    turns = turning(values, max(CONSTANTS.turn_sd * sd, 1e-7))
+    where, value, value_u, when_u = _extremes(curve, x, noise, grid[turns], half, rise_s)
+    return Path(grid, values, sd, turns, where, value, value_u, when_u)
+
+
+def _extremes(
+    curve: Curve, x: Array, noise: Noise, place: Array, half: float, rise_s: float
+) -> tuple[Array, Array, Array, Array]:
+    """Refine turning points: when, value, and their standard uncertainties (ends as they are)."""
+    apart = np.diff(place, prepend=place[0] - 9e9, append=place[-1] + 9e9)
+    near = np.minimum(apart[:-1], apart[1:])
+    wide = min(CONSTANTS.eta_peak * half, max(CONSTANTS.eta_peak_cap * rise_s, half))
+    reach = np.minimum(wide, np.maximum(0.45 * near, CONSTANTS.least_half_samples * curve.step_s))
+    reach = np.maximum(reach, CONSTANTS.least_half_samples * curve.step_s)
+    inner = np.ones(len(place), np.bool_)
+    inner[[0, -1]] = False
+    when = place.copy()
+    for _ in range(2):
+        found = fit(curve.ft, x, when, reach, reach)
+        bend = np.where(np.abs(found.curvature) > 1e-12, found.curvature, 1e-12)
+        move = np.clip(-found.slope / (2.0 * bend), -0.5 * reach, 0.5 * reach)
+        when = np.where(inner, np.clip(when + move, 0.0, curve.window_s), when)
+    found = fit(curve.ft, x, when, reach, reach)
+    sd = value_sd(found, noise, curve)
+    when_u = SLOPE_OF_VALUE * sd / reach / np.maximum(2.0 * np.abs(found.curvature), 1e-12)
+    return when, found.value, sd, np.minimum(when_u, reach)
