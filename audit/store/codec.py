@@ -25,7 +25,7 @@ _HEAD = struct.Struct("<BBBIQq")
 _ALL_GOOD = 1
 _BAD_IS_NAN = 2
 _PLAIN_FLOATS = 255
-_MOST_DECIMALS = 9
+_SCALES: NDArray[np.float64] = 10.0 ** np.arange(10, dtype=np.float64)
 _EXACT_BELOW = float(2**52)
 _NAN_BITS = np.array(np.nan, "<f8").view("<u8")
 
@@ -66,7 +66,7 @@ def decode(data: bytes) -> Record:
 
 def _signal(role: Role, samples: Samples) -> bytes:
     stamps = np.ascontiguousarray(samples.t_us, "<i8").view("<u8")
-    steps = np.diff(stamps)
+    steps = stamps[1:] - stamps[:-1]
     unit = int(np.gcd.reduce(steps)) if len(steps) else 1
     value = np.ascontiguousarray(samples.value, "<f8")
     flags = 0
@@ -117,8 +117,9 @@ def _whole_numbers(value: NDArray[np.float64]) -> tuple[int, NDArray[np.uint64]]
     decimals = _decimals(value)
     if decimals is None:
         return _PLAIN_FLOATS, value.view("<u8")
-    whole = np.rint(value * 10.0**decimals).astype("<i8")
-    rise = np.diff(whole, prepend=np.zeros(1, "<i8"))
+    whole = np.rint(value * _SCALES[decimals]).astype("<i8")
+    rise = whole.copy()
+    rise[1:] -= whole[:-1]
     return decimals, ((rise << 1) ^ (rise >> 63)).view("<u8")
 
 
@@ -127,25 +128,28 @@ def _values(decimals: int, words: NDArray[np.uint64]) -> NDArray[np.float64]:
         return words.view("<f8")
     rise = (words >> np.uint64(1)).view("<i8") ^ -(words & np.uint64(1)).view("<i8")
     whole: NDArray[np.float64] = np.cumsum(rise).astype("<f8")
-    return whole / 10.0**decimals
+    return whole / float(_SCALES[decimals])
 
 
 def _decimals(value: NDArray[np.float64]) -> int | None:
     """The fewest decimals with which every value is regained exactly; None where none is."""
-    if not bool(np.isfinite(value).all()) or bool((np.signbit(value) & (value == 0)).any()):
+    if len(value) == 0:
+        return 0
+    most = float(np.abs(value).max())  # NaN or infinite where one value is
+    if not most < _EXACT_BELOW or bool(np.signbit(value[value == 0]).any()):
         return None
-    most = float(np.abs(value).max()) if len(value) else 0.0
-    for decimals in range(_MOST_DECIMALS + 1):
-        scale = 10.0**decimals
-        if most * scale >= _EXACT_BELOW:
-            return None
-        if _regained(value[:16], scale) and _regained(value, scale):
-            return decimals
+    possible = _SCALES[_SCALES * most < _EXACT_BELOW, np.newaxis]
+    likely = _regained(value[:16], possible)  # a few values rule out most of the scales
+    for decimals in np.flatnonzero(likely):
+        if bool(_regained(value, possible[decimals])):
+            return int(decimals)
     return None
 
 
-def _regained(value: NDArray[np.float64], scale: float) -> bool:
-    return bool((np.rint(value * scale) / scale == value).all())
+def _regained(value: NDArray[np.float64], scale: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """For each scale, whether rounding to it loses nothing."""
+    regained: NDArray[np.bool_] = (np.rint(value * scale) / scale == value).all(axis=-1)
+    return regained
 
 
 def _planes(words: NDArray[np.uint64]) -> bytes:

@@ -22,6 +22,7 @@ from sqlalchemy.pool import ConnectionPoolEntry
 from audit.errors import StoreUnready
 
 BUSY_S = 30.0
+_JSON = json.JSONEncoder(ensure_ascii=False, allow_nan=False, separators=(",", ":"))
 _PURPOSE = "audit_purpose"
 _KINDS = "sqlite:///FILE or postgresql+psycopg://USER@HOST/DATABASE"
 
@@ -37,7 +38,7 @@ class Purpose(Enum):
 
 def compact_json(value: object) -> str:
     """JSON without spaces; floats by repr, so that they come back exact; NaN is refused."""
-    return json.dumps(value, ensure_ascii=False, allow_nan=False, separators=(",", ":"))
+    return _JSON.encode(value)
 
 
 def checked_url(url: str) -> URL:

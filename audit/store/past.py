@@ -6,7 +6,7 @@ from collections.abc import Callable, Collection, Iterator, Sequence
 from datetime import date
 from typing import Any, TypeVar
 
-from sqlalchemy import RowMapping, and_, func, or_, select
+from sqlalchemy import RowMapping, Text, and_, cast, func, or_, select
 from sqlalchemy.orm import Session
 
 from audit.records import (
@@ -24,7 +24,7 @@ from audit.records import (
 )
 from audit.store.codec import decode
 from audit.store.entries import StoredStep
-from audit.store.payload import change_of, measured_of, reasons_of
+from audit.store.payload import StoredMeasured, change_of, measured_of, reasons_of
 from audit.store.tables import (
     CurveRow,
     DayRow,
@@ -119,7 +119,7 @@ def past_steps_many(
         MeasurementRow.kind,
         MeasurementRow.usable,
         MeasurementRow.set_aside,
-        MeasurementRow.measured,
+        cast(MeasurementRow.measured, Text),
         MeasurementRow.spec_band_pct,
     ).join_from(LoopRow, MeasurementRow, LoopRow.id == MeasurementRow.loop_id)
     query = query.where(_CURRENT)
@@ -141,7 +141,7 @@ def _past_step_of(row: Sequence[Any]) -> PastStep:
         kind=ChangeKind(kind),
         usable=usable,
         set_aside=reasons_of(set_aside),
-        measured=measured_of(measured),
+        measured=StoredMeasured(measured),
         band_pct=band,
     )
 

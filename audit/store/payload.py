@@ -7,7 +7,8 @@ the bare ``why`` of a quantity that was not measured. A standing's ``detail`` ho
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import json
+from collections.abc import Iterator, Mapping
 from dataclasses import MISSING, fields
 from typing import Any
 
@@ -98,6 +99,40 @@ def _measured_of(one: str | list[Any]) -> Measured:
         return _MISSING[one]
     value, low, high, how, *why = one
     return Measured(value, low, high, how, Reason(why[0]) if why else None)
+
+
+class StoredMeasured(Mapping[Quantity, Measured]):
+    """What was measured, as the text of its JSON until something in it is asked for.
+
+    A night reads thousands of steps a loop and looks at few quantities of each; what goes to
+    another process goes as text.
+    """
+
+    __slots__ = ("_stored", "_text")
+
+    def __init__(self, text: str) -> None:
+        self._text = text
+        self._stored: dict[str, Any] | None = None
+
+    def _read(self) -> dict[str, Any]:
+        if self._stored is None:
+            self._stored = json.loads(self._text)
+        return self._stored
+
+    def __getitem__(self, quantity: Quantity) -> Measured:
+        return _measured_of(self._read()[quantity])
+
+    def __iter__(self) -> Iterator[Quantity]:
+        return (_QUANTITY[name] for name in self._read())
+
+    def __len__(self) -> int:
+        return len(self._read())
+
+    def __reduce__(self) -> tuple[type[StoredMeasured], tuple[str]]:
+        return StoredMeasured, (self._text,)
+
+    def __repr__(self) -> str:
+        return f"StoredMeasured({self._text!r})"
 
 
 def reasons_of(codes: list[str]) -> tuple[Reason, ...]:
