@@ -33,7 +33,9 @@ class Constants:
     """Half-width of the local fit in rise times: (eta_gain sd / sqrt(samples a rise))^(1/4.5)."""
     eta_peak: float = 1.4
     eta_peak_cap: float = 0.5
-    """At an extremum the fit is wider by this factor, up to this cap."""
+    """At an extremum the fit is wider by this factor, up to this cap …"""
+    eta_when: float = 0.7
+    """… and for its time, which a skew peak biases more, narrower again by this factor."""
     least_half_samples: float = 2.2
     turn_sd: float = 3.0
     """A turn of the smoothed curve counts beyond this many of its sd."""
@@ -43,6 +45,15 @@ class Constants:
     settle_band: float = 0.05
     settle_sd: float = 5.0
     band_sd: float = 4.0
+    """A band under so many sd of the smoothed curve cannot be settled into directly."""
+    crossing_sd: float = 1.2
+    """sd of a crossing into the band, in sd of the smoothed curve: the first entry is taken."""
+    hump_share: float = 0.025
+    """Draws of one swing from this share on are a hump the settling time's interval must hold."""
+    skew: float = 0.15
+    """Bias of a peak's time by its skewness, s: at most about skew x half-width² / rise."""
+    excess_doubt: float = 0.2
+    """Relative standard uncertainty of the noise part of the IAE."""
     """Settled at all: inside 5 % or 5 sd of the smoothed curve for the dwell."""
     dwell_samples: int = 10
     drift_share: float = 0.02
@@ -64,8 +75,10 @@ class Constants:
     time to settling."""
     default_error_share: float = 0.005
     """Standard uncertainty of "ends at its setpoint", of the range."""
-    peak_u: float = 2.5
-    """A peak is one beyond this many of its standard uncertainties."""
+    peak_u: float = 3.5
+    """A peak is one beyond this many of its standard uncertainties …"""
+    second_peak_u: float = 4.0
+    """… and a second one beyond so many: it is the highest of several places."""
     oscillation_share: float = 0.02
     oscillation_sd: float = 3.0
     oscillation_crossings: int = 8

@@ -59,13 +59,13 @@ def measure(curve: Record, change: SetpointChange, settings: MeasureSettings) ->
     if ends is None:
         return Response(_all_missing(Reason.GAP), version, settings.band_pct)
     measured = _quantities(record, made, noise, ends, change, settings)
-    settled = ends.is_settled and ends.y_end is not None
+    y_end = ends.y_end if ends.is_settled else None
     return Response(
         measured,
         version,
         settings.band_pct,
         y0_eu=change.sp_from + ends.y0.value * change.size_eu,
-        y_end_eu=change.sp_from + ends.y_end * change.size_eu if settled and ends.y_end else None,
+        y_end_eu=None if y_end is None else change.sp_from + y_end * change.size_eu,
         noise_eu=noise.sd * abs(change.size_eu),
     )
 
@@ -97,7 +97,7 @@ def _quantities(
     if change.kind is ChangeKind.STEP:
         measured |= _shape(record, curve, noise, ends, change, settings)
     measured[Quantity.STEADY_STATE_ERROR] = _error(ends, change)
-    measured[Quantity.IAE] = _iae(curve, noise, change, settings)
+    measured[Quantity.IAE] = _iae(curve, noise, ends, change, settings)
     output = output_of.read(record, change, settings)
     measured |= output_of.measure(output, curve.window_s)
     _screen(measured, record, curve, noise, ends, change, settings)
@@ -160,7 +160,9 @@ def _error(ends: Ends, change: SetpointChange) -> Measured:
     return interval((1.0 - ends.y_end) * size, ends.u_end * abs(size), ends.how)
 
 
-def _iae(curve: Curve, noise: Noise, change: SetpointChange, settings: MeasureSettings) -> Measured:
+def _iae(
+    curve: Curve, noise: Noise, ends: Ends, change: SetpointChange, settings: MeasureSettings
+) -> Measured:
     """IAE over the loop's fixed horizon, the window after the change."""
     if change.window_end_us < change.at_us + settings.after_us:
         return Measured.missing(change.cut or Reason.CUT_SHORT)
@@ -168,7 +170,8 @@ def _iae(curve: Curve, noise: Noise, change: SetpointChange, settings: MeasureSe
         ((at - change.at_us) / SECOND_US, (value - change.sp_from) / change.size_eu)
         for at, value in change.moves
     )
-    value, u = absolute_error(curve, noise, moves or ((0.0, 1.0),), curve.window_s)
+    level = ends.y_end if ends.is_settled else None
+    value, u = absolute_error(curve, noise, moves or ((0.0, 1.0),), curve.window_s, level)
     size = abs(change.size_eu)
     return interval(value * size, u * size, "direct", 0.0)
 

@@ -8,6 +8,7 @@ from __future__ import annotations
 import numpy as np
 from scipy.special import erf
 
+from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.localfit import Array
 from audit.response.noise import Noise
@@ -15,12 +16,17 @@ from audit.response.shape import boxcar
 
 
 def absolute_error(
-    curve: Curve, noise: Noise, moves: tuple[tuple[float, float], ...], end_s: float
+    curve: Curve,
+    noise: Noise,
+    moves: tuple[tuple[float, float], ...],
+    end_s: float,
+    level: float | None,
 ) -> tuple[float, float]:
     """Integral of |sp - y| over [0, end_s] and its standard uncertainty.
 
     ``moves``: (s from t0, setpoint after it in parts of the change), the first at 0. The
-    setpoint holds between its moves; the process variable runs as the curve says.
+    setpoint holds between its moves; the process variable runs as the curve says. ``level``:
+    where it ends, if it does.
     """
     at = np.array([t for t, _ in moves])
     held = np.array([value for _, value in moves])
@@ -32,11 +38,12 @@ def absolute_error(
     width = np.diff(grid)
     left, right = start - sp, stop - sp
     plain = float(width @ (0.5 * (np.abs(left) + np.abs(right))))
-    excess = _folded(0.5 * (left + right), noise)
+    excess = _folded(0.5 * (left + right), noise, None if level is None else level - sp)
     value = max(plain - float(width @ excess), 0.0)
     step = end_s / max(len(inside), 1)
     random = noise.sd * np.sqrt(noise.inflation * end_s * step)
-    doubt = 0.5 * float(width @ excess) + noise.coarse * np.sqrt(end_s * step)
+    unsure = CONSTANTS.excess_doubt + np.sqrt(0.5 * noise.inflation / max(len(inside), 1))
+    doubt = unsure * float(width @ excess) + noise.coarse * np.sqrt(end_s * step)
     return value, float(np.hypot(random, doubt))
 
 
@@ -50,14 +57,18 @@ def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
     return value[:-1], value[1:]
 
 
-def _folded(error: Array, noise: Noise) -> Array:
+def _folded(error: Array, noise: Noise, final: Array | None) -> Array:
     """What noise adds to the mean of |error| (folded normal), its own error smoothed first."""
     if noise.sd <= 0:
         return np.zeros(len(error))
     smooth = boxcar(error, 9)
+    smooth = np.where(np.abs(smooth) < noise.sd, boxcar(error, 41), smooth)
+    if final is not None:
+        reach = 2.5 * noise.sd * np.sqrt(min(1.0, noise.inflation / 9.0))
+        near = np.abs(boxcar(error, 9) - final) < reach
+        smooth = np.where(near, final, smooth)
     size = np.abs(smooth)
-    size = np.where(size < noise.sd, np.abs(boxcar(error, 41)), size)
     ratio = size / noise.sd
-    near = noise.sd * np.sqrt(2.0 / np.pi) * np.exp(-0.5 * ratio**2)
-    added: Array = near + size * erf(ratio / np.sqrt(2.0)) - size
+    narrow = noise.sd * np.sqrt(2.0 / np.pi) * np.exp(-0.5 * ratio**2)
+    added: Array = narrow + size * erf(ratio / np.sqrt(2.0)) - size
     return np.maximum(added, 0.0)

@@ -87,13 +87,13 @@ def _scale(residual: Array) -> float:
 
 
 def _correlation(residual: Array, sd: float) -> float:
-    """Correlation from one sample to the next, 0 to 0.95; 0 where it is within chance."""
+    """Correlation from one sample to the next, 0 to 0.95, with most of its own doubt added."""
     if sd <= 0:
         return 0.0
     drawn = np.clip(residual, -3.5 * sd, 3.5 * sd)
     square = float(drawn @ drawn)
     rho = float(drawn[:-1] @ drawn[1:]) / square
-    rho += 1.0 / len(residual)
+    rho += 1.0 / len(residual) + 0.7 / float(np.sqrt(len(residual)))
     return min(max(rho, 0.0), 0.95)
 
 

@@ -63,14 +63,15 @@ def draw(path: Path, u0: float, u1: float, stamp_u: float, seed: int) -> Draws:
     normal = rng.standard_normal((3 + 2 * k, count))
     normal[:, 0] = 0.0
     turns = path.turn_sd[:, None] * normal[3 : 3 + k]
-    crossing = path.sd * normal[3 + k :]
+    crossing = CONSTANTS.crossing_sd * path.sd * normal[3 + k :]
     return Draws(u0 * normal[0], u1 * normal[1], turns, crossing, stamp_u * normal[2])
 
 
 def settle(
     path: Path, draws: Draws, band: float, end_s: float, dwell_s: float
-) -> tuple[Array, NDArray[np.bool_]]:
-    """For each draw the settling time, s, and whether it is known; if not: longer than that.
+) -> tuple[Array, NDArray[np.bool_], NDArray[np.int64]]:
+    """For each draw the settling time, s, whether it is known (if not: longer than that), and in
+    which swing of the response it lies.
 
     ``end_s``: end of the window; ``dwell_s``: ten samples. Extremes that cannot reach out of the
     band in any draw are passed over.
@@ -81,6 +82,7 @@ def settle(
     off = (at_knot[:, None] + draws.turns[knots] - draws.y0) / size - 1.0
     entry = np.full(len(size), np.nan)
     result = np.full(len(size), np.nan)
+    swing = np.zeros(len(size), np.int64)
     for j in range(len(knots) - 1):
         here, there = off[j], off[j + 1]
         lo, hi = int(path.turns[knots[j]]), int(path.turns[knots[j + 1]])
@@ -93,6 +95,7 @@ def settle(
         into = _when(t, x, rising, (1.0 + side * band) * size + draws.y0 + draws.crossing[j])
         enters = outside & (~goes | across)
         entry = np.where(enters, into, np.where(outside, np.nan, entry))
+        swing = np.where(enters & np.isnan(result), j, swing)
         if j == 0:
             entry = np.where(~outside, 0.0, entry)
         level = (1.0 + np.sign(there) * band) * size + draws.y0 + draws.crossing[j]
@@ -104,7 +107,7 @@ def settle(
     known = ~np.isnan(result) | stays
     open_end = np.where(np.isnan(entry), end_s, entry)
     value = np.where(np.isnan(result), open_end, result)
-    return np.maximum(value + draws.stamp, 0.0), known
+    return np.maximum(value + draws.stamp, 0.0), known, swing
 
 
 def _knots(path: Path, band: float, draws: Draws) -> NDArray[np.int64]:

@@ -199,7 +199,11 @@ def smooth(curve: Curve, x: Array, noise: Noise, end_s: float, half: float, rise
 def _extremes(
     curve: Curve, x: Array, noise: Noise, place: Array, half: float, rise_s: float
 ) -> tuple[Array, Array, Array, Array]:
-    """Refine turning points: when, value, and their standard uncertainties (ends as they are)."""
+    """Refine turning points: when, value, and their standard uncertainties (ends as they are).
+
+    The top of a fitted parabola is too far out by var(slope) / (4 |curvature|) on the average: the
+    place was chosen for being far out. That much is taken off.
+    """
     apart = np.diff(place, prepend=place[0] - 9e9, append=place[-1] + 9e9)
     near = np.minimum(apart[:-1], apart[1:])
     wide = min(CONSTANTS.eta_peak * half, max(CONSTANTS.eta_peak_cap * rise_s, half))
@@ -215,5 +219,14 @@ def _extremes(
         when = np.where(inner, np.clip(when + move, 0.0, curve.window_s), when)
     found = fit(curve.ft, x, when, reach, reach)
     sd = value_sd(found, noise, curve)
-    when_u = SLOPE_OF_VALUE * sd / reach / np.maximum(2.0 * np.abs(found.curvature), 1e-12)
-    return when, found.value, sd, np.minimum(when_u, reach)
+    bend = np.maximum(2.0 * np.abs(found.curvature), 1e-12)
+    slope_sd = SLOPE_OF_VALUE * sd / reach
+    outward = np.minimum(slope_sd**2 / (2.0 * bend), sd) * np.sign(found.curvature)
+    value = np.where(inner, found.value + outward, found.value)
+    near = np.maximum(CONSTANTS.eta_when * reach, CONSTANTS.least_half_samples * curve.step_s)
+    found = fit(curve.ft, x, when, near, near)
+    move = np.clip(-found.slope / np.copysign(bend, found.curvature), -0.5 * near, 0.5 * near)
+    when = np.where(inner, np.clip(when + move, 0.0, curve.window_s), when)
+    when_u = SLOPE_OF_VALUE * value_sd(found, noise, curve) / near / bend
+    when_u = np.hypot(when_u, CONSTANTS.skew * near**2 / rise_s)
+    return when, value, sd, np.minimum(when_u, reach)

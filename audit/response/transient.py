@@ -5,7 +5,7 @@ In: the curve seen as x, its noise, its ends. Out: ``Measured`` by quantity, not
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -129,12 +129,9 @@ def _peaks(view: View, path: Path, t10: float) -> dict[Quantity, Measured]:
     u = float(
         np.sqrt(path.turn_sd[top] ** 2 + ((1.0 + excess) * u1) ** 2 + (excess * view.u0) ** 2)
     )
-    found = {Quantity.OVERSHOOT: interval(100.0 * excess, 100.0 * u, view.how, 0.0)}
     if excess <= CONSTANTS.peak_u * u:
-        return found | dict.fromkeys(
-            (Quantity.PEAK_TIME, Quantity.DECAY_RATIO, Quantity.DAMPED_PERIOD),
-            Measured.missing(Reason.NO_PEAK),
-        )
+        return _no_peak(view, path, t10)
+    found = {Quantity.OVERSHOOT: interval(100.0 * excess, 100.0 * u, view.how, 0.0)}
     when_u = float(np.hypot(path.turn_t_sd[top], view.stamp_u))
     found[Quantity.PEAK_TIME] = interval(float(path.turn_t[top]), when_u, view.how, 0.0)
     return found | _decay(view, path, tops, u)
@@ -172,13 +169,14 @@ def _no_peak(view: View, path: Path, t10: float) -> dict[Quantity, Measured]:
     """No maximum beyond noise: an overshoot of about 0 with its interval."""
     after = path.x[path.t > t10]
     most = float(after.max()) - 1.0 if len(after) else 0.0
-    value = max(most - 1.5 * path.sd, 0.0)
+    value = max(most - 2.0 * path.sd, 0.0)
     u = float(np.hypot(path.sd, view.u1))
+    bound = interval(100.0 * value, 100.0 * u, view.how, 0.0)
     found = dict.fromkeys(
         (Quantity.PEAK_TIME, Quantity.DECAY_RATIO, Quantity.DAMPED_PERIOD),
         Measured.missing(Reason.NO_PEAK),
     )
-    found[Quantity.OVERSHOOT] = interval(100.0 * value, 100.0 * u, view.how, 0.0)
+    found[Quantity.OVERSHOOT] = replace(bound, low=0.0)
     return found
 
 
@@ -193,7 +191,7 @@ def _decay(view: View, path: Path, tops: list[int], u: float) -> dict[Quantity, 
         second = tops[1]
         two = float(path.turn_x[second]) - 1.0
         sd_two = float(np.hypot(path.turn_sd[second], view.u1))
-        if two > CONSTANTS.peak_u * sd_two:
+        if two > CONSTANTS.second_peak_u * sd_two:
             return _two_peaks(view, path, first, second)
     if not view.settled:
         missing = Measured.missing(view.cut)
@@ -240,8 +238,8 @@ def _settling(view: View, path: Path, draws: settling.Draws, band: float) -> Mea
     if band < CONSTANTS.band_sd * path.sd:
         return Measured.missing(Reason.NOISY)
     dwell = CONSTANTS.dwell_samples * view.curve.step_s
-    values, known = settling.settle(path, draws, band, view.end_s, dwell)
-    return from_draws(values, known, view.end_s, view.how, view.cut)
+    values, known, swing = settling.settle(path, draws, band, view.end_s, dwell)
+    return from_draws(values, known, swing, view.end_s, view.how, view.cut)
 
 
 def _sparse(view: View, found: dict[Quantity, Measured]) -> dict[Quantity, Measured]:

@@ -29,15 +29,35 @@ def interval(
 
 
 def from_draws(
-    values: Array, known: NDArray[np.bool_], end_s: float, how: str, why: Reason
+    values: Array,
+    known: NDArray[np.bool_],
+    swing: NDArray[np.int64],
+    end_s: float,
+    how: str,
+    why: Reason,
 ) -> Measured:
-    """From draws, the first the nominal one; what is not known is "longer than" its value."""
-    low = float(np.quantile(values[1:], 0.025))
-    if not bool(known[0]):
-        return Measured.longer_than(min(low, float(values[0])), how, why)
-    high = float(np.quantile(np.where(known[1:], values[1:], end_s), 0.975))
+    """From draws, the first the nominal one; what is not known is "longer than" its value.
+
+    Where the draws fall into several swings of the response, the interval holds 95 % of each swing
+    that is not a rare one.
+    """
     value = float(values[0])
+    low, _ = _humps(values, swing)
+    if not bool(known[0]):
+        return Measured.longer_than(min(low, value), how, why)
+    _, high = _humps(np.where(known, values, end_s), swing)
     return Measured(value=value, low=min(low, value), high=max(high, value), how=how)
+
+
+def _humps(values: Array, swing: NDArray[np.int64]) -> tuple[float, float]:
+    """Lowest 2.5 % and highest 97.5 % point over the swings that hold enough draws."""
+    low, high = np.inf, -np.inf
+    for which in np.unique(swing):
+        part = values[swing == which]
+        if len(part) >= CONSTANTS.hump_share * len(values):
+            ends = np.quantile(part, [0.025, 0.975])
+            low, high = min(low, float(ends[0])), max(high, float(ends[1]))
+    return low, high
 
 
 def seed(at_us: int) -> int:
