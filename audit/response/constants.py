@@ -67,8 +67,9 @@ class Constants:
     sparse_rise: float = 4.0
     """Fewer samples a rise: the rise time is bounded only."""
     compressed_share: float = 0.05
-    compressed_band: float = 2.5
-    """Deadband beyond 5 % of the change, or beyond the band / 2.5 for settling."""
+    compressed_band: float = 2.3
+    """Deadband beyond 5 % of the change, or beyond the band / 2.5 for settling, a little
+    slack given because the deadband is seen a little too large."""
     saturated_share: float = 0.1
     saturated_tolerance: float = 0.0005
     """Saturated: within 0.05 % of the output's range of its limit; material from 10 % of the

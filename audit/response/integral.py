@@ -44,7 +44,8 @@ def absolute_error(
     random = noise.sd * np.sqrt(noise.inflation * end_s * step)
     unsure = CONSTANTS.excess_doubt + np.sqrt(0.5 * noise.inflation / max(len(inside), 1))
     doubt = unsure * float(width @ excess) + noise.coarse * np.sqrt(end_s * step)
-    return value, float(np.hypot(random, doubt))
+    idle = float(width @ (np.abs(left) < 2.0 * noise.deadband))
+    return value, float(np.sqrt(random**2 + doubt**2 + (0.5 * noise.coarse * idle) ** 2))
 
 
 def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:

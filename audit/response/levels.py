@@ -14,7 +14,7 @@ from audit.response.curve import Curve
 from audit.response.localfit import Array
 from audit.response.noise import ALIKE, Noise
 
-TAILS = (0.5, 0.35, 0.25, 0.15, 0.08)
+TAILS = (0.5, 0.25, 0.1)
 """Shares of the time to the end that are tried as the final stretch."""
 
 

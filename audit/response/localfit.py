@@ -63,19 +63,32 @@ def fit(t: Array, v: Array, at: Array, left: Array, right: Array) -> Fit:
     weight = np.maximum(weight, 0.0)
     scale = np.maximum(np.maximum(left, right), 1e-12)
     z = delta / scale[:, None]
-    z2 = z * z
-    s = [np.einsum("ij,ij->i", weight, p) for p in (np.ones_like(z), z, z2, z * z2, z2 * z2)]
-    matrix = np.empty((len(at), 3, 3))
-    for row in range(3):
-        for column in range(3):
-            matrix[:, row, column] = s[row + column]
-    matrix[:, np.arange(3), np.arange(3)] += 1e-12 * np.maximum(s[0], 1e-12)[:, None]
-    inverse = np.linalg.inv(matrix)
-    values = v[index]
-    moments = np.stack(
-        [np.einsum("ij,ij->i", weight, values * p) for p in (np.ones_like(z), z, z2)], axis=1
-    )
-    found = np.einsum("ijk,ik->ij", inverse, moments)
-    head = inverse[:, 0, :]
-    weights = weight * (head[:, :1] + head[:, 1:2] * z + head[:, 2:] * z2)
-    return Fit(found[:, 0], found[:, 1] / scale, found[:, 2] / scale**2, first, weights)
+    moments, sums = _moments(weight, z, v[index])
+    value, slope, curvature, head = _solve(moments, sums)
+    weights = weight * (head[0][:, None] + z * (head[1][:, None] + head[2][:, None] * z))
+    return Fit(value, slope / scale, curvature / scale**2, first, weights)
+
+
+def _moments(weight: Array, z: Array, v: Array) -> tuple[list[Array], list[Array]]:
+    """Weighted sums of z^0..z^4 and of v z^0..v z^2, per row."""
+    moments = [weight.sum(axis=1)]
+    powers = [weight]
+    for _ in range(4):
+        powers.append(powers[-1] * z)
+        moments.append(powers[-1].sum(axis=1))
+    sums = [np.einsum("ij,ij->i", powers[k], v) for k in range(3)]
+    return moments, sums
+
+
+def _solve(s: list[Array], b: list[Array]) -> tuple[Array, Array, Array, tuple[Array, ...]]:
+    """The normal equations of a parabola by cofactors; also the inverse's first row."""
+    ridge = 1e-12 * np.maximum(s[0], 1e-12)
+    s0, s1, s2, s3, s4 = s[0] + ridge, s[1], s[2] + ridge, s[3], s[4] + ridge
+    c00, c01, c02 = s2 * s4 - s3 * s3, s2 * s3 - s1 * s4, s1 * s3 - s2 * s2
+    c11, c12, c22 = s0 * s4 - s2 * s2, s1 * s2 - s0 * s3, s0 * s2 - s1 * s1
+    det = s0 * c00 + s1 * c01 + s2 * c02
+    det = np.where(np.abs(det) > 0, det, 1e-300)
+    value = (c00 * b[0] + c01 * b[1] + c02 * b[2]) / det
+    slope = (c01 * b[0] + c11 * b[1] + c12 * b[2]) / det
+    curvature = (c02 * b[0] + c12 * b[1] + c22 * b[2]) / det
+    return value, slope, curvature, (c00 / det, c01 / det, c02 / det)

@@ -98,12 +98,12 @@ def _correlation(residual: Array, sd: float) -> float:
 
 
 def _bend_sd(curve: Curve) -> float:
-    """Noise from second differences, for a record without a quiet stretch."""
+    """Noise from the smaller second differences, for a record without a quiet stretch."""
     v = curve.v[(curve.t >= -curve.before_s) & (curve.t <= curve.window_s)]
     if len(v) < 5:
         return 0.0
     bend = np.abs(v[2:] - 2.0 * v[1:-1] + v[:-2])
-    return 1.4826 * float(np.median(bend)) / float(np.sqrt(6.0))
+    return float(np.quantile(bend, 0.25)) / (0.3186 * float(np.sqrt(6.0)))
 
 
 def _quantum(v: Array) -> float:

@@ -133,8 +133,9 @@ def _swing(curve: Curve, lo: float, hi: float) -> tuple[float, float | None, boo
     t, v = curve.ft[inside], curve.fv[inside]
     if len(t) < 12:
         return None
-    line = np.polynomial.Polynomial.fit(t, v, 1)
-    left = boxcar(v - line(t), 3)
+    z = t - t.mean()
+    slope = float(z @ (v - v.mean())) / float(z @ z)
+    left = boxcar(v - v.mean() - slope * z, 3)
     amplitude = float(np.sqrt(2.0 * np.mean(left**2)))
     cross = t[1:][np.sign(left[1:]) != np.sign(left[:-1])]
     halves = np.array_split(left, 2)

@@ -192,41 +192,44 @@ def smooth(curve: Curve, x: Array, noise: Noise, end_s: float, half: float, rise
     sample = fit(curve.ft, x, middle, width[:1], width[:1])
     sd = float(value_sd(sample, noise, curve)[0])
     turns = turning(values, max(CONSTANTS.turn_sd * sd, 1e-7))
-    where, value, value_u, when_u = _extremes(curve, x, noise, grid[turns], half, rise_s)
+    where, value = grid[turns], values[turns]
+    value_u, when_u = np.full(len(turns), sd), np.zeros(len(turns))
+    if len(turns) > 2:
+        refined = _extremes(curve, x, noise, where, half, rise_s)
+        for kept, better in zip((where, value, value_u, when_u), refined, strict=True):
+            kept[1:-1] = better
     return Path(grid, values, sd, turns, where, value, value_u, when_u)
 
 
 def _extremes(
     curve: Curve, x: Array, noise: Noise, place: Array, half: float, rise_s: float
 ) -> tuple[Array, Array, Array, Array]:
-    """Refine turning points: when, value, and their standard uncertainties (ends as they are).
+    """Refine turning points but the ends: when, value, and their standard uncertainties.
 
     The top of a fitted parabola is too far out by var(slope) / (4 |curvature|) on the average: the
     place was chosen for being far out. That much is taken off.
     """
-    apart = np.diff(place, prepend=place[0] - 9e9, append=place[-1] + 9e9)
+    apart = np.diff(place)
     near = np.minimum(apart[:-1], apart[1:])
     wide = min(CONSTANTS.eta_peak * half, max(CONSTANTS.eta_peak_cap * rise_s, half))
     reach = np.minimum(wide, np.maximum(0.45 * near, CONSTANTS.least_half_samples * curve.step_s))
     reach = np.maximum(reach, CONSTANTS.least_half_samples * curve.step_s)
-    inner = np.ones(len(place), np.bool_)
-    inner[[0, -1]] = False
-    when = place.copy()
+    when = place[1:-1]
     for _ in range(2):
         found = fit(curve.ft, x, when, reach, reach)
         bend = np.where(np.abs(found.curvature) > 1e-12, found.curvature, 1e-12)
         move = np.clip(-found.slope / (2.0 * bend), -0.5 * reach, 0.5 * reach)
-        when = np.where(inner, np.clip(when + move, 0.0, curve.window_s), when)
+        when = np.clip(when + move, 0.0, curve.window_s)
     found = fit(curve.ft, x, when, reach, reach)
     sd = value_sd(found, noise, curve)
     bend = np.maximum(2.0 * np.abs(found.curvature), 1e-12)
     slope_sd = SLOPE_OF_VALUE * sd / reach
     outward = np.minimum(slope_sd**2 / (2.0 * bend), sd) * np.sign(found.curvature)
-    value = np.where(inner, found.value + outward, found.value)
+    value = found.value + outward
     near = np.maximum(CONSTANTS.eta_when * reach, CONSTANTS.least_half_samples * curve.step_s)
     found = fit(curve.ft, x, when, near, near)
     move = np.clip(-found.slope / np.copysign(bend, found.curvature), -0.5 * near, 0.5 * near)
-    when = np.where(inner, np.clip(when + move, 0.0, curve.window_s), when)
+    when = np.clip(when + move, 0.0, curve.window_s)
     when_u = SLOPE_OF_VALUE * value_sd(found, noise, curve) / near / bend
     when_u = np.hypot(when_u, CONSTANTS.skew * near**2 / rise_s)
     return when, value, sd, np.minimum(when_u, reach)

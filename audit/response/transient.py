@@ -73,7 +73,7 @@ def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Me
     found |= _settlings(view, path, settings)
     if sparse:
         found |= _sparse(view, found)
-    if view.noise.deadband > CONSTANTS.compressed_share:
+    if view.noise.deadband > 1.1 * CONSTANTS.compressed_share:
         found |= dict.fromkeys(SHAPE, Measured.missing(Reason.COMPRESSED))
     return found
 
@@ -229,7 +229,8 @@ def _settlings(view: View, path: Path, settings: MeasureSettings) -> dict[Quanti
     """Settling into the spec's band, 2 % and 5 %."""
     draws = settling.draw(path, view.u0, view.u1, view.stamp_u, view.seed)
     bands = dict(zip(SETTLING, (settings.band_pct, 2.0, 5.0), strict=True))
-    return {q: _settling(view, path, draws, band / 100.0) for q, band in bands.items()}
+    once = {band: _settling(view, path, draws, band / 100.0) for band in set(bands.values())}
+    return {q: once[band] for q, band in bands.items()}
 
 
 def _settling(view: View, path: Path, draws: settling.Draws, band: float) -> Measured:

@@ -55,8 +55,9 @@ def _humps(values: Array, swing: NDArray[np.int64]) -> tuple[float, float]:
     for which in np.unique(swing):
         part = values[swing == which]
         if len(part) >= CONSTANTS.hump_share * len(values):
-            ends = np.quantile(part, [0.025, 0.975])
-            low, high = min(low, float(ends[0])), max(high, float(ends[1]))
+            part = np.sort(part)
+            out = int(0.025 * len(part))
+            low, high = min(low, float(part[out])), max(high, float(part[-1 - out]))
     return low, high
 
 
