@@ -140,34 +140,13 @@ def _table(
     rows: Rows,
     path: str,
 ) -> Sheet:
-    ragged: list[Any] = []
-
-    def set_aside(row: Any) -> Literal["skip"]:
-        ragged.append((row.number, row.actual_columns))
-        return "skip"
-
     # a last row of marks: where it does not come back, a quoted cell has swallowed it
     end = source.delimiter.encode().join([_END_MARK] * len(names))
+    marked = b"%b\n%b\n" % (data[body:], end)
     places = {str(names.index(name)): name for name in asked}
+    ragged: list[tuple[int, int]] = []
     try:
-        table = pacsv.read_csv(
-            io.BytesIO(b"%b\n%b\n" % (data[body:], end)),
-            read_options=pacsv.ReadOptions(
-                use_threads=False,
-                block_size=_BLOCK_BYTES,
-                column_names=[str(place) for place in range(len(names))],
-            ),
-            parse_options=pacsv.ParseOptions(
-                delimiter=source.delimiter, newlines_in_values=True, invalid_row_handler=set_aside
-            ),
-            convert_options=pacsv.ConvertOptions(
-                column_types={place: pa.string() for place in places},
-                include_columns=list(places),
-                strings_can_be_null=True,
-                null_values=[""],
-                quoted_strings_can_be_null=True,
-            ),
-        )
+        table = _parsed(marked, len(names), list(places), source.delimiter, ragged)
     except pa.ArrowInvalid as error:
         raise ExportRefused(path, f"not readable as CSV: {error}", "export it again") from error
     columns = {name: table.column(place).combine_chunks() for place, name in places.items()}
@@ -179,6 +158,35 @@ def _table(
         )
     columns = {name: column.slice(0, count) for name, column in columns.items()}
     return _sheet(path, names, columns, count, rows, ragged)
+
+
+def _parsed(
+    data: bytes, width: int, places: list[str], delimiter: str, ragged: list[tuple[int, int]]
+) -> pa.Table:
+    """Columns by their place, as text; rows of another width go to ``ragged`` (number, width)."""
+
+    def set_aside(row: Any) -> Literal["skip"]:
+        ragged.append((row.number, row.actual_columns))
+        return "skip"
+
+    return pacsv.read_csv(
+        io.BytesIO(data),
+        read_options=pacsv.ReadOptions(
+            use_threads=False,  # else rows that are set aside come without their number
+            block_size=_BLOCK_BYTES,
+            column_names=[str(place) for place in range(width)],
+        ),
+        parse_options=pacsv.ParseOptions(
+            delimiter=delimiter, newlines_in_values=True, invalid_row_handler=set_aside
+        ),
+        convert_options=pacsv.ConvertOptions(
+            column_types={place: pa.string() for place in places},
+            include_columns=places,
+            strings_can_be_null=True,
+            null_values=[""],
+            quoted_strings_can_be_null=True,
+        ),
+    )
 
 
 def _sheet(
