@@ -1,0 +1,130 @@
+"""The ranked list as text: what the list rests on, the loops group by group, the cautions."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from zoneinfo import ZoneInfo
+
+from rich.console import Console
+from rich.text import Text
+
+from audit.cli.moments import local
+from audit.cli.screen import STYLE, indented
+from audit.records import Group, StandingWord
+from audit.reports import words
+from audit.reports.contract import Json
+
+GAP = "  "
+FIXED = {"rank": 4, "criticality": 4, "standing": 11, "since": 10, "usable_steps": 5}
+"""Widths of the columns whose content has one, characters."""
+
+NARROWEST_SERVICE = 8
+WIDEST_SERVICE = 40
+
+
+def print_ranking(console: Console, found: Json, everything: bool = False) -> None:
+    """Print a ranked list; with ``everything`` all reasons, and loops in spec one by one."""
+    _print_head(console, found)
+    loops = found["loops"]
+    columns = _columns(loops, console.width)
+    console.print(Text(_line(columns, HEADINGS), style="bold"))
+    for group in Group:
+        members = [row for row in loops if row["group"] == group.value]
+        if not members:
+            continue
+        console.print(Text(f"{words.GROUP[group]} ({len(members)})", style="bold underline"))
+        if group is Group.IN_SPEC and not everything:
+            console.print(indented(", ".join(row["tag"] for row in members), 6))
+            continue
+        for row in members:
+            _print_loop(console, row, columns, everything)
+    _print_foot(console, found)
+
+
+HEADINGS: Json = {
+    "rank": "RANK",
+    "tag": "TAG",
+    "process_unit": "UNIT",
+    "service": "SERVICE",
+    "criticality": "CRIT",
+    "standing": "STANDING",
+    "since": "SINCE",
+    "usable_steps": "STEPS",
+}
+
+
+COLUMNS = (
+    "CRIT: 5 is the most critical. SINCE: estimated date of the change. STEPS: usable setpoint "
+    "changes the standing rests on."
+)
+
+
+def _print_head(console: Console, found: Json) -> None:
+    zone = ZoneInfo(found["timezone"])
+    console.print(Text(f"{found['site']}: ranked loop list, night {found['night']}", style="bold"))
+    facts = [
+        f"Data before {local(found['cutoff'], zone)} ({zone}), newest sample "
+        f"{local(found['newest_stamp'], zone)}, ranked {local(found['computed_at'], zone)}."
+    ]
+    if found["revisions"] > 1:
+        facts.append(f"This is revision {found['revision']} of {found['revisions']}.")
+    console.print(" ".join(facts))
+    for sentence in found["quiet"]:
+        console.print(Text(f"Feed: {sentence}", style="yellow"))
+    refused = found["refused_exports"]
+    if refused:
+        files = "1 export file is" if len(refused) == 1 else f"{len(refused)} export files are"
+        console.print(Text(f"Feed: {files} refused, see `loopassay store status`.", style="yellow"))
+    console.print(_counts(found["loops"]))
+    console.print()
+
+
+def _counts(loops: Sequence[Json]) -> str:
+    counts = Counter(row["standing"] for row in loops)
+    parts = [f"{counts[word.value]} {words.STANDING[word]}" for word in StandingWord]
+    degraded = sum(row["degraded"] for row in loops)
+    return f"{len(loops)} loops: {', '.join(parts)}. Worse than their own past: {degraded}."
+
+
+def _columns(loops: Sequence[Json], width: int) -> dict[str, int]:
+    """The width of each column, so that a line fits the screen; service takes what is left."""
+
+    def longest(key: str) -> int:
+        return max([len(HEADINGS[key]), *(len(row[key]) for row in loops)])
+
+    widths = {**FIXED, "tag": longest("tag"), "process_unit": longest("process_unit")}
+    taken = sum(widths.values()) + len(GAP) * len(widths)
+    room = max(width - taken, NARROWEST_SERVICE)
+    return {**widths, "service": min(room, longest("service"), WIDEST_SERVICE)}
+
+
+def _line(columns: dict[str, int], cells: Json) -> str:
+    """One line of the list, cells cut or padded to their columns."""
+    right = ("rank", "criticality", "usable_steps")
+    parts = []
+    for key in HEADINGS:
+        text, width = str(cells[key]), columns[key]
+        if key == "service" and len(text) > width:
+            text = text[: width - 1] + "…"
+        parts.append(text.rjust(width) if key in right else text.ljust(width))
+    return GAP.join(parts).rstrip()
+
+
+def _print_loop(console: Console, row: Json, columns: dict[str, int], everything: bool) -> None:
+    standing = words.STANDING[StandingWord(row["standing"])]
+    cells = row | {"standing": standing, "since": row["since"] or "-"}
+    line = Text(_line(columns, cells), no_wrap=True)
+    line.highlight_words([standing], STYLE[row["standing"]])
+    console.print(line, overflow="ignore", crop=False)
+    reasons = [reason["text"] for reason in row["reasons"]]
+    for text in reasons if everything else reasons[:1]:
+        console.print(indented(text, 6))
+
+
+def _print_foot(console: Console, found: Json) -> None:
+    console.print()
+    console.print(words.ORDER)
+    console.print(COLUMNS)
+    for caution in found["cautions"]:
+        console.print(Text(caution, style="italic"))

@@ -1,0 +1,115 @@
+"""Numbers in, text out: as many digits as the number's own interval carries, and its unit.
+
+Of an interval's half width two significant digits are kept, and the value is written to the same
+decimal place (common practice with standard uncertainties, JCGM 100 7.2.6). With one bound, its
+distance from the value takes the place of the half width; without any, four digits are kept.
+"""
+
+from __future__ import annotations
+
+from math import floor, log10
+
+MOST_DECIMALS = 9
+
+
+def decimals(value: float, low: float | None = None, high: float | None = None) -> int:
+    """Decimal places fit for ``value`` known to lie between ``low`` and ``high``."""
+    known = [bound for bound in (low, high) if bound is not None]
+    spread = (max(known) - min(known)) / 2.0 if len(known) == 2 else 0.0
+    if len(known) == 1:
+        spread = abs(value - known[0])
+    return _places(spread, 2) if spread > 0.0 else _places(abs(value), 4)
+
+
+def _places(size: float, digits: int) -> int:
+    """Decimal places that show so many significant digits of ``size``."""
+    if size <= 0.0:
+        return 0
+    return min(max(digits - 1 - floor(log10(size)), 0), MOST_DECIMALS)
+
+
+def number(value: float, places: int) -> str:
+    """``value`` with ``places`` decimals; a zero carries no sign."""
+    text = f"{value:.{places}f}"
+    return text.removeprefix("-") if float(text) == 0.0 else text
+
+
+def plain(value: float) -> str:
+    """A number that was set, not measured (a limit, a range): as it was written."""
+    text = f"{value:.10g}"
+    return text if "e" not in text else number(value, decimals(value))
+
+
+def pair(one: float, other: float) -> tuple[str, str]:
+    """Two levels written to the same decimal, fine enough to show what lies between them."""
+    places = max(decimals(other - one), 0) if one != other else decimals(one)
+    texts = number(one, places), number(other, places)
+    while places and all(text.endswith("0") for text in texts):
+        places -= 1
+        texts = number(one, places), number(other, places)
+    return texts
+
+
+def with_unit(text: str, unit: str) -> str:
+    """A number's text and its unit, which may be empty."""
+    return f"{text} {unit}" if unit else text
+
+
+def interval(
+    value: float | None, low: float | None, high: float | None, unit: str = ""
+) -> str | None:
+    """A measured number with its 95 % interval, in words where only a bound is known.
+
+    ``12.3 s (11.9 to 12.8)``, ``longer than 600 s``, ``at most 0.12``; None where nothing is known.
+    """
+    if value is not None:
+        places = decimals(value, low, high)
+        text = with_unit(number(value, places), unit)
+        if low is None and high is None:
+            return text
+        return f"{text} ({_bounds(low, high, places)})"
+    if low is not None and high is not None:
+        return with_unit(_bounds(low, high, decimals(low, low, high)), unit)
+    if low is not None:
+        words = "longer than" if unit == "s" else "more than"
+        return f"{words} {with_unit(_lone(low), unit)}"
+    if high is not None:
+        return f"at most {with_unit(_lone(high), unit)}"
+    return None
+
+
+def _lone(bound: float) -> str:
+    """A bound without a partner: three significant digits, no zeros behind."""
+    return plain(float(number(bound, _places(abs(bound), 3))))
+
+
+def _bounds(low: float | None, high: float | None, places: int) -> str:
+    if low is None or high is None:
+        bound, words = (high, "at most") if low is None else (low, "at least")
+        return f"{words} {number(bound or 0.0, places)}"
+    return f"{number(low, places)} to {number(high, places)}"
+
+
+def share(part: int, whole: int) -> float | None:
+    """part / whole, or None where the whole is nothing."""
+    return part / whole if whole > 0 else None
+
+
+def percent(fraction: float | None) -> str:
+    """A share as whole percent; a share that is not nothing is never shown as 0 %, nor one that is
+    not all as 100 %."""
+    if fraction is None:
+        return "-"
+    rounded = round(100.0 * fraction)
+    if rounded == 0 and fraction > 0.0:
+        return "<1 %"
+    if rounded == 100 and fraction < 1.0:
+        return ">99 %"
+    return f"{rounded} %"
+
+
+def size(count: int) -> str:
+    """A number of bytes in kB or MB (powers of ten)."""
+    if count < 1_000_000:
+        return f"{count / 1000.0:.1f} kB"
+    return f"{count / 1_000_000.0:.1f} MB"

@@ -1,0 +1,88 @@
+"""What the store holds, and what became of every cell read, as a plain dict."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Mapping, Sequence
+from functools import reduce
+
+from audit.records import CellAccount, Spec
+from audit.reports import contract
+from audit.reports.contract import Json
+from audit.run_report import add
+from audit.store import Store, queries
+from audit.store.entries import NightInfo, RunInfo, SeenExport, StoredLoop
+
+
+def status(store: Store) -> Json:
+    """Schema, site, counts, nights, the last runs, and the account of cells of every export file.
+
+    Where the store has no schema of this program yet, only ``url`` and ``schema`` are there.
+    """
+    schema = store.schema()
+    head = {"url": store.url, "schema": {"current": schema.current, "head": schema.head}}
+    if schema.current != schema.head:
+        return head
+    with store.read() as session:
+        exports = queries.exports(session)
+        cells = reduce(add, (seen.account for seen in exports), CellAccount())
+        return head | {
+            "site": queries.site_name(session),
+            "loops": _loops(queries.loops(session, include_retired=True)),
+            "specs": _specs(queries.specs(session)),
+            "steps": queries.step_counts(session),
+            "nights": _nights(queries.nights(session)),
+            "exports": dict(Counter(seen.state for seen in exports)),
+            "runs": [_run(run) for run in queries.runs(session)],
+            "files": [_file(seen) for seen in exports],
+            "cells": contract.account(cells),
+        }
+
+
+def _loops(stored: Sequence[StoredLoop]) -> Json:
+    retired = sum(row.retired_at is not None for row in stored)
+    return {"current": len(stored) - retired, "retired": retired}
+
+
+def _specs(specs: Mapping[str, Sequence[Spec]]) -> Json:
+    return {
+        "loops": sum(bool(rows) for rows in specs.values()),
+        "versions": sum(len(rows) for rows in specs.values()),
+    }
+
+
+def _nights(nights: Sequence[NightInfo]) -> Json:
+    days = sorted({info.night for info in nights})
+    return {
+        "count": len(days),
+        "first": days[0].isoformat() if days else None,
+        "last": days[-1].isoformat() if days else None,
+    }
+
+
+def _run(run: RunInfo) -> Json:
+    return {
+        "kind": run.kind,
+        "started_at": contract.stamp(run.started_at),
+        "ended_at": contract.stamp(run.ended_at),
+        "state": run.state,
+        "counts": dict(run.counts),
+        "error": run.error,
+    }
+
+
+def _file(seen: SeenExport) -> Json:
+    return {
+        "path": seen.path,
+        "source": seen.source,
+        "state": seen.state,
+        "reason": seen.reason,
+        "size": seen.size,
+        "revision": seen.revision,
+        "first": contract.stamp(seen.first_us),
+        "last": contract.stamp(seen.last_us),
+        "newest_good": contract.stamp(seen.newest_good_us),
+        "future_stamps": seen.future_stamps,
+        "read_at": contract.stamp(seen.read_at),
+        "cells": contract.account(seen.account),
+    }

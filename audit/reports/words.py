@@ -1,0 +1,123 @@
+"""Codes in, words out: what each code of the contract is called in front of a person.
+
+Names and sentences only; numbers are written by ``figures.py``. The codes are those of
+``audit.records``; a test holds that every one of them has its words here and in README.md.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import NamedTuple
+
+from audit.records import ChangeKind, Group, Outcome, Quantity, Reason, StandingWord
+
+
+class Term(NamedTuple):
+    """A quantity's name and unit; ``EU`` in the unit stands for the loop's engineering unit."""
+
+    name: str
+    unit: str
+
+
+QUANTITY: Mapping[Quantity, Term] = {
+    Quantity.RISE_TIME: Term("rise time", "s"),
+    Quantity.PEAK_TIME: Term("peak time", "s"),
+    Quantity.SETTLING_TIME: Term("settling time", "s"),
+    Quantity.SETTLING_TIME_2PCT: Term("settling time, 2 %", "s"),
+    Quantity.SETTLING_TIME_5PCT: Term("settling time, 5 %", "s"),
+    Quantity.OVERSHOOT: Term("overshoot", "%"),
+    Quantity.UNDERSHOOT: Term("undershoot", "%"),
+    Quantity.STEADY_STATE_ERROR: Term("steady-state error", "EU"),
+    Quantity.DEAD_TIME: Term("apparent dead time", "s"),
+    Quantity.DECAY_RATIO: Term("decay ratio", ""),
+    Quantity.DAMPING_RATIO: Term("damping ratio", ""),
+    Quantity.NATURAL_FREQUENCY: Term("natural frequency", "rad/s"),
+    Quantity.DAMPED_PERIOD: Term("damped period", "s"),
+    Quantity.IAE: Term("integral of absolute error", "EU·s"),
+    Quantity.OUTPUT_TRAVEL: Term("controller output travel", "% of output"),
+    Quantity.OUTPUT_OVERSHOOT: Term("controller output overshoot", "%"),
+    Quantity.OUTPUT_REVERSALS: Term("controller output reversals", ""),
+    Quantity.OUTPUT_SATURATED: Term("controller output saturated", "%"),
+}
+
+STANDING: Mapping[StandingWord, str] = {
+    StandingWord.OUT_OF_SPEC: "out of spec",
+    StandingWord.IN_SPEC: "in spec",
+    StandingWord.UNDECIDED: "undecided",
+    StandingWord.UNSEEN: "unseen",
+}
+
+OUTCOME: Mapping[Outcome, str] = {
+    Outcome.IN_SPEC: "in spec",
+    Outcome.OUT_OF_SPEC: "out of spec",
+    Outcome.UNDECIDED: "undecided",
+    Outcome.NOT_MEASURED: "not measured",
+    Outcome.NOT_APPLICABLE: "not applicable",
+}
+
+GROUP: Mapping[Group, str] = {
+    Group.OUT_AND_CHANGED: "Out of spec, and worse than the loop itself used to be",
+    Group.DEGRADING: "Degrading: worse than the loop used to be, not out of spec",
+    Group.NEVER_MET: "Out of spec, but not changed: a question for the engineer, not the crew",
+    Group.UNDECIDED: "Undecided: the data cannot tell",
+    Group.UNSEEN: "Unseen: no usable setpoint change in the period",
+    Group.IN_SPEC: "In spec",
+}
+
+KIND: Mapping[ChangeKind, str] = {
+    ChangeKind.STEP: "step",
+    ChangeKind.STAIRCASE: "staircase",
+    ChangeKind.RAMP: "ramp",
+    ChangeKind.MOVING: "moving",
+}
+
+REASON: Mapping[Reason, str] = {
+    Reason.TOO_SMALL: "the change is inside the noise, or smaller than the spec's minimum",
+    Reason.NOT_FOLLOWING: "not in an automatic mode, or the setpoint tracks the process variable",
+    Reason.UNSETTLED_BEFORE: "the loop was not at rest before the change",
+    Reason.CUT_SHORT: "the next move came before it settled",
+    Reason.OUTPUT_SATURATED: "the controller output was at its limit",
+    Reason.DISTURBED: "a disturbance that the change does not explain",
+    Reason.OSCILLATING: "a sustained oscillation before and after",
+    Reason.GAP: "a gap in the record",
+    Reason.BAD_QUALITY: "bad quality in the record",
+    Reason.TOO_SPARSE: "too few samples",
+    Reason.COMPRESSED: "the historian's deadband is too large for the change",
+    Reason.WINDOW_INCOMPLETE: "the record ends inside the window",
+    Reason.NO_RESPONSE: "the process variable did not answer",
+    Reason.NO_PEAK: "there is no peak beyond the noise",
+    Reason.NO_RANGE: "the loop's range is not in the register",
+    Reason.NO_OUTPUT: "the loop has no controller output tag",
+    Reason.NEEDS_MODEL: "only a model of the response could give it",
+    Reason.NOISY: "the noise is too large for it",
+    Reason.AVERAGING: "an averaging level is meant to float",
+}
+
+CAUTIONS = (
+    "Loopassay advises and changes nothing in the plant. Changes to tuning, setpoints or equipment "
+    "go through the site's own procedures, local codes and licensed people.",
+    "It judges how a loop follows its setpoint: not how it rejects disturbances, and not safety "
+    "functions.",
+)
+
+ORDER = (
+    "Order: by the groups above; within the first three by criticality times distance from the "
+    "limit (or, when degrading, from the loop's own past), in the others by criticality. 5 is the "
+    "most critical."
+)
+
+
+def unit_of(quantity: Quantity, eu: str) -> str:
+    """The unit of a quantity on a loop whose engineering unit is ``eu`` ("EU" where unknown)."""
+    return QUANTITY[quantity].unit.replace("EU", eu or "EU")
+
+
+def name_of(code: str) -> str:
+    """A quantity's name from its code; a code this version does not know stays itself."""
+    names = {quantity.value: term.name for quantity, term in QUANTITY.items()}
+    return names.get(code, code)
+
+
+def reason_of(code: str) -> str:
+    """A reason's words from its code; a code this version does not know stays itself."""
+    return {reason.value: words for reason, words in REASON.items()}.get(code, code)
