@@ -10,7 +10,13 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 
-from audit.records import Measured, Outcome
+from audit.records import Measured, Outcome, Quantity
+
+PEAK_BOUND = (Quantity.PEAK_TIME, Quantity.DECAY_RATIO)
+"""Quantities that without a peak do not apply, which counts as met."""
+
+SIGNED = (Quantity.STEADY_STATE_ERROR,)
+"""Quantities with a sign, whose limit is a maximum of their size."""
 
 COVERAGE = 0.95
 FEWEST_FOR_ORDER = 6

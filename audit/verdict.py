@@ -6,7 +6,7 @@ limit, out of spec only if none of it does. More uncertainty can only make a ver
 
 from __future__ import annotations
 
-from audit.evidence import decide
+from audit.evidence import PEAK_BOUND, SIGNED, decide
 from audit.records import (
     LIMITED,
     ChangeKind,
@@ -21,13 +21,7 @@ from audit.records import (
     Verdict,
 )
 
-__all__ = ["PEAK_BOUND", "SIGNED", "decide", "judge"]
-
-PEAK_BOUND = (Quantity.PEAK_TIME, Quantity.DECAY_RATIO)
-"""Quantities that without a peak do not apply, which counts as met."""
-
-SIGNED = (Quantity.STEADY_STATE_ERROR,)
-"""Quantities with a sign, whose limit is a maximum of their size."""
+__all__ = ["decide", "judge"]
 
 
 def judge(

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import replace
 from datetime import UTC, datetime
 from statistics import NormalDist
+from typing import Any
 
 import numpy as np
 import pytest
@@ -224,6 +225,16 @@ def test_order_statistics_cover_95_percent(count: int) -> None:
 def test_order_ranks_of_the_tables() -> None:
     """Ranks of the sign test's interval, tables of nonparametric statistics (from memory)."""
     assert [order_rank(n) for n in (6, 8, 9, 10, 12, 15, 20)] == [1, 1, 2, 2, 3, 4, 6]
+
+
+@given(st.lists(st.floats(-1e3, 1e3), min_size=6, max_size=60, unique=True))
+def test_interval_of_a_median_against_scipy(values: list[float]) -> None:
+    """scipy.stats.quantile_test inverts the same sign test."""
+    level = median_of([Measured(value) for value in values], signed=True)
+    assert level is not None
+    interval: Any = stats.quantile_test(values, p=0.5).confidence_interval(0.95)
+    assert (level.low, level.high) == (interval.low, interval.high)
+    assert level.value == pytest.approx(np.median(values))
 
 
 def exact(*values: float) -> list[Measured]:
