@@ -11,6 +11,7 @@ from sqlalchemy.orm import Session
 
 from audit.errors import StoreUnready, UnknownLoop
 from audit.records import Loop, Spec
+from audit.store.bulk import add, portions
 from audit.store.entries import RegisterChanges
 from audit.store.payload import Columns, loop_values
 from audit.store.tables import LoopRow, LoopVersionRow, SiteFileRow, SiteRow, SpecVersionRow
@@ -68,8 +69,7 @@ def _admit(s: Session, hashes: Mapping[str, str], now: datetime, accept_older: b
         {"kind": k, "number": len(seen[k]) + 1, "content_hash": hashes[k], "seen_at": now}
         for k in changed
     ]
-    if new:
-        s.execute(insert(SiteFileRow), new)
+    add(s, SiteFileRow, new)
 
 
 def _enter_loops(s: Session, loops: Sequence[Loop], now: datetime) -> dict[str, int]:
@@ -94,8 +94,7 @@ def _enter_loops(s: Session, loops: Sequence[Loop], now: datetime) -> dict[str, 
     counts["loops_retired"] = len(retired)
     _mark_current(s, retired, "retired_at", now)
     _mark_current(s, replaced, "superseded_at", now)
-    if rows:
-        s.execute(insert(LoopVersionRow), rows)
+    add(s, LoopVersionRow, rows)
     return counts
 
 
@@ -113,18 +112,18 @@ def _enter_tags(s: Session, tags: Sequence[str]) -> dict[str, int]:
     known = {row.tag: row.id for row in s.execute(query)}
     new = [{"tag": tag} for tag in tags if tag not in known]
     if new:
-        s.execute(insert(LoopRow), new)
+        add(s, LoopRow, new)
         known = {row.tag: row.id for row in s.execute(query)}
     return known
 
 
 def _mark_current(s: Session, loop_ids: list[int], column: str, now: datetime) -> None:
     """Sets a date on the current version of some loops."""
-    for first in range(0, len(loop_ids), 500):
+    for some in portions(loop_ids):
         s.execute(
             update(LoopVersionRow)
             .where(
-                LoopVersionRow.loop_id.in_(loop_ids[first : first + 500]),
+                LoopVersionRow.loop_id.in_(some),
                 LoopVersionRow.superseded_at.is_(None),
             )
             .values({column: now})
@@ -161,8 +160,7 @@ def _enter_specs(s: Session, specs: Sequence[Spec], now: datetime) -> tuple[int,
             )
             .values(withdrawn_at=now)
         )
-    if rows:
-        s.execute(insert(SpecVersionRow), rows)
+    add(s, SpecVersionRow, rows)
     return len(rows), len(open_rows)
 
 

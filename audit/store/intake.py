@@ -11,6 +11,7 @@ from sqlalchemy import delete, insert, select, update
 from sqlalchemy.orm import Session
 
 from audit.records import CellAccount, ExportFile, ExportRead, to_us
+from audit.store.bulk import add, portions
 from audit.store.tables import CoverageRow, ExportRow
 
 
@@ -80,12 +81,9 @@ def refuse_export(s: Session, file: ExportFile, reason: str, now: datetime) -> N
 
 def finish_exports(s: Session, ids: Iterable[int], now: datetime) -> None:
     """Marks exports as taken: all their loops are saved."""
-    wanted = list(ids)
-    for first in range(0, len(wanted), 500):
+    for some in portions(list(ids)):
         s.execute(
-            update(ExportRow)
-            .where(ExportRow.id.in_(wanted[first : first + 500]))
-            .values(state="taken", read_at=now)
+            update(ExportRow).where(ExportRow.id.in_(some)).values(state="taken", read_at=now)
         )
 
 
@@ -139,4 +137,4 @@ def _cover(s: Session, export_id: int, read: ExportRead) -> None:
     if read.first_us is None or read.last_us is None or not read.named:
         return
     span = {"export_id": export_id, "from_us": read.first_us, "to_us": read.last_us}
-    s.execute(insert(CoverageRow), [span | {"tag": tag} for tag in sorted(set(read.named))])
+    add(s, CoverageRow, [span | {"tag": tag} for tag in sorted(set(read.named))])

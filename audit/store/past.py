@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Collection, Iterator, Sequence
+from collections.abc import Callable, Collection, Sequence
 from datetime import date
 from typing import Any, TypeVar
 
@@ -22,6 +22,7 @@ from audit.records import (
     Step,
     Verdict,
 )
+from audit.store.bulk import portions
 from audit.store.codec import decode
 from audit.store.entries import StoredStep
 from audit.store.payload import StoredMeasured, change_of, measured_of, reasons_of
@@ -37,7 +38,6 @@ from audit.store.tables import (
 
 T = TypeVar("T")
 
-_AT_ONCE = 500
 _SAME_CURVE = and_(
     CurveRow.loop_id == MeasurementRow.loop_id,
     CurveRow.at_us == MeasurementRow.at_us,
@@ -151,15 +151,10 @@ def _by_tag(
 ) -> dict[str, list[T]]:
     """Runs a query whose first column is the tag for some tags, a few hundred at once."""
     found: dict[str, list[T]] = {tag: [] for tag in tags}
-    for some in _portions(list(found)):
+    for some in portions(list(found)):
         for row in s.execute(query.where(LoopRow.tag.in_(some))):
             found[row[0]].append(record_of(row))
     return found
-
-
-def _portions(items: Sequence[str]) -> Iterator[Sequence[str]]:
-    for first in range(0, len(items), _AT_ONCE):
-        yield items[first : first + _AT_ONCE]
 
 
 def history(

@@ -12,6 +12,7 @@ from sqlalchemy.orm import Session
 
 from audit.errors import UnknownLoop
 from audit.records import Standing, to_us
+from audit.store.bulk import add
 from audit.store.engine import compact_json
 from audit.store.payload import standing_detail
 from audit.store.tables import LoopRow, NightListRow, RunRow, StandingRow
@@ -48,8 +49,7 @@ def save_night(
         .values(night=night, revision=revision, cutoff=cutoff, computed_at=now, digest=digest)
         .returning(NightListRow.id)
     ).scalar_one()
-    if rows:
-        s.execute(insert(StandingRow), [row | {"night_list_id": list_id} for row in rows])
+    add(s, StandingRow, [row | {"night_list_id": list_id} for row in rows])
     return revision
 
 

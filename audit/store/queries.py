@@ -18,6 +18,7 @@ from audit.records import (
     Standing,
     StandingWord,
 )
+from audit.store.bulk import portions
 from audit.store.entries import NightInfo, RunInfo, SeenExport, StoredLoop
 from audit.store.past import (
     curve,
@@ -69,8 +70,6 @@ __all__ = [
     "tag_sources",
     "touched",
 ]
-
-_AT_ONCE = 500
 
 
 def site_name(s: Session) -> str | None:
@@ -204,11 +203,10 @@ def coverage(
     if tags is None:
         found = [Coverage(*row) for row in s.execute(query)]
     else:
-        wanted = sorted(tags)
         found = [
             Coverage(*row)
-            for first in range(0, len(wanted), _AT_ONCE)
-            for row in s.execute(query.where(CoverageRow.tag.in_(wanted[first : first + _AT_ONCE])))
+            for some in portions(sorted(tags))
+            for row in s.execute(query.where(CoverageRow.tag.in_(some)))
         ]
     return sorted(found, key=lambda one: (one.tag, one.from_us, one.path))
 

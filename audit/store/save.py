@@ -9,11 +9,12 @@ from dataclasses import dataclass
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import delete, insert, select, tuple_, update
+from sqlalchemy import delete, select, tuple_, update
 from sqlalchemy.orm import Session
 
 from audit.errors import UnknownLoop
 from audit.records import LoopResult, MeasuredStep, Record
+from audit.store.bulk import add, portions
 from audit.store.codec import Packed, pack
 from audit.store.engine import compact_json
 from audit.store.entries import SavedLoop
@@ -26,8 +27,6 @@ from audit.store.tables import (
     MeasurementRow,
     VerdictRow,
 )
-
-_AT_ONCE = 500
 
 
 @dataclass
@@ -70,12 +69,9 @@ class _Fresh:
     verdicts: list[dict[str, Any]]
 
     def insert(self, s: Session) -> None:
-        if self.curves:
-            s.execute(insert(CurveRow), self.curves)
-        if self.measurements:
-            s.execute(insert(MeasurementRow), self.measurements)
-        if self.verdicts:
-            s.execute(insert(VerdictRow), self.verdicts)
+        add(s, CurveRow, self.curves)
+        add(s, MeasurementRow, self.measurements)
+        add(s, VerdictRow, self.verdicts)
 
 
 def _fresh(
@@ -109,7 +105,7 @@ def _fresh(
 
 def _past(s: Session, loop_id: int, stamps: Sequence[int]) -> dict[int, _Past]:
     past: dict[int, _Past] = defaultdict(_Past)
-    for first in range(0, len(stamps), _AT_ONCE):
+    for some in portions(stamps):
         rows = s.execute(
             select(
                 MeasurementRow.at_us,
@@ -122,7 +118,7 @@ def _past(s: Session, loop_id: int, stamps: Sequence[int]) -> dict[int, _Past]:
             .join_from(MeasurementRow, CurveRow, _same_curve())
             .where(
                 MeasurementRow.loop_id == loop_id,
-                MeasurementRow.at_us.in_(stamps[first : first + _AT_ONCE]),
+                MeasurementRow.at_us.in_(some),
             )
         )
         for row in rows:
@@ -144,12 +140,12 @@ def _same_curve() -> Any:
 
 
 def _supersede(s: Session, loop_id: int, stamps: Sequence[int], now: datetime) -> None:
-    for first in range(0, len(stamps), _AT_ONCE):
+    for some in portions(stamps):
         s.execute(
             update(MeasurementRow)
             .where(
                 MeasurementRow.loop_id == loop_id,
-                MeasurementRow.at_us.in_(stamps[first : first + _AT_ONCE]),
+                MeasurementRow.at_us.in_(some),
                 MeasurementRow.superseded_at.is_(None),
             )
             .values(superseded_at=now)
@@ -203,15 +199,14 @@ def _replace_edges(s: Session, loop_id: int, result: LoopResult) -> None:
             }
         )
     gone = [(row["border_us"], row["side"]) for row in rows] + list(result.dropped_edges)
-    for first in range(0, len(gone), _AT_ONCE):
+    for some in portions(gone):
         s.execute(
             delete(EdgeRow).where(
                 EdgeRow.loop_id == loop_id,
-                tuple_(EdgeRow.border_us, EdgeRow.side).in_(gone[first : first + _AT_ONCE]),
+                tuple_(EdgeRow.border_us, EdgeRow.side).in_(some),
             )
         )
-    if rows:
-        s.execute(insert(EdgeRow), rows)
+    add(s, EdgeRow, rows)
 
 
 def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
@@ -230,11 +225,6 @@ def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
         for kept in result.days
     ]
     days = [row["day"] for row in rows]
-    for first in range(0, len(days), _AT_ONCE):
-        s.execute(
-            delete(DayRow).where(
-                DayRow.loop_id == loop_id, DayRow.day.in_(days[first : first + _AT_ONCE])
-            )
-        )
-    if rows:
-        s.execute(insert(DayRow), rows)
+    for some in portions(days):
+        s.execute(delete(DayRow).where(DayRow.loop_id == loop_id, DayRow.day.in_(some)))
+    add(s, DayRow, rows)
