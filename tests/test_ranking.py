@@ -210,6 +210,15 @@ def test_no_peak_counts_as_met(
     assert (found.standing, found.limits[0].outcome) == (word, outcome)
 
 
+def test_a_decay_ratio_that_is_only_bounded() -> None:
+    bounded = Measured(low=0.0, high=0.2, how="direct", why=Reason.NO_PEAK)
+    steps = steps_of(DECAY, [bounded] * 7)
+    assert standing(steps, spec(decay_ratio=0.25)).standing is StandingWord.IN_SPEC
+    found = standing(steps, spec(decay_ratio=0.1))
+    assert found.standing is StandingWord.UNDECIDED
+    assert "Decay ratio: median 0.0 to 0.2" in text(found, "decay_ratio_undecided")
+
+
 def test_only_the_period_and_what_ended_before_the_cut_off_counts() -> None:
     old = [step(24.0 * 30 + 1, {SETTLING: near(84.0)})]
     late = [step(0.1, {SETTLING: near(84.0)})]

@@ -28,7 +28,7 @@ from audit.trend import assess, cusum
 from audit.trend.baseline import Baseline, baseline_of
 from audit.trend.cusum import Watch, watch
 from audit.trend.date import change_point
-from audit.trend.series import AT_LEAST, VALUE, Scale, Series, series_of, size_of
+from audit.trend.series import AT_LEAST, AT_MOST, VALUE, Scale, Series, series_of, size_of
 
 LOOP = Loop("FIC-1", "pv", "sp", Windows(0, 0, 0), range_low=0.0, range_high=100.0, eu="m3/h")
 RISE, SETTLING = Quantity.RISE_TIME, Quantity.SETTLING_TIME
@@ -328,7 +328,7 @@ def test_a_bound_below_the_baseline_says_nothing() -> None:
 def test_at_most_is_never_worse() -> None:
     """A decay ratio that is only bounded (no second peak) is no sign of more oscillation."""
     values = [past(at, decay_ratio=0.05) for at in range(30)]
-    bounded = Measured(high=0.6, how="direct", why=Reason.NO_PEAK)
+    bounded = Measured(low=0.0, high=0.6, how="direct", why=Reason.NO_PEAK)
     steps = [*values, *(past(30 + at, decay_ratio=bounded) for at in range(20))]
     assert not assess(steps, LOOP, LIMITED).quantities[DECAY].beyond_chance
     worse = [*values, *(past(30 + at, decay_ratio=0.4) for at in range(20))]
@@ -430,10 +430,12 @@ def test_limited_quantities_come_first() -> None:
 
 def test_series_marks_bounds() -> None:
     cut = Measured.longer_than(30.0, "direct", Reason.CUT_SHORT)
-    series = series_of([past(0, rise_time_s=10.0), past(1, rise_time_s=cut)], RISE)
-    assert series.bound.tolist() == [VALUE, AT_LEAST]
-    assert series.x == pytest.approx(np.log([10.0, 30.0]))
-    assert series.u[1] == 0.0
+    most = Measured(low=0.0, high=20.0, why=Reason.NO_PEAK)
+    given: tuple[Measured | float, ...] = (10.0, cut, most)
+    series = series_of([past(at, rise_time_s=one) for at, one in enumerate(given)], RISE)
+    assert series.bound.tolist() == [VALUE, AT_LEAST, AT_MOST]
+    assert series.x == pytest.approx(np.log([10.0, 30.0, 20.0]))
+    assert series.u[1:].tolist() == [0.0, 0.0]
 
 
 def test_two_thousand_steps_are_quick() -> None:

@@ -62,7 +62,13 @@ def evidence_of(steps: Sequence[PastStep], cutoff_us: int, rule: StandingRule) -
 
 def unanswered(step: PastStep) -> bool:
     """Whether the process variable did not answer the change."""
-    return any(measured.why is Reason.NO_RESPONSE for measured in step.measured.values())
+    return has(step, Reason.NO_RESPONSE)
+
+
+def has(step: PastStep, why: Reason) -> bool:
+    """Whether a code stands with the step or with a quantity of it that can be limited."""
+    found = (step.measured.get(quantity) for quantity in LIMITED)
+    return why in step.set_aside or any(one is not None and one.why is why for one in found)
 
 
 def limit_standings(

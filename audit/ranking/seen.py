@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Sequence
 
-from audit.ranking.limits import UNANSWERED, UNANSWERED_OF, Evidence, unanswered
+from audit.ranking.limits import UNANSWERED, UNANSWERED_OF, Evidence, has, unanswered
 from audit.ranking.sentences import counted, plural, share
 from audit.records import ListReason, PastStep, Reason
 
@@ -55,7 +55,7 @@ def _unanswered(evidence: Evidence) -> list[ListReason]:
 
 
 def _often(seen: Sequence[PastStep], why: Reason, what: str) -> list[ListReason]:
-    count = sum(_has(step, why) for step in seen)
+    count = sum(has(step, why) and not unanswered(step) for step in seen)
     if count < OFTEN or count < OFTEN_SHARE * len(seen):
         return []
     text = f"{count} of {plural(len(seen), 'setpoint change')} {what}."
@@ -82,9 +82,3 @@ def _whys(seen: Sequence[PastStep]) -> str:
     first = Counter(step.set_aside[0] for step in seen if not step.usable and step.set_aside)
     counts = sorted(first.items(), key=lambda item: (-item[1], item[0].value))
     return f": {counted(counts)}" if counts else ""
-
-
-def _has(step: PastStep, why: Reason) -> bool:
-    if why in step.set_aside:
-        return True
-    return not unanswered(step) and any(m.why is why for m in step.measured.values())

@@ -128,7 +128,7 @@ def _note(state: Watch, chosen: NDArray[np.int64], loop: Loop, recent: MedianLev
     """What the comparison could not do, in words."""
     notes = []
     if recent.longer_than:
-        notes.append("the recent ones took at least that")
+        notes.append("the recent level is at least that")
     then = [state.series.steps[index] for index in state.baseline.taken]
     now = [state.series.steps[int(index)] for index in chosen]
     if now and not state.baseline.by_direction:

@@ -135,9 +135,10 @@ def _place(measured: Measured) -> tuple[float, float, float, int]:
     """Place, ends of the interval (equal where they tell nothing), and what the place is."""
     value, low, high = measured.value, measured.low, measured.high
     if value is None:
-        if low is not None:
-            return low, low, low, AT_LEAST
-        return high or 0.0, 0.0, 0.0, AT_MOST
+        if high is not None:
+            return high, high, high, AT_MOST
+        least = low or 0.0
+        return least, least, least, AT_LEAST
     if low is None or high is None:
         return value, value, value, VALUE
     return value, low, high, VALUE
