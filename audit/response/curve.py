@@ -45,7 +45,7 @@ def build(record: Record, change: SetpointChange, settings: MeasureSettings) -> 
     pv = pv.only_good()
     t = (pv.t_us - change.at_us) / SECOND_US
     v = (pv.value - change.sp_from) / change.size_eu
-    keep = ~spikes(v)
+    keep = ~spikes(t, v)
     t, v = t[keep], v[keep]
     hold = settings.reading.pv_between is Between.HOLD
     before_s = settings.before_us / SECOND_US
@@ -63,8 +63,12 @@ def typical_interval(t: Array, from_s: float, to_s: float) -> float:
     return float(np.quantile(np.diff(inside), 0.25, method="lower"))
 
 
-def spikes(v: Array) -> NDArray[np.bool_]:
-    """Samples that stand out alone from neighbours that agree; nothing else near stands out."""
+def spikes(t: Array, v: Array) -> NDArray[np.bool_]:
+    """Samples that stand out alone and briefly from neighbours that agree.
+
+    Nothing else near stands out, and the next sample comes soon: the top of a peak that was
+    reported once and then held is no spike.
+    """
     flag = np.zeros(len(v), np.bool_)
     if len(v) < 7:
         return flag
@@ -76,7 +80,9 @@ def spikes(v: Array) -> NDArray[np.bool_]:
     near = np.max([padded[3 + k : 3 + k + len(off)] for k in (-3, -2, 2, 3)], axis=0)
     least = max(CONSTANTS.spike_sd * sd, CONSTANTS.spike_share)
     agree = np.abs(v[2:] - v[:-2]) < 0.25 * off
-    flag[1:-1] = (off > least) & (off > 4.0 * near) & agree
+    length = np.diff(t)
+    brief = length[1:] <= 1.5 * np.median(length)
+    flag[1:-1] = (off > least) & (off > 4.0 * near) & agree & brief
     return flag
 
 

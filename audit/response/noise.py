@@ -47,7 +47,10 @@ class Noise:
 
 
 def estimate(curve: Curve) -> Noise:
-    """Noise from the quietest of: before the change, the last half, the last quarter."""
+    """Noise from the quietest of: before the change, the last half, the last quarter.
+
+    The hops of a level that is reported by exception are the deadband's, not noise.
+    """
     quantum = _quantum(curve.v)
     deadband = _deadband(curve)
     end = curve.window_s
@@ -61,7 +64,9 @@ def estimate(curve: Curve) -> Noise:
     pooled = [r for r, sd in zip(found, sds, strict=True) if sd <= 1.5 * least + ALIKE]
     longest = max(pooled, key=len)
     sd = _scale(longest)
-    return Noise(sd, _correlation(longest, sd), quantum, deadband)
+    rho = _correlation(longest, sd)
+    own = float(np.sqrt(max(sd**2 - deadband**2 / 3.0, (0.2 * sd) ** 2)))
+    return Noise(own, rho, quantum, deadband)
 
 
 def _residual(curve: Curve, lo: float, hi: float) -> Array:

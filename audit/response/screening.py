@@ -41,6 +41,8 @@ SHAPE = (
 FROM_MODEL = (Quantity.DEAD_TIME, Quantity.DAMPING_RATIO, Quantity.NATURAL_FREQUENCY)
 SPARE_LONGER = (Reason.UNSETTLED_BEFORE, Reason.OUTPUT_SATURATED)
 """A "longer than" stands in spite of these."""
+CAUSES = (Reason.GAP, Reason.BAD_QUALITY, Reason.OSCILLATING)
+FOLLOW = (Reason.NOISY, Reason.NO_PEAK, Reason.TOO_SPARSE)
 
 
 @dataclass(frozen=True)
@@ -154,9 +156,14 @@ def _swing(curve: Curve, lo: float, hi: float) -> tuple[float, float | None, boo
 def spoil(
     measured: dict[Quantity, Measured], quantities: tuple[Quantity, ...], why: Reason
 ) -> None:
-    """Put the reason in the place of what it spoils; what is missing already keeps its own."""
+    """Put the reason in the place of what it spoils.
+
+    What is missing already keeps its own reason, unless that only follows from this one: an
+    oscillation looks like noise, a silence like sparse samples.
+    """
     for quantity in quantities:
         now = measured[quantity]
         longer = now.value is None and now.low is not None and now.high is None
-        if now.known and not (longer and why in SPARE_LONGER):
+        follows = why in CAUSES and now.why in FOLLOW
+        if follows or (now.known and not (longer and why in SPARE_LONGER)):
             measured[quantity] = Measured.missing(why)

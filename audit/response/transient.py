@@ -236,7 +236,8 @@ def _settlings(view: View, path: Path, settings: MeasureSettings) -> dict[Quanti
 def _settling(view: View, path: Path, draws: settling.Draws, band: float) -> Measured:
     if CONSTANTS.compressed_band * view.noise.deadband > band:
         return Measured.missing(Reason.COMPRESSED)
-    if band < CONSTANTS.band_sd * path.sd:
+    noise_sd = float(np.sqrt(max(path.sd**2 - view.noise.coarse**2, 0.0)))
+    if band < CONSTANTS.band_sd * noise_sd:
         return Measured.missing(Reason.NOISY)
     dwell = CONSTANTS.dwell_samples * view.curve.step_s
     values, known, swing = settling.settle(path, draws, band, view.end_s, dwell)

@@ -1,0 +1,170 @@
+"""What the recording does to a measurement: stamps, deadband, quantisation, cutting the record."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from audit.records import (
+    Between,
+    Measured,
+    Quantity,
+    Reading,
+    Reason,
+    Record,
+    Role,
+    Samples,
+)
+from audit.response import measure
+from reference import second_order, steps
+
+SHAPE = (Quantity.RISE_TIME, Quantity.OVERSHOOT, Quantity.SETTLING_TIME_5PCT)
+
+
+def exact(z: float) -> dict[Quantity, float]:
+    return {
+        Quantity.RISE_TIME: second_order.rise_time(z),
+        Quantity.OVERSHOOT: second_order.overshoot(z),
+        Quantity.SETTLING_TIME_5PCT: second_order.settling_time(0.05, z),
+    }
+
+
+def holds(found: Measured, truth: float) -> bool:
+    assert found.low is not None
+    assert found.high is not None
+    return found.low <= truth <= found.high
+
+
+def by_exception(y: steps.Array, t: steps.Array, deadband: float, longest_s: float) -> list[int]:
+    """Which samples an exception-reporting historian keeps (common practice, no source)."""
+    kept = [0]
+    for i in range(1, len(t)):
+        if abs(y[i] - y[kept[-1]]) > deadband or t[i] - t[kept[-1]] >= longest_s:
+            kept.append(i)
+    return kept
+
+
+def reported(deadband: float, seed: int, between: Between = Between.HOLD) -> steps.Made:
+    """z = 0.5, w = 1, scanned each 0.1 s, noise 0.5 % of the step, reported by exception."""
+    rng = np.random.default_rng(seed)
+    t = steps.stamps(0.1, 60.0, before_s=80.0, past_s=10.0)
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    y = y + 0.005 * rng.standard_normal(len(t))
+    kept = by_exception(y, t, deadband, 60.0)
+    made = steps.make(t[kept], y[kept], 60.0)
+    settings = replace(made.settings, reading=Reading(pv_between=between))
+    return steps.Made(made.record, made.change, settings)
+
+
+@pytest.mark.parametrize("between", list(Between))
+@pytest.mark.parametrize("deadband", [0.01, 0.02])
+def test_a_small_reporting_deadband_widens_and_still_holds(
+    deadband: float, between: Between
+) -> None:
+    """Deadbands up to 2 % of the step are usable (own simulations; exact values, closed form)."""
+    held = dict.fromkeys(SHAPE, 0)
+    for seed in range(10):
+        measured = reported(deadband, seed, between).measure().measured
+        for quantity in SHAPE:
+            held[quantity] += holds(measured[quantity], exact(0.5)[quantity])
+    assert min(held.values()) >= 8, held
+
+
+@pytest.mark.parametrize("deadband", [0.06, 0.1])
+def test_a_large_reporting_deadband_is_refused(deadband: float) -> None:
+    """Over 5 % of the step no shape; over band / 2.5 no settling time."""
+    for seed in range(4):
+        measured = reported(deadband, seed).measure().measured
+        for quantity in SHAPE:
+            assert measured[quantity] == Measured.missing(Reason.COMPRESSED), quantity
+        error = measured[Quantity.STEADY_STATE_ERROR]
+        assert error.value is not None
+        assert error.high is not None
+        assert error.high - error.value > 1.9 * 5.0 * deadband / np.sqrt(3.0)
+
+
+def test_settling_is_refused_before_the_rest() -> None:
+    measured = reported(0.03, 1).measure().measured
+    assert measured[Quantity.SETTLING_TIME_5PCT] == Measured.missing(Reason.COMPRESSED)
+    assert holds(measured[Quantity.RISE_TIME], exact(0.5)[Quantity.RISE_TIME])
+
+
+def test_irregular_stamps_are_used_as_they_are() -> None:
+    """Random stamps, 15 a rise on the average, no noise: as exact as regular ones nearly."""
+    rng = np.random.default_rng(4)
+    t = np.sort(rng.uniform(-20.0, 62.0, 750))
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    measured = steps.make(t, y, 60.0).measure().measured
+    for quantity, truth in exact(0.5).items():
+        assert measured[quantity].value == pytest.approx(truth, rel=0.02), quantity
+
+
+def test_quantisation_is_seen_and_covered() -> None:
+    """Values in steps of 1 % of the change: its standard uncertainty is q / sqrt 12 (JCGM 100)."""
+    t = steps.stamps(0.1, 60.0, past_s=0.2)
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    measured = steps.make(t, np.round(y / 0.01) * 0.01, 60.0).measure().measured
+    for quantity, truth in exact(0.5).items():
+        assert holds(measured[quantity], truth), (quantity, measured[quantity])
+    error = measured[Quantity.STEADY_STATE_ERROR]
+    assert error.high is not None
+    assert error.high >= 1.9 * 0.05 / np.sqrt(12.0)
+
+
+def joined(first: Samples, second: Samples) -> Samples:
+    t = np.concatenate([first.t_us, second.t_us])
+    order = np.argsort(t, kind="stable")
+    value = np.concatenate([first.value, second.value])[order]
+    return Samples(t[order], value, np.concatenate([first.good, second.good])[order])
+
+
+@pytest.mark.parametrize("cut_s", [None, 30.0])
+def test_the_record_outside_the_interval_cannot_change_a_digit(cut_s: float | None) -> None:
+    """Wild samples beyond the bounding ones, on either side, or a record cut there: the same."""
+    rng = np.random.default_rng(2)
+    t = steps.stamps(0.1, 60.0, before_s=20.1, past_s=0.1)
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    y = y + 0.01 * rng.standard_normal(len(t))
+    lean = steps.make(t, y, 60.0, cut_s=cut_s, output=steps.samples(t, 50.0 + y))
+    rich = {Role.SP: lean.record.of(Role.SP)}
+    for role in (Role.PV, Role.OUTPUT):
+        early, late = np.arange(-400.0, -25.0, 0.7), np.arange(70.0, 400.0, 0.3)
+        outside = np.concatenate([early, late])
+        wild = steps.samples(outside, 500.0 * rng.standard_normal(len(outside)))
+        rich[role] = joined(lean.record.of(role), wild)
+    assert lean.measure() == measure(Record(rich), lean.change, lean.settings)
+
+
+def test_the_same_change_measured_twice_is_equal_to_the_last_digit() -> None:
+    made = reported(0.01, 5)
+    assert made.measure() == made.measure()
+
+
+def test_a_setpoint_scanned_seldom_widens_what_counts_from_t0() -> None:
+    """t0 is known to one scan of the setpoint, at most to one interval of the samples (JCGM 100:
+    uniform, h / sqrt 12): in peak time, and not in the rise time."""
+    made = steps.step(lambda t: second_order.response(t, 0.5), 0.2, 60.0)
+    measured = made.measure().measured
+    for quantity, least in ((Quantity.PEAK_TIME, 0.2 / np.sqrt(12.0)), (Quantity.RISE_TIME, 0.0)):
+        found = measured[quantity]
+        assert found.high is not None
+        assert found.low is not None
+        assert found.high - found.low >= 2.0 * 1.9 * least
+    rise = measured[Quantity.RISE_TIME]
+    assert rise.high is not None
+    assert rise.value is not None
+    assert rise.high - rise.value < 0.2 / np.sqrt(12.0)
+
+
+def test_a_held_process_variable_is_integrated_as_held() -> None:
+    """A jump recorded late under "hold": the error stays what it was until the next sample."""
+    t = np.concatenate([np.arange(-20.0, 1.0), [10.0], np.arange(11.0, 61.0)])
+    y = np.where(t >= 10.0, 1.0, 0.0)
+    made = steps.make(t, y, 60.0)
+    held = replace(made.settings, reading=Reading(pv_between=Between.HOLD))
+    found = steps.Made(made.record, made.change, held).measure().measured[Quantity.IAE]
+    assert found.value == pytest.approx(5.0 * 10.0, rel=1e-9)
+    line = made.measure().measured[Quantity.IAE]
+    assert line.value == pytest.approx(5.0 * 5.0, rel=1e-9)
