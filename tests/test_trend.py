@@ -209,7 +209,7 @@ def test_false_alarms(sd: float, heavy: bool) -> None:
 
     Seven quantities share that, so one may raise 0.0143 a year; of 150 years, seed 5, that is 2.1
     on average, and more than 7 would come with a chance of 0.2 % (Poisson). A larger run of 1000
-    years each gave 0 to 7. ``heavy``: Student's t with 5 degrees of freedom, of the same spread.
+    years each gave 0 to 8. ``heavy``: Student's t with 5 degrees of freedom, of the same spread.
     """
     rng = np.random.default_rng(5)
     years = 150
