@@ -21,8 +21,8 @@ entry for each row of the register, in its order:
 - ``commissioned``, ``at_full_size``: its answer to a setpoint step without noise and load, as
   commissioned and with the fault at full size (null without a fault): ``rise_time_s``,
   ``settling_time_s`` (5 % of the change), ``overshoot_pct``, ``peak_time_s``, ``decay_ratio``,
-  ``steady_state_error_eu``; null where there is no such number. An inner cascade loop has the
-  fault of none, and is tested alone
+  ``steady_state_error_eu``; null where there is no such number. An inner cascade loop is tested
+  alone, an outer one with its inner loop
 - ``exceeds``: limited quantities of the last such answer that are beyond their limits
 - ``changes``: how many setpoint changes of each kind were begun; ``manual_hours``
 
@@ -39,8 +39,8 @@ from pathlib import Path
 
 import numpy as np
 
-from .commissioning import STEP, Answer, answer, cascade_step_test, commission, step_test
-from .design import Design, spoiled
+from .commissioning import STEP, Answer, answer, cascade_step_test, commission, step_tests
+from .design import spoiled
 from .exporting import gather, historian_tag, write_days
 from .files import SITE_TOML, limits, loops_csv, specs_csv
 from .operators import plan, window_s
@@ -135,12 +135,13 @@ def _empty_place(folder: Path) -> Path:
     return exports
 
 
-def _cases(loops: int, days: int, seed: int) -> list[Case]:
+def _cases(count: int, days: int, seed: int) -> list[Case]:
     """Each loop from a random stream of its own, so that fewer loops leave the others alike."""
+    loops = pick(count)
+    rngs = [np.random.default_rng((seed, 0, LOOPS.index(loop))) for loop in loops]
+    designs = commission(loops, rngs)
     cases: list[Case] = []
-    for number, loop in enumerate(pick(loops)):
-        rng = np.random.default_rng((seed, 0, LOOPS.index(loop)))
-        healthy = commission(loop, rng)
+    for number, (loop, healthy, rng) in enumerate(zip(loops, designs, rngs, strict=True)):
         story = tell(loop, healthy, days, rng)
         moves = plan(loop, story, healthy.pivot_pv, days, rng)
         cases.append(Case(number, loop, healthy, story, moves))
@@ -151,7 +152,7 @@ def _write_files(
     folder: Path, cases: Sequence[Case], first: date, days: int, seed: int
 ) -> dict[str, Path]:
     """site.toml, the register, the specs and the truth; their paths by field of ``DemoSite``."""
-    tested = [_tested(case, cases) for case in cases]
+    tested = _tested(cases)
     specs = [
         limits(case, before, np.random.default_rng((seed, 4, LOOPS.index(case.loop))))
         for case, (before, _) in zip(cases, tested, strict=True)
@@ -177,16 +178,22 @@ def _write_files(
     return {name.replace(".", "_"): folder / name for name in texts}
 
 
-def _tested(case: Case, cases: Sequence[Case]) -> tuple[Answer, Answer | None]:
-    """The step test as commissioned, and with the fault at full size."""
-    test_s = window_s(case.loop)[1] * (2 if case.loop.averaging else 1)
-    inner = [other.design for other in cases if other.loop.primary == case.loop.tag]
-    if inner:
-        seen = cascade_step_test(case.design, inner[0], STEP, test_s)
-        return answer(seen, STEP, case.design.scan_s), None
-    designs: list[Design] = [case.design]
-    if case.story.fault:
-        designs.append(spoiled(case.design, case.story.fault.cause, case.story.fault.size))
-    seen = step_test(designs, STEP, test_s)
-    found = [answer(seen[:, n], STEP, case.design.scan_s) for n in range(len(designs))]
-    return found[0], found[1] if len(found) > 1 else None
+def _tested(cases: Sequence[Case]) -> list[tuple[Answer, Answer | None]]:
+    """The step tests of each loop: as commissioned, and with its fault at full size."""
+    test_s = [window_s(case.loop)[1] * (2 if case.loop.averaging else 1) for case in cases]
+    healthy = [case.design for case in cases]
+    faults = [case.story.fault for case in cases]
+    spoilt = [
+        spoiled(design, fault.cause, fault.size) if fault else design
+        for design, fault in zip(healthy, faults, strict=True)
+    ]
+    before, after = (step_tests(designs, STEP, test_s) for designs in (healthy, spoilt))
+    inner_of = {case.loop.primary: case.design for case in cases if case.loop.primary}
+    found: list[tuple[Answer, Answer | None]] = []
+    for number, case in enumerate(cases):
+        scan_s, inner = case.design.scan_s, inner_of.get(case.loop.tag)
+        if inner is not None:
+            before[number] = cascade_step_test(case.design, inner, STEP, test_s[number])
+        full = answer(after[number], STEP, scan_s) if case.story.fault else None
+        found.append((answer(before[number], STEP, scan_s), full))
+    return found
