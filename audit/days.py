@@ -19,7 +19,7 @@ from zoneinfo import ZoneInfo
 import numpy as np
 from numpy.typing import NDArray
 
-from audit.records import DayRecord, Loop, Reading, Record, Role, Samples, instant, to_us
+from audit.records import DayRecord, KeptDay, Loop, Reading, Record, Role, Samples, instant, to_us
 
 Span = tuple[int, int]
 
@@ -271,6 +271,42 @@ def _day(
         output_us=spent(Role.OUTPUT, State.PLAIN, State.MARKED),
         pv_bad_us=span_us - spent(Role.PV, State.PLAIN),
     )
+
+
+def touched(spans: Iterable[Span], reading: Reading, zone: ZoneInfo) -> list[date]:
+    """The local days whose record can depend on samples in the spans (us), in order.
+
+    These are the days within the longest silence of a span; to count them, the runs of those within
+    twice the longest silence have to be known.
+    """
+    longest_us = max(reading.silence_us.values())
+    found = set()
+    for start_us, end_us in spans:
+        first = instant(start_us - longest_us).astimezone(zone).date()
+        last = instant(end_us + longest_us).astimezone(zone).date()
+        found |= {first + timedelta(days=number) for number in range((last - first).days + 1)}
+    return sorted(found)
+
+
+def keep_days(
+    runs: LoopRuns,
+    loop: Loop,
+    reading: Reading,
+    zone: ZoneInfo,
+    wanted: Collection[date],
+    kept: Collection[date] = (),
+) -> list[KeptDay]:
+    """What is to be kept of the wanted days: those with a stamp, those a state holds through.
+
+    ``kept``: days that were kept before; of these one of which nothing is known any more is given
+    too, with zeros, to take the place of the old one.
+    """
+    parts = split_days(runs, zone)
+    return [
+        KeptDay(record, encode(parts.get(record.day, {})))
+        for record in day_records(runs, loop, reading, zone, wanted)
+        if record.span_us > 0 or record.day in parts or record.day in kept
+    ]
 
 
 _VERSION = 1

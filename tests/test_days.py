@@ -18,6 +18,7 @@ from audit.records import (
     DAY_US,
     SECOND_US,
     DayRecord,
+    KeptDay,
     Loop,
     Reading,
     Record,
@@ -207,6 +208,45 @@ def test_pieces_merged_in_any_order_are_the_whole(seed: int) -> None:
         kept = days.merge(kept, days.runs_of(part, LOOP, COARSE, spans), spans)
     assert maximal(kept) == maximal(whole)
     assert all_days(kept) == all_days(whole)
+
+
+@settings(deadline=None, max_examples=80)
+@given(st.integers(0, 2**32 - 1))
+def test_kept_days_do_not_depend_on_the_order_of_the_exports(seed: int) -> None:
+    """Only the days around each export are loaded, counted and kept again."""
+    rng = np.random.default_rng(seed)
+    record = random_record(rng)
+    parts = pieces(record, rng)
+    whole = (min(a for _, (a, _) in parts), max(b for _, (_, b) in parts)) if parts else (0, 0)
+
+    def stored(exports: list[tuple[Record, Span]]) -> dict[date, DayRecord]:
+        store: dict[date, KeptDay] = {}
+        for part, span in exports:
+            near = days.touched([(span[0] - 30 * HOUR_US, span[1] + 30 * HOUR_US)], COARSE, PARIS)
+            loaded = [days.decode(store[day].runs) for day in near if day in store]
+            spans = {role: [span] for role in ROLES}
+            new = days.runs_of(part, LOOP, COARSE, spans)
+            merged = days.merge(days.join_days(loaded), new, spans)
+            wanted = days.touched([span], COARSE, PARIS)
+            found = days.keep_days(merged, LOOP, COARSE, PARIS, wanted, set(store))
+            store |= {kept.record.day: kept for kept in found}
+        return {day: kept.record for day, kept in sorted(store.items())}
+
+    shuffled = [parts[k] for k in rng.permutation(len(parts)).tolist()]
+    assert stored(shuffled) == stored([(record, whole)])
+
+
+def test_a_day_whose_samples_are_all_taken_away_is_kept_with_zeros() -> None:
+    day = date(2026, 3, 2)
+    start = to_us(datetime(2026, 3, 2, 6, tzinfo=UTC))
+    span = {Role.PV: [(start, start)]}
+    runs = days.runs_of(Record({Role.PV: samples([start], [1.0])}), LOOP, READING)
+    (first,) = days.keep_days(runs, LOOP, READING, UTC_ZONE, [day])
+    assert days.decode(first.runs) == runs
+    gone = days.merge(runs, {}, span)
+    assert days.keep_days(gone, LOOP, READING, UTC_ZONE, [day]) == []
+    (again,) = days.keep_days(gone, LOOP, READING, UTC_ZONE, [day], [day])
+    assert again.record == DayRecord(day, 0, 0, 0, 0, 0, 0)
 
 
 @settings(deadline=None, max_examples=60)
