@@ -36,9 +36,11 @@ def assess(steps: Sequence[PastStep], loop: Loop, limited: Collection[Quantity])
     k = 0.5 plus 1.645 standard errors of the baseline's median, h = 10 (15 while provisional).
     In 1000 simulated years of one quantity that does not change, with 4 steps a day, the baseline
     estimated and a scatter of 5 to 30 %, there were 0 to 14 false alarms, at most 8 years with one:
-    under 0.1 a loop and year over all seven quantities. Steps are taken as independent. "Large enough" is a median of the last 10 steps (of those since the change, if
-    fewer) that is worse by 20 % of a time, 5 points of overshoot, 0.15 of decay ratio, or 0.5 % of
-    range of error (5 % of the size of the changes without a range); twice that while provisional.
+    under 0.1 a loop and year over all seven quantities. Steps are taken as independent.
+
+    "Large enough" is a median of the last 10 steps (of those since the change, if fewer) that is
+    worse by 20 % of a time, 5 points of overshoot, 0.15 of decay ratio, or 0.5 % of range of error
+    (5 % of the size of the changes without a range); twice that while provisional.
 
     Quantities without a limit are looked at too; those in ``limited`` come first. Of an averaging
     level only the error is looked at.

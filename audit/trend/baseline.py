@@ -107,8 +107,8 @@ def _spread(residuals: NDArray[np.float64]) -> float:
     """Robust standard deviation of what is centred on its median (small samples: n/(n - 0.8))."""
     count = len(residuals)
     mad = NORMAL_MAD * _median(np.abs(residuals)) * count / (count - 0.8)
-    decile = sorted(residuals.tolist())[round(0.9 * (count - 1))]
-    return max(mad, decile / NORMAL_P90)
+    ordered: list[float] = sorted(residuals.tolist())
+    return max(mad, ordered[round(0.9 * (count - 1))] / NORMAL_P90)
 
 
 def _median(values: NDArray[np.float64]) -> float:
