@@ -2,17 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+import hashlib
+from collections.abc import Collection, Iterable
 from datetime import datetime
 from typing import Any
 
 import numpy as np
-from sqlalchemy import delete, insert, select, update
+from sqlalchemy import insert, select, update
 from sqlalchemy.orm import Session
 
 from audit.records import CellAccount, ExportFile, ExportRead, to_us
 from audit.store.bulk import add, portions
-from audit.store.tables import CoverageRow, ExportRow
+from audit.store.tables import ExportRow, TagOfSetRow, TagSetRow
 
 
 def begin_export(s: Session, file: ExportFile, read: ExportRead, now: datetime) -> int:
@@ -28,24 +29,23 @@ def begin_export(s: Session, file: ExportFile, read: ExportRead, now: datetime) 
         "reason": None,
         "first_us": read.first_us,
         "last_us": read.last_us,
+        "tag_set_id": None if read.first_us is None else _tag_set(s, read.named),
         "newest_good_us": newest,
         "future_stamps": future,
         "superseded_at": None,
         **_account_values(read.account),
     }
-    rows = s.execute(
-        select(ExportRow.id, ExportRow.content_hash).where(ExportRow.path == file.path)
-    ).all()
-    s.execute(delete(CoverageRow).where(CoverageRow.export_id.in_([row.id for row in rows])))
-    same = next((row.id for row in rows if row.content_hash == read.content_hash), None)
+    s.execute(update(ExportRow).where(ExportRow.path == file.path).values(tag_set_id=None))
     _supersede(s, file.path, now)
+    same = s.execute(
+        select(ExportRow.id).where(
+            ExportRow.path == file.path, ExportRow.content_hash == read.content_hash
+        )
+    ).scalar()
     if same is None:
-        export_id = s.execute(insert(ExportRow).values(values).returning(ExportRow.id)).scalar_one()
-    else:
-        s.execute(update(ExportRow).where(ExportRow.id == same).values(values))
-        export_id = same
-    _cover(s, export_id, read)
-    return export_id
+        return s.execute(insert(ExportRow).values(values).returning(ExportRow.id)).scalar_one()
+    s.execute(update(ExportRow).where(ExportRow.id == same).values(values))
+    return same
 
 
 def refuse_export(s: Session, file: ExportFile, reason: str, now: datetime) -> None:
@@ -60,6 +60,7 @@ def refuse_export(s: Session, file: ExportFile, reason: str, now: datetime) -> N
         "reason": reason,
         "first_us": None,
         "last_us": None,
+        "tag_set_id": None,
         "newest_good_us": None,
         "future_stamps": 0,
         "superseded_at": None,
@@ -133,8 +134,15 @@ def _supersede(s: Session, path: str, now: datetime) -> None:
     )
 
 
-def _cover(s: Session, export_id: int, read: ExportRead) -> None:
-    if read.first_us is None or read.last_us is None or not read.named:
-        return
-    span = {"export_id": export_id, "from_us": read.first_us, "to_us": read.last_us}
-    add(s, CoverageRow, [span | {"tag": tag} for tag in sorted(set(read.named))])
+def _tag_set(s: Session, named: Collection[str]) -> int | None:
+    """The id of the set of these tags, entered if it is new; None for no tags."""
+    tags = sorted(set(named))
+    if not tags:
+        return None
+    digest = hashlib.blake2b("\0".join(tags).encode(), digest_size=16).digest()
+    known = s.execute(select(TagSetRow.id).where(TagSetRow.digest == digest)).scalar()
+    if known is not None:
+        return known
+    new = s.execute(insert(TagSetRow).values(digest=digest).returning(TagSetRow.id)).scalar_one()
+    add(s, TagOfSetRow, [{"tag_set_id": new, "tag": tag} for tag in tags])
+    return new

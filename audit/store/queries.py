@@ -6,7 +6,7 @@ from collections.abc import Collection
 from datetime import date
 from typing import Any
 
-from sqlalchemy import RowMapping, exists, func, select
+from sqlalchemy import RowMapping, func, select
 from sqlalchemy.orm import Session
 
 from audit.records import (
@@ -35,7 +35,6 @@ from audit.store.past import (
 )
 from audit.store.payload import detail_of, loop_of
 from audit.store.tables import (
-    CoverageRow,
     ExportRow,
     LoopRow,
     LoopVersionRow,
@@ -44,6 +43,7 @@ from audit.store.tables import (
     SiteRow,
     SpecVersionRow,
     StandingRow,
+    TagOfSetRow,
 )
 
 __all__ = [
@@ -175,8 +175,7 @@ def newest_stamp(s: Session, until_us: int) -> int | None:
     """The newest good stamp of all exports read, of those not after ``until_us``."""
     return s.execute(
         select(func.max(ExportRow.newest_good_us)).where(
-            ExportRow.newest_good_us <= until_us,
-            exists().where(CoverageRow.export_id == ExportRow.id),
+            ExportRow.newest_good_us <= until_us, ExportRow.tag_set_id.is_not(None)
         )
     ).scalar()
 
@@ -188,37 +187,41 @@ def coverage(
     to_us: int | None = None,
 ) -> list[Coverage]:
     """What time of each tag which export covers, by (tag, from, path); overlapping a span only."""
-    query = select(
-        CoverageRow.tag,
-        CoverageRow.from_us,
-        CoverageRow.to_us,
+    query: Any = select(
+        TagOfSetRow.tag,
+        ExportRow.first_us,
+        ExportRow.last_us,
         ExportRow.source,
         ExportRow.path,
         ExportRow.revision,
-    ).join_from(CoverageRow, ExportRow)
+    ).join_from(ExportRow, TagOfSetRow, ExportRow.tag_set_id == TagOfSetRow.tag_set_id)
     if from_us is not None:
-        query = query.where(CoverageRow.to_us >= from_us)
+        query = query.where(ExportRow.last_us >= from_us)
     if to_us is not None:
-        query = query.where(CoverageRow.from_us <= to_us)
+        query = query.where(ExportRow.first_us <= to_us)
     if tags is None:
         found = [Coverage(*row) for row in s.execute(query)]
     else:
         found = [
             Coverage(*row)
             for some in portions(sorted(tags))
-            for row in s.execute(query.where(CoverageRow.tag.in_(some)))
+            for row in s.execute(query.where(TagOfSetRow.tag.in_(some)))
         ]
     return sorted(found, key=lambda one: (one.tag, one.from_us, one.path))
 
 
 def tag_sources(s: Session) -> dict[str, str]:
     """Each tag that some export names, with the source of the export that reaches furthest."""
-    query = (
-        select(CoverageRow.tag, ExportRow.source, func.max(CoverageRow.to_us))
-        .join_from(CoverageRow, ExportRow)
-        .group_by(CoverageRow.tag, ExportRow.source)
+    reach = (
+        select(ExportRow.tag_set_id, ExportRow.source, func.max(ExportRow.last_us).label("last_us"))
+        .where(ExportRow.tag_set_id.is_not(None))
+        .group_by(ExportRow.tag_set_id, ExportRow.source)
+        .subquery()
     )
-    found = sorted((tag, to_us, source) for tag, source, to_us in s.execute(query))
+    query = select(TagOfSetRow.tag, reach.c.last_us, reach.c.source).join_from(
+        reach, TagOfSetRow, reach.c.tag_set_id == TagOfSetRow.tag_set_id
+    )
+    found = sorted(tuple(row) for row in s.execute(query))
     return {tag: source for tag, _, source in found}
 
 

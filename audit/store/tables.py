@@ -140,13 +140,36 @@ class SpecVersionRow(Base):
     reason: Mapped[str]
 
 
+class TagSetRow(Base):
+    """The tags an export names. Most exports of a kind name the same, so they share one set."""
+
+    __tablename__ = "tag_set"
+    __table_args__ = (UniqueConstraint("digest"),)
+    id: Mapped[Key]
+    digest: Mapped[bytes]
+
+
+class TagOfSetRow(Base):
+    """One tag of a set."""
+
+    __tablename__ = "tag_of_set"
+    __table_args__ = (Index(None, "tag"),)
+    tag_set_id: Mapped[int] = mapped_column(ForeignKey("tag_set.id"), primary_key=True)
+    tag: Mapped[KeyText]
+
+
 class ExportRow(Base):
-    """One content of one export path, and what became of its cells."""
+    """One content of one export path, and what became of its cells.
+
+    With a ``tag_set_id`` it covers those tags from its first to its last stamp; without one (no
+    stamps, refused, or replaced by other content of its path) it covers nothing.
+    """
 
     __tablename__ = "export"
     __table_args__ = (
         UniqueConstraint("path", "content_hash"),
         CheckConstraint("state IN ('reading', 'taken', 'refused')", name="state"),
+        CheckConstraint("first_us <= last_us", name="span"),
         _one_current("uq_export_current", "path"),
     )
     id: Mapped[Key]
@@ -160,6 +183,7 @@ class ExportRow(Base):
     reason: Mapped[str | None]
     first_us: Mapped[Micros | None]
     last_us: Mapped[Micros | None]
+    tag_set_id: Mapped[int | None] = mapped_column(ForeignKey("tag_set.id"))
     newest_good_us: Mapped[Micros | None]
     future_stamps: Mapped[Micros]
     file_rows: Mapped[Micros]
@@ -173,20 +197,6 @@ class ExportRow(Base):
     cells_refused: Mapped[Json]
     read_at: Mapped[datetime]
     superseded_at: Mapped[datetime | None]
-
-
-class CoverageRow(Base):
-    """A tag an export names, from the first to the last stamp of that export."""
-
-    __tablename__ = "coverage"
-    __table_args__ = (
-        CheckConstraint("from_us <= to_us", name="span"),
-        Index(None, "tag", "to_us"),
-    )
-    export_id: Mapped[int] = mapped_column(ForeignKey("export.id"), primary_key=True)
-    tag: Mapped[KeyText]
-    from_us: Mapped[Micros]
-    to_us: Mapped[Micros]
 
 
 class CurveRow(Base):

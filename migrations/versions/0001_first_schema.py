@@ -35,8 +35,9 @@ def downgrade() -> None:
     op.drop_table("verdict")
     op.drop_table("measurement")
     op.drop_table("curve")
-    op.drop_table("coverage")
     op.drop_table("export")
+    op.drop_table("tag_of_set")
+    op.drop_table("tag_set")
     op.drop_table("spec_version")
     op.drop_table("loop_version")
     op.drop_table("loop")
@@ -131,6 +132,23 @@ def _register() -> None:
 
 def _exports() -> None:
     op.create_table(
+        "tag_set",
+        sa.Column("id", sa.Integer(), nullable=False),
+        sa.Column("digest", sa.LargeBinary(), nullable=False),
+        sa.PrimaryKeyConstraint("id", name=op.f("pk_tag_set")),
+        sa.UniqueConstraint("digest", name=op.f("uq_tag_set_digest")),
+    )
+    op.create_table(
+        "tag_of_set",
+        sa.Column("tag_set_id", sa.Integer(), nullable=False),
+        sa.Column("tag", sa.Text(), nullable=False),
+        sa.ForeignKeyConstraint(
+            ["tag_set_id"], ["tag_set.id"], name=op.f("fk_tag_of_set_tag_set_id_tag_set")
+        ),
+        sa.PrimaryKeyConstraint("tag_set_id", "tag", name=op.f("pk_tag_of_set")),
+    )
+    op.create_index(op.f("ix_tag_of_set_tag"), "tag_of_set", ["tag"], unique=False)
+    op.create_table(
         "export",
         sa.Column("id", sa.Integer(), nullable=False),
         sa.Column("source", sa.Text(), nullable=False),
@@ -143,6 +161,7 @@ def _exports() -> None:
         sa.Column("reason", sa.Text()),
         sa.Column("first_us", sa.BigInteger()),
         sa.Column("last_us", sa.BigInteger()),
+        sa.Column("tag_set_id", sa.Integer()),
         sa.Column("newest_good_us", sa.BigInteger()),
         sa.Column("future_stamps", sa.BigInteger(), nullable=False),
         sa.Column("file_rows", sa.BigInteger(), nullable=False),
@@ -159,6 +178,10 @@ def _exports() -> None:
         sa.CheckConstraint(
             "state IN ('reading', 'taken', 'refused')", name=op.f("ck_export_state")
         ),
+        sa.CheckConstraint("first_us <= last_us", name=op.f("ck_export_span")),
+        sa.ForeignKeyConstraint(
+            ["tag_set_id"], ["tag_set.id"], name=op.f("fk_export_tag_set_id_tag_set")
+        ),
         sa.PrimaryKeyConstraint("id", name=op.f("pk_export")),
         sa.UniqueConstraint("path", "content_hash", name=op.f("uq_export_path_content_hash")),
     )
@@ -170,19 +193,6 @@ def _exports() -> None:
         sqlite_where=CURRENT,
         postgresql_where=CURRENT,
     )
-    op.create_table(
-        "coverage",
-        sa.Column("export_id", sa.Integer(), nullable=False),
-        sa.Column("tag", sa.Text(), nullable=False),
-        sa.Column("from_us", sa.BigInteger(), nullable=False),
-        sa.Column("to_us", sa.BigInteger(), nullable=False),
-        sa.CheckConstraint("from_us <= to_us", name=op.f("ck_coverage_span")),
-        sa.ForeignKeyConstraint(
-            ["export_id"], ["export.id"], name=op.f("fk_coverage_export_id_export")
-        ),
-        sa.PrimaryKeyConstraint("export_id", "tag", name=op.f("pk_coverage")),
-    )
-    op.create_index(op.f("ix_coverage_tag_to_us"), "coverage", ["tag", "to_us"], unique=False)
 
 
 def _steps() -> None:
