@@ -6,8 +6,8 @@ In: nothing. Out: ``CONSTANTS`` and ``METHOD_VERSION``.
 from __future__ import annotations
 
 import hashlib
-import json
-from dataclasses import asdict, dataclass
+from dataclasses import dataclass, fields
+from functools import lru_cache
 
 from audit.records import MeasureSettings
 
@@ -78,6 +78,8 @@ class Constants:
     """Standard uncertainty of "ends at its setpoint", of the range."""
     peak_u: float = 3.5
     """A peak is one beyond this many of its standard uncertainties …"""
+    chance_peak_sd: float = 1.5
+    """The highest of a smoothed level lies about so many sd above it by chance alone."""
     second_peak_u: float = 4.0
     """… and a second one beyond so many: it is the highest of several places."""
     oscillation_share: float = 0.02
@@ -90,13 +92,17 @@ class Constants:
 CONSTANTS = Constants()
 
 
-def _digest(values: object) -> str:
-    return hashlib.sha256(json.dumps(values, sort_keys=True).encode()).hexdigest()[:8]
+@lru_cache(maxsize=256)
+def _digest(text: str) -> str:
+    return hashlib.sha256(text.encode()).hexdigest()[:8]
 
 
-METHOD_VERSION = f"direct-1-{_digest(asdict(CONSTANTS))}"
+METHOD_VERSION = f"direct-1-{_digest(repr(CONSTANTS))}"
 
 
 def method_version(settings: MeasureSettings) -> str:
     """Code, its parameters and the settings a response was measured with."""
-    return f"{METHOD_VERSION}-{_digest(asdict(settings))}"
+    plain = [getattr(settings, f.name) for f in fields(settings) if f.name != "reading"]
+    reading = settings.reading
+    read = (reading.pv_between, reading.output_between, sorted(reading.silence_us.items()))
+    return f"{METHOD_VERSION}-{_digest(repr((plain, read)))}"

@@ -128,7 +128,7 @@ def crossings(
     start = float(curve.ft[quiet[-1]]) if len(quiet) else t10 - half
     step = curve.step_s
     place = np.array([t10, t90])
-    for _ in range(3):
+    for _ in range(2):
         reach = max(min(half, place[0] - start + 0.5 * step), 0.5 * step)
         left = np.array([reach, half])
         right = np.array([max(half, 3.2 * step), half])
@@ -215,11 +215,13 @@ def _extremes(
     reach = np.minimum(wide, np.maximum(0.45 * near, CONSTANTS.least_half_samples * curve.step_s))
     reach = np.maximum(reach, CONSTANTS.least_half_samples * curve.step_s)
     when = place[1:-1]
-    for _ in range(2):
+    for _ in range(3):
         found = fit(curve.ft, x, when, reach, reach)
         bend = np.where(np.abs(found.curvature) > 1e-12, found.curvature, 1e-12)
         move = np.clip(-found.slope / (2.0 * bend), -0.5 * reach, 0.5 * reach)
         when = np.clip(when + move, 0.0, curve.window_s)
+        if bool((np.abs(move) < 0.2 * reach).all()):
+            break
     found = fit(curve.ft, x, when, reach, reach)
     sd = value_sd(found, noise, curve)
     bend = np.maximum(2.0 * np.abs(found.curvature), 1e-12)

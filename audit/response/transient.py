@@ -169,7 +169,8 @@ def _no_peak(view: View, path: Path, t10: float) -> dict[Quantity, Measured]:
     """No maximum beyond noise: an overshoot of about 0 with its interval."""
     after = path.x[path.t > t10]
     most = float(after.max()) - 1.0 if len(after) else 0.0
-    value = max(most - 2.0 * path.sd, 0.0)
+    noise_sd = float(np.sqrt(max(path.sd**2 - view.noise.coarse**2, 0.0)))
+    value = max(most - CONSTANTS.chance_peak_sd * noise_sd, 0.0)
     u = float(np.hypot(path.sd, view.u1))
     bound = interval(100.0 * value, 100.0 * u, view.how, 0.0)
     found = dict.fromkeys(
