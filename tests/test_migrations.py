@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import runpy
 from collections.abc import Iterator
 from contextlib import contextmanager
+from importlib.resources import files
+from pathlib import Path
 from threading import Thread
 
 import pytest
@@ -131,3 +134,20 @@ def test_two_upgrades_at_once_make_one_schema(store_url: str) -> None:
         store.close()
     with open_store(store_url) as store, store.read() as session:
         assert session.execute(text("SELECT count(*) FROM lease")).scalar_one() == 1
+
+
+def test_a_new_revision_from_the_template_is_whole_and_empty(store: Store, tmp_path: Path) -> None:
+    with reshaping(store) as connection:
+        config = alembic_config(connection)
+        shipped = files("audit.migrations") / "versions"
+        config.set_main_option("path_separator", "newline")
+        config.set_main_option("version_locations", f"{shipped}\n{tmp_path}")
+        command.revision(
+            config, "says nothing", autogenerate=True, rev_id="9999", version_path=str(tmp_path)
+        )
+    (written,) = tmp_path.glob("9999*.py")
+    revision = runpy.run_path(str(written))
+    assert revision["__doc__"].startswith("says nothing")
+    assert (revision["revision"], revision["down_revision"]) == ("9999", store.schema().head)
+    assert revision["upgrade"].__code__.co_names == ()
+    assert revision["downgrade"].__code__.co_names == ()

@@ -108,3 +108,13 @@ def test_a_tag_is_read_as_the_source_that_brings_it_now_declares(store: Store) -
         other = replace(some.file("exports/b.csv"), source="lab")
         writes.begin_export(session, other, some.read("h2", later, [PV]), some.NOW)
         assert queries.tag_sources(session) == {PV: "lab", SP: "dcs"}
+
+
+def test_exports_that_name_the_same_tags_share_one_set(store: Store) -> None:
+    with some.writing(store) as session:
+        for number in range(3):
+            one = some.file(f"exports/{number}.csv")
+            writes.begin_export(session, one, some.read(f"h{number}"), some.NOW)
+        writes.begin_export(session, some.file(), some.read("h9", named=[PV]), some.NOW)
+        assert session.execute(text("SELECT count(*) FROM tag_of_set")).scalar_one() == 3
+        assert len(queries.coverage(session)) == 7
