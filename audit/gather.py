@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from datetime import date, datetime, timedelta
 
 from audit.config import Config
-from audit.loopwork import LoopWork, days_padding, local_day
+from audit.loopwork import LoopWork, days_known
 from audit.records import (
     ExportSource,
     Loop,
@@ -65,9 +65,7 @@ def loop_work(
         return None
     reading = context_.reading(loop)
     config = context_.config
-    pad = timedelta(days=days_padding(reading))
-    first_day = local_day(spans[0][0], config.timezone) - pad
-    last_day = local_day(spans[-1][1], config.timezone) + pad
+    first_day, last_day = days_known(spans, reading, config.timezone)
     with store.read() as session:
         touched = sorted(
             {s.at_us for span in spans for s in queries.touched(session, loop.tag, *span)}

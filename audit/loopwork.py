@@ -7,14 +7,13 @@ same in this process or another.
 
 from __future__ import annotations
 
-from collections.abc import Collection, Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from datetime import date, timedelta
+from datetime import date
 from zoneinfo import ZoneInfo
 
 from audit import days, quality, response, setpoints, verdict
 from audit.records import (
-    DAY_US,
     KeptDay,
     Loop,
     LoopResult,
@@ -122,33 +121,25 @@ def settings_for(
     )
 
 
-def local_day(at_us: int, zone: ZoneInfo) -> date:
-    """The site's calendar day of an instant."""
-    return instant(at_us).astimezone(zone).date()
-
-
-def days_padding(reading: Reading) -> int:
-    """Days on either side of fresh samples whose record can depend on them."""
+def days_known(spans: Sequence[Span], reading: Reading, zone: ZoneInfo) -> tuple[date, date]:
+    """First and last local day whose kept runs are needed to count the days the spans concern."""
     longest_us = max(reading.silence_us.values())
-    return 1 + -(-longest_us // DAY_US)
+    around = [(start - longest_us, end + longest_us) for start, end in spans]
+    concerned = days.touched(around, reading, zone)
+    return concerned[0], concerned[-1]
 
 
 def _days(
-    work: LoopWork, fresh: Mapping[Role, Samples], replaced: Mapping[Role, Collection[Span]]
+    work: LoopWork, fresh: Mapping[Role, Samples], replaced: Mapping[Role, Sequence[Span]]
 ) -> list[KeptDay]:
     """The day's records that the fresh samples concern, counted again."""
-    spans = work.spans()
-    kept = days.join_days([days.decode(day.runs) for day in work.days], work.reading)
-    new = days.runs_of(Record(fresh), work.loop, work.reading)
-    cleared = {role: tuple(spans) for role, spans in replaced.items()}
-    merged = days.merge(kept, new, cleared, work.reading)
-    pad = timedelta(days=days_padding(work.reading) - 1)
-    parts = {
-        day: runs
-        for day, runs in days.split_days(merged, work.zone).items()
-        if any(
-            local_day(a, work.zone) - pad <= day <= local_day(b, work.zone) + pad for a, b in spans
-        )
-    }
-    records = days.day_records(merged, work.loop, work.reading, work.zone, sorted(parts))
-    return [KeptDay(record, days.encode(parts[record.day])) for record in records]
+    kept = days.join_days(days.decode(day.runs) for day in work.days)
+    new = days.runs_of(Record(fresh), work.loop, work.reading, replaced)
+    return days.keep_days(
+        days.merge(kept, new, replaced),
+        work.loop,
+        work.reading,
+        work.zone,
+        days.touched(work.spans(), work.reading, work.zone),
+        [day.record.day for day in work.days],
+    )

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 import sites
-from audit import nightly
+from audit import loopwork, nightly
 from audit.site import open_site
 from sites import NOW, audit, content, opened
 
@@ -176,10 +176,10 @@ def test_an_audit_cut_off_in_the_middle_is_completed_by_the_next(
 ) -> None:
     folder = lay(tmp_path)
     sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
-    whole = nightly.audit_loop
+    whole = loopwork.audit_loop
     calls: list[str] = []
 
-    def cut_off(work: nightly.LoopWork) -> object:
+    def cut_off(work: loopwork.LoopWork) -> object:
         calls.append(work.loop.tag)
         if len(calls) == 2:
             raise KeyboardInterrupt
