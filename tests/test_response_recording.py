@@ -85,6 +85,49 @@ def test_a_large_reporting_deadband_is_refused(deadband: float) -> None:
         assert error.high - error.value > 1.9 * 5.0 * deadband / np.sqrt(3.0)
 
 
+def swinging_door(t: steps.Array, y: steps.Array, reach: float) -> list[int]:
+    """Which samples a swinging-door archive keeps (Bristol, US patent 4669097, 1987)."""
+    kept, origin, steepest, flattest = [0], 0, -np.inf, np.inf
+    i = 1
+    while i < len(t):
+        span = t[i] - t[origin]
+        steepest = max(steepest, (y[i] - reach - y[origin]) / span)
+        flattest = min(flattest, (y[i] + reach - y[origin]) / span)
+        if steepest > flattest:
+            origin = i - 1
+            kept.append(origin)
+            steepest, flattest = -np.inf, np.inf
+        else:
+            i += 1
+    return [*kept, len(t) - 1]
+
+
+def test_the_swinging_door_keeps_what_a_hand_calculation_keeps() -> None:
+    """By hand, for t = 0..7 and reach 0.5: 0, 4, 6, 7."""
+    y = np.array([0.0, 1.0, 2.0, 3.0, 3.0, 3.0, 3.0, 0.0])
+    assert swinging_door(np.arange(8.0), y, 0.5) == [0, 4, 6, 7]
+
+
+@pytest.mark.parametrize("reach", [0.01, 0.02, 0.05, 0.1])
+def test_a_swinging_door_archive_gives_bounds_or_reasons_and_nothing_false(reach: float) -> None:
+    """z = 0.5, 0.5 % noise: what is told holds the closed form, what is not told has a reason."""
+    rng = np.random.default_rng(6)
+    t = steps.stamps(0.1, 60.0, before_s=80.0, past_s=10.0)
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    y = y + 0.005 * rng.standard_normal(len(t))
+    kept = swinging_door(t, y, reach)
+    measured = steps.make(t[kept], y[kept], 60.0).measure().measured
+    allowed = {Reason.COMPRESSED, Reason.TOO_SPARSE, Reason.NOISY, Reason.CUT_SHORT, Reason.GAP}
+    for quantity, truth in exact(0.5).items():
+        found = measured[quantity]
+        if found.known:
+            assert found.low is None or found.low <= truth, (quantity, found)
+            assert found.high is None or found.high >= truth, (quantity, found)
+        else:
+            assert found.why in allowed, (quantity, found)
+    assert measured[Quantity.OVERSHOOT].value is None
+
+
 def test_settling_is_refused_before_the_rest() -> None:
     measured = reported(0.03, 1).measure().measured
     assert measured[Quantity.SETTLING_TIME_5PCT] == Measured.missing(Reason.COMPRESSED)

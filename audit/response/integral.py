@@ -45,7 +45,8 @@ def absolute_error(
     unsure = CONSTANTS.excess_doubt + np.sqrt(0.5 * noise.inflation / max(len(inside), 1))
     doubt = unsure * float(width @ excess) + noise.coarse * np.sqrt(end_s * step)
     idle = float(width @ (np.abs(left) < 2.0 * noise.deadband))
-    return value, float(np.sqrt(random**2 + doubt**2 + (0.5 * noise.coarse * idle) ** 2))
+    parts = (random, doubt, 0.5 * noise.coarse * idle, _sampling(curve, grid, left, right))
+    return value, float(np.sqrt(sum(part**2 for part in parts)))
 
 
 def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
@@ -56,6 +57,20 @@ def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
         return value, value
     value = np.interp(grid, curve.ft, curve.fv)
     return value[:-1], value[1:]
+
+
+def _sampling(curve: Curve, grid: Array, left: Array, right: Array) -> float:
+    """Error of the trapezoid from what half the samples would have given (Richardson)."""
+    if curve.hold or len(grid) < 5:
+        return 0.0
+    size = np.append(np.abs(left), np.abs(right[-1:]))
+    some = np.unique(np.append(np.arange(0, len(grid), 2), len(grid) - 1))
+    return abs(_area(size, grid) - _area(size[some], grid[some])) / 3.0
+
+
+def _area(value: Array, at: Array) -> float:
+    """Trapezoid."""
+    return float(np.diff(at) @ (0.5 * (value[1:] + value[:-1])))
 
 
 def _folded(error: Array, noise: Noise, final: Array | None) -> Array:

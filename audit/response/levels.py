@@ -73,7 +73,8 @@ def level(t: Array, v: Array, lo: float, hi: float, hold: bool, noise: Noise) ->
     chance = noise.sd * np.sqrt(min(noise.inflation / count, 1.0))
     drift, swing, moving = _motion(t, v, weight, noise)
     chance = float(np.hypot(chance, noise.coarse))
-    u = np.sqrt(chance**2 + (0.3 * drift) ** 2 + (0.3 * swing) ** 2)
+    spread = float(np.sqrt(weight @ (v - value) ** 2 / count))
+    u = np.sqrt(max(chance, spread) ** 2 + (0.3 * drift) ** 2 + (0.3 * swing) ** 2)
     return Level(value, float(u), chance, drift, inside, moving)
 
 

@@ -103,9 +103,12 @@ def _correlation(residual: Array, sd: float) -> float:
 
 
 def _bend_sd(curve: Curve) -> float:
-    """Noise from the smaller second differences, for a record without a quiet stretch."""
+    """Noise from the smaller second differences, for a record without a quiet stretch.
+
+    0 where the samples are too few to tell noise from the response.
+    """
     v = curve.v[(curve.t >= -curve.before_s) & (curve.t <= curve.window_s)]
-    if len(v) < 5:
+    if len(v) < 16:
         return 0.0
     bend = np.abs(v[2:] - 2.0 * v[1:-1] + v[:-2])
     return float(np.quantile(bend, 0.25)) / (0.3186 * float(np.sqrt(6.0)))
@@ -140,6 +143,19 @@ def _deadband(curve: Curve) -> float:
         return 0.0
     least = float(np.quantile(told, 0.05))
     return least if least > 0.3 * float(np.median(told)) else 0.0
+
+
+def scan_s(curve: Curve) -> float:
+    """The scan a thinned-out record was taken from, s: the interval all others are multiples of.
+
+    0 where there is none to see.
+    """
+    length = np.diff(curve.t)
+    if len(length) < 8:
+        return 0.0
+    least = float(length.min())
+    parts = length / least
+    return least if float(np.mean(np.abs(parts - np.round(parts)) < 0.05)) > 0.95 else 0.0
 
 
 def value_sd(fit: Fit, noise: Noise, curve: Curve) -> Array:

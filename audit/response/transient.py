@@ -15,7 +15,7 @@ from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.ends import Ends
 from audit.response.localfit import Array
-from audit.response.noise import Noise
+from audit.response.noise import Noise, scan_s
 from audit.response.screening import SETTLING, SHAPE
 from audit.response.shape import (
     Crossing,
@@ -72,7 +72,7 @@ def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Me
     found[Quantity.UNDERSHOOT] = _undershoot(view, path, low.t)
     found |= _settlings(view, path, settings)
     if sparse:
-        found |= _sparse(view, found)
+        found |= _sparse(view, found, _why_sparse(view, rise))
     if view.noise.deadband > 1.1 * CONSTANTS.compressed_share:
         found |= dict.fromkeys(SHAPE, Measured.missing(Reason.COMPRESSED))
     return found
@@ -245,7 +245,14 @@ def _settling(view: View, path: Path, draws: settling.Draws, band: float) -> Mea
     return from_draws(values, known, swing, view.end_s, view.how, view.cut)
 
 
-def _sparse(view: View, found: dict[Quantity, Measured]) -> dict[Quantity, Measured]:
+def _why_sparse(view: View, rise_s: float) -> Reason:
+    """Thinned out by an archive where its scan would have been enough, else never sampled."""
+    scan = scan_s(view.curve)
+    enough = scan > 0 and rise_s >= CONSTANTS.sparse_rise * scan
+    return Reason.COMPRESSED if enough else Reason.TOO_SPARSE
+
+
+def _sparse(view: View, found: dict[Quantity, Measured], why: Reason) -> dict[Quantity, Measured]:
     """Fewer than four samples a rise: the rise time is bounded, the shape between is unknown."""
     curve = view.curve
     margin = CONSTANTS.cover_z * float(np.hypot(view.noise.total, view.level_u))
@@ -255,11 +262,11 @@ def _sparse(view: View, found: dict[Quantity, Measured]) -> dict[Quantity, Measu
     stop = int(above[0]) if len(above) else len(t) - 1
     sure = np.flatnonzero(x[: stop + 1] <= 0.1 + margin)
     start = max(float(t[sure[-1]]), 0.0) if len(sure) else 0.0
-    missing = Measured.missing(Reason.TOO_SPARSE)
+    missing = Measured.missing(why)
     lost = {
         q: missing
         for q in SHAPE
         if q not in SETTLING or (found[q].value or np.inf) < 10.0 * curve.step_s
     }
-    bound = Measured(low=0.0, high=float(t[stop]) - start, how=view.how, why=Reason.TOO_SPARSE)
+    bound = Measured(low=0.0, high=float(t[stop]) - start, how=view.how, why=why)
     return lost | {Quantity.RISE_TIME: bound}
