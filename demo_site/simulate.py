@@ -90,11 +90,11 @@ def _inputs(cases: Sequence[Case], cut: Cut, rng: np.random.Generator) -> Inputs
 
 def _reporting(cases: Sequence[Case], cut: Cut) -> ExceptionReporting:
     def deadband(case: Case) -> tuple[float, float, float]:
-        moving = case.loop.tracking or case.loop.primary is not None
+        followed = case.design.report if case.loop.tracking else _QUIET_SP
         return (
             case.design.report,
             case.design.report_out if case.loop.has_output else np.inf,
-            case.design.report if moving else _QUIET_SP,
+            case.design.report_out if case.loop.primary else followed,
         )
 
     bands: Vector = np.array([deadband(case) for case in cases], np.float64).T
