@@ -174,12 +174,17 @@ def _join(parts: Iterable[Runs]) -> Runs:
     return Runs(first[starts], last[stops], state[starts])
 
 
+def local_day(at_us: int, zone: ZoneInfo) -> date:
+    """The site's calendar day of an instant."""
+    return instant(at_us).astimezone(zone).date()
+
+
 def split_days(runs: LoopRuns, zone: ZoneInfo) -> dict[date, LoopRuns]:
     """The runs by local day of their stamps; a run that crosses midnight is cut there."""
     if not runs:
         return {}
-    first = instant(min(int(r.first_us[0]) for r in runs.values())).astimezone(zone).date()
-    last = instant(max(int(r.last_us[-1]) for r in runs.values())).astimezone(zone).date()
+    first = local_day(min(int(r.first_us[0]) for r in runs.values()), zone)
+    last = local_day(max(int(r.last_us[-1]) for r in runs.values()), zone)
     parts: dict[date, LoopRuns] = {}
     for number in range((last - first).days + 1):
         day = first + timedelta(days=number)
@@ -274,18 +279,18 @@ def _day(
 
 
 def touched(spans: Iterable[Span], reading: Reading, zone: ZoneInfo) -> list[date]:
-    """The local days whose record can depend on samples in the spans (us), in order.
-
-    These are the days within the longest silence of a span; to count them, the runs of those within
-    twice the longest silence have to be known.
-    """
+    """The local days whose record can depend on samples in the spans (us), in order."""
     longest_us = max(reading.silence_us.values())
     found = set()
     for start_us, end_us in spans:
-        first = instant(start_us - longest_us).astimezone(zone).date()
-        last = instant(end_us + longest_us).astimezone(zone).date()
+        first, last = local_day(start_us - longest_us, zone), local_day(end_us + longest_us, zone)
         found |= {first + timedelta(days=number) for number in range((last - first).days + 1)}
     return sorted(found)
+
+
+def needed(days: Collection[date], reading: Reading, zone: ZoneInfo) -> list[date]:
+    """The local days whose runs have to be known to count the days, in order."""
+    return touched([_bounds(day, zone) for day in days], reading, zone)
 
 
 def keep_days(
