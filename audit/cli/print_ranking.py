@@ -19,8 +19,8 @@ GAP = "  "
 FIXED = {"rank": 4, "criticality": 4, "standing": 11, "since": 10, "usable_steps": 5}
 """Widths of the columns whose content has one, characters."""
 
-NARROWEST_SERVICE = 8
-WIDEST_SERVICE = 40
+LEAST_ROOM = 16
+"""Characters unit and service get together, however narrow the screen."""
 
 
 def print_ranking(console: Console, found: Json, everything: bool = False) -> None:
@@ -28,7 +28,7 @@ def print_ranking(console: Console, found: Json, everything: bool = False) -> No
     _print_head(console, found)
     loops = found["loops"]
     columns = _columns(loops, console.width)
-    console.print(Text(_line(columns, HEADINGS), style="bold"))
+    _print_line(console, Text(_line(columns, HEADINGS), style="bold"))
     for group in Group:
         members = [row for row in loops if row["group"] == group.value]
         if not members:
@@ -88,15 +88,15 @@ def _counts(loops: Sequence[Json]) -> str:
 
 
 def _columns(loops: Sequence[Json], width: int) -> dict[str, int]:
-    """The width of each column, so that a line fits the screen; service takes what is left."""
+    """The width of each column, so that a line fits the screen: unit and service share the rest."""
 
     def longest(key: str) -> int:
         return max([len(HEADINGS[key]), *(len(row[key]) for row in loops)])
 
-    widths = {**FIXED, "tag": longest("tag"), "process_unit": longest("process_unit")}
-    taken = sum(widths.values()) + len(GAP) * len(widths)
-    room = max(width - taken, NARROWEST_SERVICE)
-    return {**widths, "service": min(room, longest("service"), WIDEST_SERVICE)}
+    widths = {**FIXED, "tag": longest("tag")}
+    room = max(width - sum(widths.values()) - len(GAP) * (len(HEADINGS) - 1), LEAST_ROOM)
+    unit = min(longest("process_unit"), max(room // 3, room - longest("service")))
+    return {**widths, "process_unit": unit, "service": min(room - unit, longest("service"))}
 
 
 def _line(columns: dict[str, int], cells: Json) -> str:
@@ -105,7 +105,7 @@ def _line(columns: dict[str, int], cells: Json) -> str:
     parts = []
     for key in HEADINGS:
         text, width = str(cells[key]), columns[key]
-        if key == "service" and len(text) > width:
+        if len(text) > width:
             text = text[: width - 1] + "…"
         parts.append(text.rjust(width) if key in right else text.ljust(width))
     return GAP.join(parts).rstrip()
@@ -114,12 +114,17 @@ def _line(columns: dict[str, int], cells: Json) -> str:
 def _print_loop(console: Console, row: Json, columns: dict[str, int], everything: bool) -> None:
     standing = words.STANDING[StandingWord(row["standing"])]
     cells = row | {"standing": standing, "since": row["since"] or "-"}
-    line = Text(_line(columns, cells), no_wrap=True)
+    line = Text(_line(columns, cells))
     line.highlight_words([standing], STYLE[row["standing"]])
-    console.print(line, overflow="ignore", crop=False)
+    _print_line(console, line)
     reasons = [reason["text"] for reason in row["reasons"]]
     for text in reasons if everything else reasons[:1]:
         console.print(indented(text, 6))
+
+
+def _print_line(console: Console, line: Text) -> None:
+    """A line of the list, never wrapped."""
+    console.print(line, no_wrap=True, overflow="ignore", crop=False)
 
 
 def _print_foot(console: Console, found: Json) -> None:

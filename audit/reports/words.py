@@ -31,7 +31,7 @@ QUANTITY: Mapping[Quantity, Term] = {
     Quantity.DEAD_TIME: Term("apparent dead time", "s"),
     Quantity.DECAY_RATIO: Term("decay ratio", ""),
     Quantity.DAMPING_RATIO: Term("damping ratio", ""),
-    Quantity.NATURAL_FREQUENCY: Term("natural frequency", "rad/s"),
+    Quantity.NATURAL_FREQUENCY: Term("undamped natural frequency", "rad/s"),
     Quantity.DAMPED_PERIOD: Term("damped period", "s"),
     Quantity.IAE: Term("integral of absolute error", "EU·s"),
     Quantity.OUTPUT_TRAVEL: Term("controller output travel", "% of output"),
