@@ -14,6 +14,8 @@ from audit.response.localfit import Array, Fit
 
 ALIKE = 1e-9
 """Values closer than this part of the change are one value."""
+THINNED = 3.0
+"""An archive that keeps fewer than one scan in so many is taken to be compressed."""
 
 
 @dataclass(frozen=True)
@@ -52,7 +54,7 @@ def estimate(curve: Curve) -> Noise:
     The hops of a level that is reported by exception are the deadband's, not noise.
     """
     quantum = _quantum(curve.v)
-    deadband = _deadband(curve)
+    deadband = max(_deadband(curve), _thinning(curve))
     end = curve.window_s
     stretches = [(-curve.before_s, 0.0), (0.5 * end, end), (0.75 * end, end)]
     found = [_residual(curve, lo, hi) for lo, hi in stretches]
@@ -143,6 +145,26 @@ def _deadband(curve: Curve) -> float:
         return 0.0
     least = float(np.quantile(told, 0.05))
     return least if least > 0.3 * float(np.median(told)) else 0.0
+
+
+def _thinning(curve: Curve) -> float:
+    """How far an archive that keeps turns of a line (swinging door) may be off; 0 if it is none.
+
+    Median distance of a kept sample from the line between its neighbours: 0.6 to 1 door widths
+    where many samples are kept, more where few are (own simulations), so it errs to the safe side.
+    A few irregular samples are taken to be such an archive's.
+    """
+    t, v = curve.t, curve.v
+    if curve.hold or len(t) < 5:
+        return 0.0
+    scan = scan_s(curve)
+    length = np.diff(t)
+    few = len(t) < 16 and float(length.max()) > THINNED * float(np.median(length))
+    thinned = scan > 0 and float(t[-1] - t[0]) > THINNED * scan * (len(t) - 1)
+    if not (few or thinned):
+        return 0.0
+    share = (t[1:-1] - t[:-2]) / (t[2:] - t[:-2])
+    return float(np.median(np.abs(v[1:-1] - (1.0 - share) * v[:-2] - share * v[2:])))
 
 
 def scan_s(curve: Curve) -> float:
