@@ -9,6 +9,7 @@ import pytest
 
 from audit.records import (
     Between,
+    ChangeKind,
     Measured,
     Quantity,
     Reading,
@@ -211,3 +212,51 @@ def test_a_held_process_variable_is_integrated_as_held() -> None:
     assert found.value == pytest.approx(5.0 * 10.0, rel=1e-9)
     line = made.measure().measured[Quantity.IAE]
     assert line.value == pytest.approx(5.0 * 5.0, rel=1e-9)
+
+
+def rough(seed: int) -> steps.Made:
+    """Some record or other: irregular, thinned, spiked, quantised, bad, flat, cut, of any kind."""
+    rng = np.random.default_rng(seed)
+    count = int(rng.integers(1, 400))
+    t = np.unique(np.round(rng.uniform(-40.0, 80.0, count), 3))
+    form = rng.choice(4)
+    late = np.maximum(t - rng.uniform(0.0, 5.0), 0.0)
+    y = [
+        second_order.response(late, float(rng.uniform(0.02, 3.0)), float(rng.uniform(0.05, 5.0))),
+        np.zeros(len(t)),
+        rng.standard_normal(len(t)).cumsum() / 10.0,
+        np.sin(t),
+    ][form]
+    y = y + rng.choice([0.0, 0.002, 0.05, 2.0]) * rng.standard_normal(len(t))
+    if rng.random() < 0.3:
+        y = np.round(y, 1)
+    if rng.random() < 0.3:
+        y[rng.integers(len(y))] += 1000.0
+    cut_s = float(rng.uniform(0.01, 59.0)) if rng.random() < 0.4 else None
+    kind = ChangeKind(rng.choice(list(ChangeKind)))
+    output = steps.samples(t[::3], 100.0 * np.clip(y[::3], 0.0, 1.0))
+    made = steps.make(
+        t,
+        y,
+        60.0,
+        cut_s=cut_s,
+        kind=kind,
+        good=rng.random(len(t)) > rng.choice([0.0, 0.3, 0.95]),
+        output=output if rng.random() < 0.7 else None,
+    )
+    reading = Reading(pv_between=Between(rng.choice(list(Between))))
+    return steps.Made(made.record, made.change, replace(made.settings, reading=reading))
+
+
+@pytest.mark.parametrize("block", range(6))
+def test_whatever_the_record_every_quantity_is_a_number_or_a_reason(block: int) -> None:
+    """Never NaN, never an infinity, low <= value <= high, nothing raised, nothing warned."""
+    for seed in range(40 * block, 40 * block + 40):
+        response = rough(seed).measure()
+        assert set(response.measured) == set(Quantity)
+        for quantity, found in response.measured.items():
+            numbers = [v for v in (found.low, found.value, found.high) if v is not None]
+            assert all(np.isfinite(v) for v in numbers), (seed, quantity, found)
+            assert numbers == sorted(numbers), (seed, quantity, found)
+            assert all(type(v) is float for v in numbers), (seed, quantity, found)
+            assert found.value is not None or found.why is not None, (seed, quantity)
