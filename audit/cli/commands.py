@@ -6,7 +6,7 @@ import argparse
 import os
 import sys
 from collections.abc import Callable, Mapping
-from datetime import UTC, date, datetime
+from datetime import UTC, date, datetime, timedelta
 
 from audit import check, config, reports
 from audit.cli import screen
@@ -17,9 +17,12 @@ from audit.cli.print_ranking import print_ranking
 from audit.cli.print_run import exit_code, print_report, report_json
 from audit.cli.print_store import print_status
 from audit.register import Register
+from audit.reports.contract import Json
 from audit.site import Site, open_site
 from audit.store import open_store
 from audit.store.dump import dump
+
+OLD_LIST = timedelta(days=2)
 
 
 def run(words: argparse.Namespace) -> int:
@@ -77,11 +80,23 @@ def _rank(words: argparse.Namespace) -> int:
     site = _reading(words)
     with open_store(site.config.store_url) as store:
         found = reports.ranking(store, site, words.night, words.as_published)
+    if words.night is None:
+        _warn_if_old(found)
     if words.json:
         screen.print_json(found)
     else:
         print_ranking(screen.results(), found, words.all)
     return 0
+
+
+def _warn_if_old(found: Json) -> None:
+    """An old list is not a quiet plant: said on standard error, beside the list."""
+    age = datetime.now(UTC) - datetime.fromisoformat(found["cutoff"])
+    if age > OLD_LIST:
+        screen.messages().print(
+            f"The newest list is {age.days} days old: no newer night has been audited, or no newer "
+            "export has come."
+        )
 
 
 def _history(words: argparse.Namespace) -> int:

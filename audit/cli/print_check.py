@@ -63,10 +63,13 @@ def print_findings(console: Console, found: Findings) -> None:
         [f"{column} ({kind})" for kind, column in found.unused],
     )
     _print_some(console, "Export kinds without a file", list(found.empty))
-    console.print(
-        f"{found.loops} loops, {found.specs} spec rows and {found.files} export files looked at: "
-        f"{'all can be read' if not faults else 'not all can be used'}."
-    )
+    files = f"{found.files} export files looked at"
+    if faults:
+        console.print(f"{files}; what is at fault has to be put right before an audit.")
+    else:
+        console.print(
+            f"{found.loops} loops and {found.specs} spec rows read, {files}: all can be read."
+        )
 
 
 def _print_some(console: Console, heading: str, lines: Sequence[str]) -> None:
