@@ -75,6 +75,9 @@ def loop_work(
             for a, b in _to_recall(spans, touched, loop)
             for record in queries.kept(session, loop.tag, a, b)
         ]
+        kept += [
+            record for span in spans for record in queries.edges_next_to(session, loop.tag, *span)
+        ]
         days = queries.kept_days(session, loop.tag, first_day, last_day)
     return LoopWork(
         loop=loop,

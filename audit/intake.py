@@ -37,16 +37,32 @@ class _Task:
     wanted: Mapping[str, bool]
 
 
-def new_files(
-    sources: Sequence[ExportSource], taken: Mapping[str, tuple[int, str]]
-) -> tuple[list[NewFile], int]:
-    """Files whose size or modification stamp differ from what was taken; and how many do not.
+@dataclass(frozen=True, eq=False)
+class Found:
+    """New files, the number of files known, and the sources that cannot be listed."""
 
-    ``taken``: path -> (size, stamp) of the content the store has taken.
+    new: list[NewFile]
+    known: int
+    refused: list[ExportRefused]
+
+
+def find(sources: Sequence[ExportSource], seen: Mapping[str, tuple[int, str]]) -> Found:
+    """Files whose size or modification stamp differ from what the store has seen.
+
+    ``seen``: path -> (size, stamp). A file without a stamp counts as new each time.
     """
-    found = [NewFile(file, source) for source in sources for file in exports.discover(source)]
-    new = [f for f in found if taken.get(f.file.path) != (f.file.size, f.file.stamp)]
-    return new, len(found) - len(new)
+    found = Found([], 0, [])
+    known = 0
+    for source in sources:
+        try:
+            files = exports.discover(source)
+        except ExportRefused as refused:
+            found.refused.append(refused)
+            continue
+        new = [f for f in files if not f.stamp or seen.get(f.path) != (f.size, f.stamp)]
+        found.new.extend(NewFile(file, source) for file in new)
+        known += len(files) - len(new)
+    return Found(found.new, known, found.refused)
 
 
 def batches(

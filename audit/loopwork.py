@@ -123,10 +123,8 @@ def settings_for(
 
 def days_known(spans: Sequence[Span], reading: Reading, zone: ZoneInfo) -> tuple[date, date]:
     """First and last local day whose kept runs are needed to count the days the spans concern."""
-    longest_us = max(reading.silence_us.values())
-    around = [(start - longest_us, end + longest_us) for start, end in spans]
-    concerned = days.touched(around, reading, zone)
-    return concerned[0], concerned[-1]
+    known = days.needed(days.touched(spans, reading, zone), reading, zone)
+    return known[0], known[-1]
 
 
 def _days(

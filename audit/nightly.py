@@ -20,7 +20,7 @@ from audit.errors import ExportRefused, Fault
 from audit.gather import LoopContext, loop_work, standing_works
 from audit.loopwork import LoopWork, audit_loop
 from audit.ranking import order
-from audit.records import CellAccount, Loop, Standing, instant, to_us
+from audit.records import CellAccount, Coverage, Loop, Standing, instant, to_us
 from audit.run_report import Progress, RunReport, Tally
 from audit.site import Site
 from audit.standings import standings
@@ -116,18 +116,19 @@ def _enter_register(audit: _Run, accept_older: bool) -> None:
 def _take_exports(audit: _Run) -> None:
     """Read what is new, a batch of files at a time, and work each batch through all loops."""
     with audit.store.read() as session:
-        taken = {
-            seen.path: (seen.size, seen.stamp)
-            for seen in queries.exports(session)
-            if seen.state == "taken"
+        seen = {
+            export.path: (export.size, export.stamp)
+            for export in queries.exports(session)
+            if export.state != "reading"
         }
-    files, skipped = intake.new_files(audit.site.config.exports, taken)
-    audit.tally.files_skipped += skipped
+    found = intake.find(audit.site.config.exports, seen)
+    audit.tally.files_skipped += found.known
+    audit.tally.files_refused.extend(_fault(refused) for refused in found.refused)
     loops = audit.site.register.loops
     done = 0
-    for batch in intake.batches(files, _wanted(loops), audit.pool):
+    for batch in intake.batches(found.new, _wanted(loops), audit.pool):
         done += len(batch)
-        audit.progress("reading exports", done, len(files))
+        audit.progress("reading exports", done, len(found.new))
         _take_batch(audit, batch)
 
 
@@ -143,15 +144,26 @@ def _wanted(loops: Sequence[Loop]) -> dict[str, bool]:
 
 def _take_batch(audit: _Run, batch: Sequence[intake.ReadResult]) -> None:
     fresh = [FreshExport(r.file, r.read) for r in batch if r.read is not None]
-    with audit.store.read() as session:
-        stored = queries.coverage(session)
-    tags, accounts = settle(fresh, stored)
+    tags, accounts = settle(fresh, _stored_coverage(audit, fresh))
     ids = _begin(audit, batch, fresh, accounts)
     for result in audit.pool.map(audit_loop, _loop_works(audit, tags)):
         with audit.store.write(audit.lease) as session:
             audit.tally.saved(result, writes.save_loop(session, result, audit.now))
     with audit.store.write(audit.lease) as session:
         writes.finish_exports(session, ids, audit.now)
+
+
+def _stored_coverage(audit: _Run, fresh: Sequence[FreshExport]) -> list[Coverage]:
+    """What the store knows to cover the time of the fresh files, and what their paths covered."""
+    paths = [export.file.path for export in fresh]
+    firsts = [export.read.first_us for export in fresh if export.read.first_us is not None]
+    lasts = [export.read.last_us for export in fresh if export.read.last_us is not None]
+    with audit.store.read() as session:
+        stored = queries.coverage_of_paths(session, paths)
+        if firsts and lasts:
+            around = queries.coverage(session, from_us=min(firsts), to_us=max(lasts))
+            stored += [cover for cover in around if cover.path not in set(paths)]
+    return stored
 
 
 def _begin(

@@ -29,7 +29,8 @@ class Postgres:
         self._admin(sql.SQL("SELECT pg_reload_conf()"))
 
     def url(self, name: str) -> str:
-        return self._uri.replace("/postgres?", f"/{name}?")
+        path = self._uri.replace("/postgres?", f"/{name}?")
+        return path.replace("postgresql://", "postgresql+psycopg://", 1)
 
     def create(self, template: str = "template0") -> str:
         """A new database, empty or a copy of another; its name."""

@@ -71,6 +71,18 @@ def edges(s: Session, tag: str) -> list[tuple[int, str]]:
     return sorted((row.border_us, row.side) for row in s.execute(query))
 
 
+def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record]:
+    """The kept edges of a loop on either side of a span, however far: up to two slices."""
+    of_loop = select(EdgeRow.data).where(EdgeRow.loop_id == _loop_id(tag))
+    before = of_loop.where(EdgeRow.side == "to", EdgeRow.border_us < from_us)
+    after = of_loop.where(EdgeRow.side == "from", EdgeRow.border_us > to_us)
+    found = [
+        s.execute(before.order_by(EdgeRow.border_us.desc()).limit(1)).scalar(),
+        s.execute(after.order_by(EdgeRow.border_us).limit(1)).scalar(),
+    ]
+    return [decode(data) for data in found if data is not None]
+
+
 def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
     """The current steps of a loop that rest on samples in a span, by time."""
     resting = (

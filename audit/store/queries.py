@@ -25,6 +25,7 @@ from audit.store.past import (
     day_records,
     day_records_many,
     edges,
+    edges_next_to,
     history,
     kept,
     kept_days,
@@ -48,10 +49,12 @@ from audit.store.tables import (
 
 __all__ = [
     "coverage",
+    "coverage_of_paths",
     "curve",
     "day_records",
     "day_records_many",
     "edges",
+    "edges_next_to",
     "exports",
     "history",
     "kept",
@@ -187,14 +190,7 @@ def coverage(
     to_us: int | None = None,
 ) -> list[Coverage]:
     """What time of each tag which export covers, by (tag, from, path); overlapping a span only."""
-    query: Any = select(
-        TagOfSetRow.tag,
-        ExportRow.first_us,
-        ExportRow.last_us,
-        ExportRow.source,
-        ExportRow.path,
-        ExportRow.revision,
-    ).join_from(ExportRow, TagOfSetRow, ExportRow.tag_set_id == TagOfSetRow.tag_set_id)
+    query = _coverage_query()
     if from_us is not None:
         query = query.where(ExportRow.last_us >= from_us)
     if to_us is not None:
@@ -208,6 +204,27 @@ def coverage(
             for row in s.execute(query.where(TagOfSetRow.tag.in_(some)))
         ]
     return sorted(found, key=lambda one: (one.tag, one.from_us, one.path))
+
+
+def coverage_of_paths(s: Session, paths: Collection[str]) -> list[Coverage]:
+    """What the contents last read at some paths cover, by (tag, from, path)."""
+    found = [
+        Coverage(*row)
+        for some in portions(sorted(paths))
+        for row in s.execute(_coverage_query().where(ExportRow.path.in_(some)))
+    ]
+    return sorted(found, key=lambda one: (one.tag, one.from_us, one.path))
+
+
+def _coverage_query() -> Any:
+    return select(
+        TagOfSetRow.tag,
+        ExportRow.first_us,
+        ExportRow.last_us,
+        ExportRow.source,
+        ExportRow.path,
+        ExportRow.revision,
+    ).join_from(ExportRow, TagOfSetRow, ExportRow.tag_set_id == TagOfSetRow.tag_set_id)
 
 
 def tag_sources(s: Session) -> dict[str, str]:
