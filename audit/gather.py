@@ -23,7 +23,7 @@ from audit.standings import DAYS_LOOKED_AT, StandingWork, band_changed
 from audit.store import Store, queries
 from audit.weaving.precedence import FreshTag
 from audit.weaving.spans import Span, union
-from audit.weaving.stretches import context
+from audit.weaving.stretches import context, grouped
 
 
 def reading_of(
@@ -66,9 +66,10 @@ def loop_work(
     reading = context_.reading(loop)
     config = context_.config
     first_day, last_day = days_known(spans, reading, config.timezone)
+    near = grouped(spans, loop.windows)
     with store.read() as session:
         touched = sorted(
-            {s.at_us for span in spans for s in queries.touched(session, loop.tag, *span)}
+            {s.at_us for span in near for s in queries.touched(session, loop.tag, *span)}
         )
         kept = [
             record
@@ -76,7 +77,7 @@ def loop_work(
             for record in queries.kept(session, loop.tag, a, b)
         ]
         kept += [
-            record for span in spans for record in queries.edges_next_to(session, loop.tag, *span)
+            record for span in near for record in queries.edges_next_to(session, loop.tag, *span)
         ]
         days = queries.kept_days(session, loop.tag, first_day, last_day)
     return LoopWork(

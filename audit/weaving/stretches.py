@@ -67,6 +67,13 @@ def context(spans: Iterable[Span], windows: Windows) -> list[Span]:
     return union((start - windows.reach_us, end + windows.reach_us) for start, end in spans)
 
 
+def grouped(spans: Iterable[Span], windows: Windows) -> list[Span]:
+    """The spans, those nearer to one another than a change can reach taken as one."""
+    reach_us = windows.reach_us
+    widened = union((start - reach_us, end + reach_us) for start, end in spans)
+    return [(start + reach_us, end - reach_us) for start, end in widened]
+
+
 def curve(record: Record, change: SetpointChange, windows: Windows) -> Record:
     """The slice a change is found and measured in, with each tag's bounding good samples."""
     return record.around(
