@@ -81,7 +81,7 @@ def _as_samples(role: Role, raw: RawSamples, loop: Loop) -> Samples:
 
 def _concerned(record: Record, work: LoopWork) -> list[SetpointChange]:
     """The changes near the fresh spans, and those stored earlier that rest on them."""
-    spans = to_look_at(work.spans(), work.loop.windows)
+    spans = to_look_at(record, work.spans(), work.loop.windows)
     touched = set(work.touched)
     return [
         change

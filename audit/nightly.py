@@ -70,7 +70,9 @@ def run(
         with _logged(audit):
             _enter_register(audit, accept_older)
             _take_exports(audit)
-            _publish(audit, _nights(audit, nights))
+            published = _publish(audit, _nights(audit, nights))
+            asked = now if nights is None else min(now, site.config.cutoff(published[-1]))
+            audit.tally.quiet = _quiet(audit, asked, published[-1])
         return audit.tally.report()
 
 
@@ -224,7 +226,7 @@ def _nights(audit: _Run, asked: tuple[date, date] | None) -> list[date]:
     return sorted(wanted)
 
 
-def _publish(audit: _Run, nights: Sequence[date]) -> None:
+def _publish(audit: _Run, nights: Sequence[date]) -> Sequence[date]:
     """Rank all loops for each night and keep the list, beside an earlier one of that night."""
     loops = audit.site.register.loops
     cutoffs = [(night, audit.site.config.cutoff(night)) for night in nights]
@@ -238,11 +240,12 @@ def _publish(audit: _Run, nights: Sequence[date]) -> None:
         with audit.store.write(audit.lease) as session:
             writes.save_night(session, night, cutoff, order(list_), audit.now)
         audit.tally.nights.append(night)
-    audit.tally.quiet = _quiet(audit, loops, nights[-1])
+    return nights
 
 
-def _quiet(audit: _Run, loops: Sequence[Loop], night: date) -> tuple[str, ...]:
-    asked = min(audit.now, audit.site.config.cutoff(night))
+def _quiet(audit: _Run, asked: datetime, night: date) -> tuple[str, ...]:
+    """What is missing from the feed, asked at a time; the last days are those before the night."""
+    loops = audit.site.register.loops
     with audit.store.read() as session:
         newest_us = queries.newest_stamp(session, to_us(asked))
         named = queries.tag_sources(session)

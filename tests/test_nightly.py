@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from datetime import date
+from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 
 import numpy as np
@@ -10,7 +10,9 @@ import pytest
 
 import sites
 from audit import loopwork, nightly
+from audit.records import Quantity, Standing, StandingWord
 from audit.site import open_site
+from audit.store import queries
 from sites import NOW, audit, content, opened
 
 LOOPS = (
@@ -213,3 +215,117 @@ def test_nights_asked_for_are_published_each_as_of_its_day(tmp_path: Path) -> No
     sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(plant(hours=3)))
     report = audit(folder, nights=(date(2026, 3, 1), date(2026, 3, 3)))
     assert report.nights == (date(2026, 3, 1), date(2026, 3, 2), date(2026, 3, 3))
+
+
+def sparse_rows(first_setpoint: str = "") -> list[str]:
+    """Two mornings twenty hours apart; the mode is recorded once, at the very start.
+
+    ``first_setpoint``: on the second morning the setpoint is recorded only from this stamp on.
+    """
+    rows = ["timestamp,tag,value,quality", "2026-03-01T05:59:00Z,F101.MODE,AUTO,Good"]
+    first = plant(hours=2, seed=3)
+    for start in (first.start, first.start + timedelta(hours=20)):
+        for tag in ("F101.PV", "F101.SP", "F101.OP"):
+            part = sites.Plant(first.t_s, {tag: first.columns[tag]}, start)
+            rows += sites.narrow_csv(part).splitlines()[1:]
+    late = [row for row in rows[1:] if ".SP" in row and "2026-03-02" < row < first_setpoint]
+    return [rows[0], *sorted(set(rows[1:]) - set(late))]
+
+
+@pytest.mark.parametrize("first_setpoint", ["", "2026-03-02T02:41"])
+def test_a_sample_from_before_a_long_silence_is_still_known(
+    tmp_path: Path, first_setpoint: str
+) -> None:
+    head, *rows = sparse_rows(first_setpoint)
+    half = next(i for i, row in enumerate(rows) if row > "2026-03-01T20")
+    whole, parts = lay(tmp_path / "whole", sites.NARROW), lay(tmp_path / "parts", sites.NARROW)
+    sites.write_csv(whole / "exports" / "all.csv", "\n".join([head, *rows]) + "\n")
+    audit(whole)
+    for name, some in (("b.csv", rows[half:]), ("a.csv", rows[:half])):
+        sites.write_csv(parts / "exports" / name, "\n".join([head, *some]) + "\n")
+        audit(parts)
+    steps = sites.steps_of(content(whole), "FIC-101")
+    assert sum(step["usable"] for step in steps) > 8
+    assert content(parts) == content(whole)
+
+
+def standing_of(folder: Path, tag: str, night: date | None = None, first: bool = False) -> Standing:
+    with opened(folder) as store, store.read() as session:
+        found = queries.standings(session, night, first=first)
+    assert found is not None
+    return next(standing for standing in found[1] if standing.tag == tag)
+
+
+def test_a_changed_band_is_measured_again_from_the_kept_curves(
+    record: sites.Plant, tmp_path: Path
+) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    audit(folder)
+    before = standing_of(folder, "TIC-102")
+    changed = SPECS.replace("TIC-102,2026-01-01,60,300,5", "TIC-102,2026-01-01,60,300,10")
+    (folder / "specs.csv").write_text(changed)
+    audit(folder)
+    after = standing_of(folder, "TIC-102")
+
+    def settling(standing: Standing) -> float:
+        limits = {limit.quantity: limit for limit in standing.limits}
+        median = limits[Quantity.SETTLING_TIME].median
+        assert median is not None
+        return median
+
+    assert settling(after) < settling(before) - 1.0
+    steps = sites.steps_of(content(folder), "TIC-102")
+    assert {step["settling_band_pct"] for step in steps} == {5.0}
+
+
+def test_late_data_revise_the_nights_they_touch_and_leave_what_was_published(
+    tmp_path: Path,
+) -> None:
+    folder = lay(tmp_path)
+    record = plant(hours=4, seed=9)
+    parts = [record.rows(0, 1800), record.rows(1800, 3600), record.rows(3600, len(record.t_s))]
+    for index in (0, 2):
+        sites.write_csv(folder / "exports" / f"{index}.csv", sites.wide_csv(parts[index]))
+    audit(folder)
+    night = date(2026, 3, 2)
+    published = standing_of(folder, "FIC-101", night)
+    sites.write_csv(folder / "exports" / "1.csv", sites.wide_csv(parts[1]))
+    audit(folder)
+    revised = standing_of(folder, "FIC-101", night)
+    assert revised.usable_steps > published.usable_steps
+    assert standing_of(folder, "FIC-101", night, first=True) == published
+    with opened(folder) as store, store.read() as session:
+        (info,) = queries.nights(session)
+        assert (info.night, info.revision) == (night, 2)
+
+
+def test_a_quiet_feed_is_said(record: sites.Plant, tmp_path: Path) -> None:
+    folder = lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    assert audit(folder, now=datetime(2026, 3, 2, 2, 0, tzinfo=UTC)).quiet == ()
+    (stopped,) = audit(folder, now=datetime(2026, 3, 4, 9, 0, tzinfo=UTC)).quiet
+    assert stopped.startswith("The exports have stopped: the newest good sample is 72 h old")
+
+
+def test_a_loop_whose_tags_no_export_names_is_in_the_list_and_said(
+    record: sites.Plant, tmp_path: Path
+) -> None:
+    folder = sites.SiteFiles(
+        LOOPS + "PIC-103,U2,header,pressure,P103.PV,P103.SP,,,bar,0,10,,5\n", SPECS, sites.WIDE
+    ).lay(tmp_path)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    report = audit(folder)
+    assert "No export names the tags of 1 loop: PIC-103." in report.quiet
+    assert standing_of(folder, "PIC-103").standing is StandingWord.UNSEEN
+
+
+def test_a_source_that_cannot_be_listed_stops_nothing(record: sites.Plant, tmp_path: Path) -> None:
+    exports = sites.WIDE + (
+        '\n[[exports]]\nname = "far"\nfiles = "nosuchscheme://host/*.csv"\nlayout = "wide"'
+    )
+    folder = lay(tmp_path, exports)
+    sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
+    report = audit(folder)
+    assert report.files_new == 1
+    assert [fault.file for fault in report.files_refused] == ["nosuchscheme://host/*.csv"]

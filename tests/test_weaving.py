@@ -126,7 +126,7 @@ def test_edges_hold_all_that_a_change_across_the_border_needs(
     spans = [(part[0], part[-1]) for part in (parts[0], parts[2])]
     kept = [edge.record for edge in edges(first, spans, WINDOWS)]
     woven = weave(kept, {Role.PV: new}, {Role.PV: [(parts[1][0], parts[1][-1])]})
-    for a, b in to_look_at([(parts[1][0], parts[1][-1])], WINDOWS):
+    for a, b in to_look_at(woven, [(parts[1][0], parts[1][-1])], WINDOWS):
         for at in (a, (a + b) // 2, b):
             low, high = at - 15, at + 105
             assert (
@@ -140,10 +140,17 @@ def _fields(one: Samples, other: Samples) -> list[tuple[np.ndarray, np.ndarray]]
 
 
 def test_context_reaches_past_what_is_looked_at_by_a_whole_window() -> None:
-    (looked,) = to_look_at([(1000, 2000)], WINDOWS)
+    (looked,) = to_look_at(Record({}), [(1000, 2000)], WINDOWS)
     (known,) = context([(1000, 2000)], WINDOWS)
     assert known[0] <= looked[0] - WINDOWS.before_us - WINDOWS.join_us
     assert known[1] >= looked[1] + WINDOWS.after_us + WINDOWS.join_us
+
+
+def test_the_next_setpoint_sample_is_looked_at_however_far() -> None:
+    record = Record({Role.SP: samples(1500, 9000, 9500)})
+    spans = to_look_at(record, [(1000, 2000)], WINDOWS)
+    assert any(a <= 9000 <= b for a, b in spans)
+    assert not any(a <= 9500 <= b for a, b in spans)
 
 
 def test_dependence_is_open_where_the_bounding_sample_is_not_known() -> None:

@@ -72,15 +72,18 @@ def edges(s: Session, tag: str) -> list[tuple[int, str]]:
 
 
 def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record]:
-    """The kept edges of a loop on either side of a span, however far: up to two slices."""
+    """The kept edges of a loop next to a span, however far: the last before, two after it.
+
+    Two, because the first setpoint sample of a covered span can have an edge of its own.
+    """
     of_loop = select(EdgeRow.data).where(EdgeRow.loop_id == _loop_id(tag))
     before = of_loop.where(EdgeRow.side == "to", EdgeRow.border_us < from_us)
     after = of_loop.where(EdgeRow.side == "from", EdgeRow.border_us > to_us)
     found = [
-        s.execute(before.order_by(EdgeRow.border_us.desc()).limit(1)).scalar(),
-        s.execute(after.order_by(EdgeRow.border_us).limit(1)).scalar(),
+        *s.scalars(before.order_by(EdgeRow.border_us.desc()).limit(1)),
+        *s.scalars(after.order_by(EdgeRow.border_us).limit(2)),
     ]
-    return [decode(data) for data in found if data is not None]
+    return [decode(data) for data in found]
 
 
 def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:

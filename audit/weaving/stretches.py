@@ -54,12 +54,20 @@ def _merge(parts: Sequence[Samples]) -> Samples:
     return Samples(t_us, value, good)
 
 
-def to_look_at(spans: Iterable[Span], windows: Windows) -> list[Span]:
-    """The instants at which a change may be found differently once the spans are known."""
-    return union(
-        (start - windows.after_us - windows.join_us, end + windows.before_us + windows.join_us)
-        for start, end in spans
-    )
+def to_look_at(record: Record, spans: Iterable[Span], windows: Windows) -> list[Span]:
+    """The instants at which a change may be found differently once the spans are known.
+
+    These lie within a window of a span, and at the next setpoint sample after it, however far: it
+    is a move if it differs from the last one in the span.
+    """
+    sp_us = record.of(Role.SP).only_good().t_us
+    looked: list[Span] = []
+    for start, end in spans:
+        looked.append((start - windows.after_us - windows.join_us, end))
+        after = int(np.searchsorted(sp_us, end, "right"))
+        ends = [end] if after == len(sp_us) else [end, int(sp_us[after])]
+        looked += [(at, at + windows.before_us + windows.join_us) for at in ends]
+    return union(looked)
 
 
 def context(spans: Iterable[Span], windows: Windows) -> list[Span]:
@@ -115,10 +123,23 @@ def _all_known(stamps: Sequence[int | None]) -> list[int] | None:
 
 
 def edges(record: Record, spans: Iterable[Span], windows: Windows) -> list[Edge]:
-    """The slices to keep at both borders of each newly covered span."""
+    """The slices to keep at both borders of each newly covered span.
+
+    Where the first setpoint sample of a span lies further in than a change can reach, its own slice
+    is kept too: an earlier export may show it to be a move.
+    """
     reach_us = windows.reach_us
+    sp_us = record.of(Role.SP).only_good().t_us
     kept: list[Edge] = []
     for start, end in spans:
         kept.append(Edge(start, "from", record.around(start, start + reach_us)))
         kept.append(Edge(end, "to", record.around(end - reach_us, end)))
+        first = int(np.searchsorted(sp_us, start))
+        if first < len(sp_us) and start + windows.before_us < sp_us[first] <= end:
+            kept.append(_around_setpoint(record, int(sp_us[first]), windows))
     return kept
+
+
+def _around_setpoint(record: Record, at_us: int, windows: Windows) -> Edge:
+    slice_ = record.around(at_us - windows.reach_us, at_us + windows.reach_us)
+    return Edge(at_us, "from", slice_)
