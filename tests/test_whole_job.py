@@ -117,7 +117,7 @@ def test_size_level_and_direction_do_not_change_the_numbers(tmp_path: Path) -> N
 def test_step_info_of_a_third_order_loop_with_pi_control(tmp_path: Path) -> None:
     """Against control.step_info on a dense explicit grid (python-control)."""
     s = control.tf("s")
-    loop = (1.2 + 0.04 / s) * 0.8 / ((12 * s + 1) * (5 * s + 1) * (2 * s + 1))
+    loop = (2.0 + 0.15 / s) * 0.8 / ((12 * s + 1) * (5 * s + 1) * (2 * s + 1))
     closed = control.feedback(loop, 1)
     dense: NDArray[np.float64] = np.arange(0.0, 900.0, 0.02)
     _, y = control.step_response(closed, dense)
