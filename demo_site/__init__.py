@@ -193,7 +193,7 @@ def _tested(cases: Sequence[Case]) -> list[tuple[Answer, Answer | None]]:
     for number, case in enumerate(cases):
         scan_s, inner = case.design.scan_s, inner_of.get(case.loop.tag)
         if inner is not None:
-            before[number] = cascade_step_test(case.design, inner, STEP, test_s[number])
+            before[number] = cascade_step_test([case.design], inner, STEP, test_s[number])[:, 0]
         full = answer(after[number], STEP, scan_s) if case.story.fault else None
         found.append((answer(before[number], STEP, scan_s), full))
     return found

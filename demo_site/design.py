@@ -68,7 +68,7 @@ class _Kind:
 
 
 _KINDS = {
-    "flow": _Kind(1, (5.0, 10.0), (0.2, 0.35), (2, 4), (1.6, 2.2), 0.05, 1.0, 25.0, 0.3),
+    "flow": _Kind(1, (8.0, 15.0), (0.2, 0.35), (4, 6), (1.6, 2.2), 0.05, 1.0, 25.0, 0.3),
     "pressure": _Kind(2, (25.0, 60.0), (0.1, 0.2), (3, 5), (1.4, 2.0), 0.06, 1.0, 15.0, 0.4),
     "temperature": _Kind(10, (200.0, 420.0), (0.1, 0.2), (3, 6), (1.4, 2.0), 0.05, 0.6, 4.0, 0.3),
     "composition": _Kind(10, (280.0, 480.0), (0.0, 0.1), (9, 14), (1.3, 1.7), 0.05, 0.4, 4.0, 0.25),
@@ -220,7 +220,7 @@ def full_size(healthy: Design, cause: str, rng: np.random.Generator) -> float:
         other_s = healthy.scan_s / 2 + healthy.lag2_s / 2
         return float((rng.uniform(0.66, 0.76) / pace - other_s) / healthy.dead_s - 1)
     low, high = {
-        "stiction": (2.2, 3.2),
+        "stiction": (3.5, 4.5),
         "gain_loss": (0.44, 0.54),
         "retune_slack": (0.8, 1.2),
         "retune_reset": (7.0, 8.0),

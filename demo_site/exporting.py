@@ -20,10 +20,11 @@ import pyarrow.compute as pc
 from numpy.typing import NDArray
 from pyarrow import csv as pa_csv
 
+from .historian import unmoved
 from .lanes import Vector
 from .operators import DAY_S, TO_AUTO, TO_MANUAL
 from .plant import NUMERIC_MODE, PlantLoop
-from .simulate import Case, Kept
+from .simulate import INNER_SP, Case, Kept
 
 DAY_MS = DAY_S * 1000
 SUFFIXES = ("PV", "OP", "SP", "MODE")
@@ -80,6 +81,10 @@ def rows_of(kept: Kept, rng: np.random.Generator) -> Rows:
     places = np.array([decimals(case) for case in cases])[index]
     power = 10.0 ** np.where(is_output, 2, places)
     value = np.where(is_output, reports.value, low + reports.value / 100 * span)
+    for number in (number for number, case in enumerate(cases) if case.loop.primary):
+        own = np.flatnonzero((index == number) & (reports.signal == 2))
+        own = own[np.argsort(t_ms[own], kind="stable")]
+        value[own] = unmoved(value[own], INNER_SP / 100 * cases[number].loop.span)
     rows = Rows(
         t_ms=t_ms,
         tag=np.array([case.number for case in cases])[index] * 4 + reports.signal,

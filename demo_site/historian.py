@@ -79,3 +79,14 @@ class ExceptionReporting:
             lane=where % lanes,
             value=np.concatenate([values for _, _, values in self._found]),
         )
+
+
+def unmoved(value: Vector, deadband: float) -> Vector:
+    """Reports [n] of one signal in order of time, where those within the deadband of the value last
+    reported (heartbeats) say that value again.
+    """
+    found = value.tolist()
+    for at in range(1, len(found)):
+        if abs(found[at] - found[at - 1]) <= deadband:
+            found[at] = found[at - 1]
+    return np.array(found)

@@ -28,6 +28,8 @@ _LIVE_H = (1, 3, 6, 12, 24)
 """Hours a lane may last; under three only the fastest loops, which do not limit-cycle."""
 _MOST_LANES = 16_000
 _QUIET_SP = 0.01
+INNER_SP = 0.5
+"""Deadband of an inner loop's setpoint, percent: its primary moves it all day long."""
 
 
 @dataclass(frozen=True)
@@ -94,7 +96,7 @@ def _reporting(cases: Sequence[Case], cut: Cut) -> ExceptionReporting:
         return (
             case.design.report,
             case.design.report_out if case.loop.has_output else np.inf,
-            case.design.report_out if case.loop.primary else followed,
+            INNER_SP if case.loop.primary else followed,
         )
 
     bands: Vector = np.array([deadband(case) for case in cases], np.float64).T
