@@ -50,7 +50,15 @@ class AtMost:
     why: Reason
 
 
-Expected = About | LongerThan | AtMost | Reason
+@dataclass(frozen=True)
+class Between:
+    """Bounded below and above, the truth between."""
+
+    truth: float
+    why: Reason
+
+
+Expected = About | LongerThan | AtMost | Between | Reason
 
 
 @dataclass(frozen=True)
@@ -270,6 +278,29 @@ CASES = [
     Case("drifting before", lambda: plain(PLAIN + np.where(T < 0, T / 40.0, 0.0)), {
         **every(Reason.UNSETTLED_BEFORE, SHAPE), Q.STEADY_STATE_ERROR: About(0.0, 1e-3),
     }),
+    Case("drifting a little before", lambda: plain(PLAIN + np.where(T < 0, T / 1000.0, 0.0)), {
+        Q.RISE_TIME: About(1.6376, 0.02), Q.OVERSHOOT: About(16.303, 0.5),
+        Q.SETTLING_TIME: About(8.076, 0.1), Q.STEADY_STATE_ERROR: About(0.0, 1e-3),
+    }),
+    Case("drifting before, too much for settling only", lambda: plain(
+        PLAIN + np.where(T < 0, T / 400.0, 0.0)), {
+        Q.RISE_TIME: About(1.6376, 0.02), Q.OVERSHOOT: About(16.303, 0.5),
+        Q.SETTLING_TIME_2PCT: Reason.UNSETTLED_BEFORE, Q.SETTLING_TIME_5PCT: About(5.289, 0.1),
+    }),
+    Case("moved long before, at rest since", lambda: plain(PLAIN + np.where(T < -8, 0.4, 0.0)), {
+        Q.RISE_TIME: About(1.6376, 0.02), Q.OVERSHOOT: About(16.303, 0.2),
+        Q.SETTLING_TIME: About(8.076, 0.05),
+    }),
+    Case("cut when nearly settled: its own level, no dwell", lambda: cut(12.0), {
+        Q.RISE_TIME: About(1.6376, 0.03), Q.OVERSHOOT: About(16.303, 1.0),
+        Q.STEADY_STATE_ERROR: About(0.0, 0.05), Q.IAE: Reason.CUT_SHORT,
+        Q.SETTLING_TIME: LongerThan(5.0, 8.2, Reason.CUT_SHORT),
+    }, how="direct"),
+    Case("three samples a rise: a peak is still seen", lambda: steps.step(
+        half, 1.6376 / 3.0, 60.0), {
+        Q.RISE_TIME: Between(1.6376, Reason.TOO_SPARSE), Q.OVERSHOOT: About(16.303, 0.5),
+        Q.PEAK_TIME: About(3.6276, 0.3), Q.UNDERSHOOT: Reason.TOO_SPARSE,
+    }),
     Case("drifting before, and never settles", lambda: plain(
         np.where(T < 0, T / 40.0, 0.0) + np.maximum(T, 0.0) / 120.0), {
         Q.SETTLING_TIME: LongerThan(60.0, 60.0, Reason.CUT_SHORT),
@@ -329,6 +360,11 @@ def check(found: Measured, expected: Expected, quantity: Quantity) -> None:
         assert (found.value, found.high, found.why) == (None, None, expected.why), told
         assert found.low is not None, told
         assert expected.least - 1e-9 <= found.low <= expected.most + 1e-9, told
+    elif isinstance(expected, Between):
+        assert (found.value, found.why) == (None, expected.why), told
+        assert found.low is not None, told
+        assert found.high is not None, told
+        assert 0.0 < found.low <= expected.truth <= found.high, told
     else:
         assert (found.value, found.why) == (None, expected.why), told
         assert found.high is not None, told

@@ -128,6 +128,22 @@ def test_more_noise_means_wider_intervals() -> None:
     assert widths[0] < widths[1] < widths[2]
 
 
+def test_a_slow_swing_is_no_noise_to_be_smoothed_away_with_the_rise() -> None:
+    """A swing of 4 % with five rise times to a period: the rise time stays within what it adds.
+
+    At most 0.04 / slope at either crossing; the slope at 10 and 90 % of z = 0.5 is over 0.3 w.
+    """
+    t = steps.stamps(0.4, 60.0, before_s=20.0, past_s=0.8)
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    values = []
+    for phase in np.linspace(0.0, 2.0 * np.pi, 7):
+        swing = 0.04 * np.sin(2.0 * np.pi * t / 8.2 + phase) * np.exp(-np.abs(t) / 30.0)
+        found = steps.make(t, y + swing, 60.0).measure().measured[Quantity.RISE_TIME]
+        values += [] if found.value is None else [found.value]
+    assert len(values) >= 3
+    assert np.abs(np.array(values) - second_order.rise_time(0.5)).max() < 2 * 0.04 / 0.3 + 0.05
+
+
 def test_noise_alone_makes_no_peak() -> None:
     """Without an overshoot the interval starts at 0 and there is no peak time."""
     peaks = 0

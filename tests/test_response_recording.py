@@ -214,6 +214,20 @@ def test_a_held_process_variable_is_integrated_as_held() -> None:
     assert line.value == pytest.approx(5.0 * 5.0, rel=1e-9)
 
 
+@pytest.mark.parametrize("first_s", [0.2, 0.4, 0.5])
+def test_a_level_reported_long_ago_and_held_is_no_sparse_sampling(first_s: float) -> None:
+    """The sample before the response is 20 s old, as under exception reporting: the samples of a
+    rise count from the response's start on, and the level holds until just before it."""
+    t = np.concatenate([[-80.0, -20.0], np.arange(first_s, 60.0, 0.3)])
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
+    made = steps.make(t, y, 60.0)
+    held = replace(made.settings, reading=Reading(pv_between=Between.HOLD))
+    measured = steps.Made(made.record, made.change, held).measure().measured
+    for quantity, truth in exact(0.5).items():
+        assert measured[quantity].value == pytest.approx(truth, rel=0.02), quantity
+        assert holds(measured[quantity], truth), quantity
+
+
 def rough(seed: int) -> steps.Made:
     """Some record or other: irregular, thinned, spiked, quantised, bad, flat, cut, of any kind."""
     rng = np.random.default_rng(seed)

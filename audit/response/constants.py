@@ -41,6 +41,8 @@ class Constants:
     """A turn of the smoothed curve counts beyond this many of its sd."""
     coarse_sd: float = 0.03
     """Share of the change the noise is brought down to for a first look."""
+    look_rises: float = 2.0
+    """… but with a mean no longer than half the rise."""
     grid_points: int = 400
     settle_band: float = 0.05
     settle_sd: float = 5.0
@@ -56,16 +58,26 @@ class Constants:
     """Relative standard uncertainty of the noise part of the IAE."""
     """Settled at all: inside 5 % or 5 sd of the smoothed curve for the dwell."""
     dwell_samples: int = 10
-    drift_share: float = 0.02
-    drift_sd: float = 3.5
-    """Drifting before: beyond 2 % of the change over the window and beyond 3.5 standard errors."""
-    moving_share: float = 0.05
-    moving_sd: float = 6.0
-    """Still moving before: slow excursions beyond 5 % of the change and 6 sd."""
+    carried_share: float = 0.03
+    """What moved before the change spoils the shape if it would add more than 3 % of the change
+    over the rise …"""
+    carried_band: float = 0.5
+    """… and a settling time if it would add more than half its band over the settling; less than
+    that goes into the intervals."""
+    near_share: float = 0.05
+    """A final level is known without the dwell if its standard uncertainty is under 5 %."""
+    least_away: float = 0.05
+    """Levels closer than 5 % of the change: nothing to look for settling in."""
     no_response_share: float = 0.2
     no_response_u: float = 4.0
     sparse_rise: float = 4.0
     """Fewer samples a rise: the rise time is bounded only."""
+    sparse_peak: float = 2.5
+    """Fewer samples a rise: a peak may be missed as well. With so many its height is within 0.5 %
+    of the change and its time within half an interval (second order; own simulations):"""
+    sparse_peak_u: float = 0.003
+    sparse_when_u: float = 0.4
+    """standard uncertainties at that many, in parts of the change and of an interval."""
     compressed_share: float = 0.05
     compressed_band: float = 2.3
     """Deadband beyond 5 % of the change, or beyond the band / 2.5 for settling, a little
@@ -82,8 +94,13 @@ class Constants:
     """The highest of a smoothed level lies about so many sd above it by chance alone."""
     second_peak_u: float = 4.0
     """… and a second one beyond so many: it is the highest of several places."""
+    oscillation_from: float = 0.3
+    """Looked for from this share of the window on."""
     oscillation_share: float = 0.02
-    oscillation_sd: float = 3.0
+    oscillation_sd: float = 0.5
+    """An amplitude beyond so many sd of the noise, where the time before is as regular; …"""
+    oscillation_sd_alone: float = 0.9
+    """… and where it is not: noise alone looks regular in 2 % of short records (simulated)."""
     oscillation_crossings: int = 8
     oscillation_regularity: float = 1.0
     oscillation_ratio: float = 2.0

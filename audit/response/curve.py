@@ -89,7 +89,11 @@ def spikes(t: Array, v: Array) -> NDArray[np.bool_]:
 def _fill(
     t: Array, step_s: float, hold: bool, window_s: float
 ) -> tuple[Array, NDArray[np.int64], NDArray[np.int64], Array]:
-    """Stamps with points put into long silences, and what each point is made of."""
+    """Stamps with points put into long silences, and what each point is made of.
+
+    A held value holds until one typical interval before the next sample: had it changed before
+    then, that would have been reported.
+    """
     n = len(t)
     if n == 0 or step_s <= 0:
         everything = np.arange(n)
@@ -103,8 +107,9 @@ def _fill(
     count = np.maximum(count, 1)
     a = np.repeat(np.arange(n), count)
     nth = np.arange(len(a)) - np.repeat(np.cumsum(count) - count, count)
-    share = nth / count[a]
-    ft = t[a] + share * length[a]
     b = np.minimum(a + 1, n - 1)
-    wb = np.zeros(len(a)) if hold else share
-    return ft, a, b, wb
+    if hold:
+        kept = (length - step_s) / np.maximum(count - 1, 1)
+        return t[a] + nth * kept[a], a, b, np.zeros(len(a))
+    share = nth / count[a]
+    return t[a] + share * length[a], a, b, share

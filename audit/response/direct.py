@@ -59,7 +59,7 @@ def measure(curve: Record, change: SetpointChange, settings: MeasureSettings) ->
     if ends is None:
         return Response(_all_missing(Reason.GAP), version, settings.band_pct)
     measured = _quantities(record, made, noise, ends, change, settings)
-    y_end = ends.y_end if ends.is_settled else None
+    y_end = ends.y_end if ends.has_level else None
     return Response(
         measured,
         version,
@@ -136,7 +136,8 @@ def _shape(
         u1=ends.u_end / size,
         stamp_u=_stamp_u(record, curve, change),
         end_s=ends.settled.until_s,
-        settled=ends.is_settled,
+        rate=abs(ends.y0.rate) / size,
+        has_level=ends.has_level,
         how=ends.how,
         cut=change.cut or Reason.CUT_SHORT,
         seed=seed(change.at_us),
@@ -154,7 +155,7 @@ def _stamp_u(record: Record, curve: Curve, change: SetpointChange) -> float:
 
 def _error(ends: Ends, change: SetpointChange) -> Measured:
     """r1 - y_end, engineering units; never from the last sample, never where it was cut."""
-    if ends.y_end is None or not ends.is_settled:
+    if ends.y_end is None or not ends.has_level:
         return Measured.missing(change.cut or Reason.CUT_SHORT)
     size = change.size_eu
     return interval((1.0 - ends.y_end) * size, ends.u_end * abs(size), ends.how)
@@ -170,7 +171,7 @@ def _iae(
         ((at - change.at_us) / SECOND_US, (value - change.sp_from) / change.size_eu)
         for at, value in change.moves
     )
-    level = ends.y_end if ends.is_settled else None
+    level = ends.y_end if ends.has_level else None
     value, u = absolute_error(curve, noise, moves or ((0.0, 1.0),), curve.window_s, level)
     size = abs(change.size_eu)
     return interval(value * size, u * size, "direct", 0.0)
@@ -203,7 +204,7 @@ def _screen(
         screening.spoil(measured, screening.SHAPE, Reason.GAP)
     if screening.oscillating(curve, noise):
         screening.spoil(measured, screening.SHAPE, Reason.OSCILLATING)
-    if ends.y0.moving:
-        screening.spoil(measured, screening.SHAPE, Reason.UNSETTLED_BEFORE)
+    if ends.y_end is not None:
+        screening.unsettled(measured, ends.y0, ends.size, entry, curve.window_s, settings.band_pct)
     if ends.settled.until_s < curve.window_s and ends.answers:
         screening.spoil(measured, (Quantity.IAE,), Reason.DISTURBED)

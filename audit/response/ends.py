@@ -21,6 +21,10 @@ from audit.response.shape import boxcar, first_look, half_width
 AT_SETPOINT = "direct_r1"
 
 
+SWING_RISES = 3.0
+"""A stretch of so many rise times holds more than half a swing of a response that rings."""
+
+
 @dataclass(frozen=True)
 class Ends:
     """Levels in parts of the change (0 the old setpoint, 1 the new).
@@ -46,6 +50,11 @@ class Ends:
     def is_settled(self) -> bool:
         return self.settled.entry_s is not None
 
+    @property
+    def has_level(self) -> bool:
+        """Whether the response has a final level of its own, settled for its dwell or not."""
+        return self.y_end is not None and self.how != AT_SETPOINT
+
 
 def find(
     curve: Curve, noise: Noise, change: SetpointChange, settings: MeasureSettings
@@ -63,20 +72,31 @@ def find(
     still = abs(away) < max(CONSTANTS.no_response_share, CONSTANTS.no_response_u * u_away)
     if still and full and abs(tail.drift) < CONSTANTS.no_response_share:
         return Ends(y0, tail.value, tail.u, "direct", Settled(0.0, end), answers=False)
+    if abs(away) <= CONSTANTS.least_away:
+        return _at_setpoint(y0, change, settings, end)
     origin = (change.moves[-1][0] - change.at_us) / 1e6 if change.moves else 0.0
-    stay = Settled(None, end)
-    if abs(away) > CONSTANTS.moving_share:
-        stay = _stay(curve, noise, y0.value, tail.value, origin)
-    found = None
-    if stay.entry_s is not None:
-        found = final(curve, noise, stay.entry_s, stay.until_s)
-    if found is not None:
-        return Ends(y0, found.value, found.u, "direct", stay)
-    return _at_setpoint(y0, change, settings, end)
+    rise, stay = _stay(curve, noise, y0.value, tail.value, origin)
+    swing_s = SWING_RISES * rise
+    y0 = before(curve, noise, swing_s) or y0
+    from_s = stay.entry_s or origin
+    found = final(curve, noise, from_s, stay.until_s, swing_s)
+    if found is None or not (stay.entry_s is not None or _near(found, y0)):
+        return _at_setpoint(y0, change, settings, end)
+    return Ends(y0, found.value, found.u, "direct", stay)
 
 
-def _stay(curve: Curve, noise: Noise, y0: float, y_end: float, origin: float) -> Settled:
-    """Coarse settling of the smoothed curve; times counted from ``origin``, returned from t0."""
+def _near(found: Level, y0: Level) -> bool:
+    """Not settled for its dwell when it ended, but close enough to tell where it was going."""
+    return found.u < CONSTANTS.near_share * abs(found.value - y0.value)
+
+
+def _stay(
+    curve: Curve, noise: Noise, y0: float, y_end: float, origin: float
+) -> tuple[float, Settled]:
+    """Rise time, s, and coarse settling of the smoothed curve.
+
+    Times counted from ``origin``, returned from t0. A response that never rose: no rise, 0.
+    """
     size = y_end - y0
     x = (curve.fv - y0) / size
     seen = replace(noise, sd=noise.sd / abs(size), deadband=noise.deadband / abs(size))
@@ -88,7 +108,7 @@ def _stay(curve: Curve, noise: Noise, y0: float, y_end: float, origin: float) ->
     inside = (curve.ft >= origin) & (curve.ft <= curve.window_s)
     found = coarse(curve.ft[inside] - origin, smooth[inside], band, curve.window_s - origin)
     entry = None if found.entry_s is None else found.entry_s + origin
-    return Settled(entry, found.until_s + origin)
+    return rise or 0.0, Settled(entry, found.until_s + origin)
 
 
 def _left(noise: Noise, width: int) -> float:

@@ -14,8 +14,12 @@ from audit.response.curve import Curve
 from audit.response.localfit import Array
 from audit.response.noise import ALIKE, Noise
 
-TAILS = (0.5, 0.25, 0.1)
-"""Shares of the time to the end that are tried as the final stretch."""
+TAILS = ((0.5, 0.7), (0.25, 1.4), (0.1, 3.5))
+"""Shares of the time to the end that are tried as the final stretch; how much of a stretch's own
+drift is still to come if it goes on for a third of the time so far."""
+LEADS = ((1.0, 0.25), (0.5, 0.25), (0.25, 0.25))
+"""Shares of the time before the change that are tried as the stretch y0 is taken from; how unsure
+the level at its end is, of its drift."""
 
 
 @dataclass(frozen=True)
@@ -23,37 +27,60 @@ class Level:
     """A level, its standard uncertainty, and what moved while it was taken.
 
     ``chance``: the part of u that is noise and recording. ``drift``: change over the stretch
-    beyond chance. ``samples``: how many lie inside.
-    ``moving``: drifts or swings too much to be a level.
+    beyond chance, signed; ``rate``: the same per s. ``swing``: rms of slow swings beyond chance.
+    ``samples``: how many lie inside.
     """
 
     value: float
     u: float
     chance: float
     drift: float
+    rate: float
+    swing: float
     samples: int
-    moving: bool
 
 
-def before(curve: Curve, noise: Noise) -> Level | None:
-    """The level over [-before, 0]; None without any sample to take it from."""
-    upto = curve.t <= 0
+def before(curve: Curve, noise: Noise, least_s: float = 0.0) -> Level | None:
+    """The level reached at the end of [-before, 0]; None without any sample to take it from.
+
+    Of several stretches that end at 0, as ``final``: what moved long before is no matter. A drift
+    beyond chance is followed to its end.
+    """
+    found = _least_uncertain(curve, noise, -curve.before_s, 0.0, LEADS, least_s)
+    return None if found is None else replace(found, value=found.value + 0.5 * found.drift)
+
+
+def final(
+    curve: Curve, noise: Noise, from_s: float, end_s: float, least_s: float = 0.0
+) -> Level | None:
+    """The level at the end of from_s..end_s: of several final stretches the least uncertain."""
+    return _least_uncertain(curve, noise, from_s, end_s, TAILS, least_s)
+
+
+def _least_uncertain(
+    curve: Curve,
+    noise: Noise,
+    from_s: float,
+    end_s: float,
+    tried: tuple[tuple[float, float], ...],
+    least_s: float,
+) -> Level | None:
+    """Of the stretches that are these shares of from_s..end_s the one with the least uncertainty.
+
+    None shorter than ``least_s`` but the longest, so that a swing is not taken for a level where
+    it turns.
+    """
+    upto = curve.t <= end_s
     if not bool(upto.any()):
         return None
-    return level(curve.t[upto], curve.v[upto], -curve.before_s, 0.0, curve.hold, noise)
-
-
-def final(curve: Curve, noise: Noise, from_s: float, end_s: float) -> Level | None:
-    """The level at the end of from_s..end_s: of several final stretches the least uncertain."""
+    t, v = curve.t[upto], curve.v[upto]
     best: Level | None = None
-    for share in TAILS:
-        lo = end_s - share * (end_s - from_s)
-        upto = curve.t <= end_s
-        if not bool(upto.any()):
-            return None
-        found = level(curve.t[upto], curve.v[upto], lo, end_s, curve.hold, noise)
-        ahead = 0.35 * found.drift / share
-        found = replace(found, u=float(np.hypot(found.u, ahead)))
+    for share, ahead in tried:
+        length = share * (end_s - from_s)
+        if best is not None and length < least_s:
+            break
+        found = level(t, v, end_s - length, end_s, curve.hold, noise)
+        found = replace(found, u=float(np.hypot(found.u, ahead * found.drift)))
         enough = found.samples >= CONSTANTS.dwell_samples or best is None
         if enough and (best is None or found.u < 0.98 * best.u):
             best = found
@@ -71,11 +98,11 @@ def level(t: Array, v: Array, lo: float, hi: float, hold: bool, noise: Noise) ->
     inside = int(((t >= lo) & (t <= hi)).sum())
     count = max(1.0, 1.0 / float(weight @ weight))
     chance = noise.sd * np.sqrt(min(noise.inflation / count, 1.0))
-    drift, swing, moving = _motion(t, v, weight, noise)
+    drift, swing = _motion(t, v, weight, noise)
     chance = float(np.hypot(chance, noise.coarse))
     spread = float(np.sqrt(weight @ (v - value) ** 2 / count))
     u = np.sqrt(max(chance, spread) ** 2 + (0.3 * drift) ** 2 + (0.3 * swing) ** 2)
-    return Level(value, float(u), chance, drift, inside, moving)
+    return Level(value, float(u), chance, drift, drift / max(hi - lo, 1e-9), swing, inside)
 
 
 def _durations(t: Array, lo: float, hi: float, hold: bool) -> Array:
@@ -101,34 +128,22 @@ def _robust_mean(v: Array, weight: Array) -> float:
     return middle + float(weight @ off)
 
 
-def _motion(t: Array, v: Array, weight: Array, noise: Noise) -> tuple[float, float, bool]:
-    """Drift and slow swing beyond chance over a stretch, and whether it is no level at all."""
+def _motion(t: Array, v: Array, weight: Array, noise: Noise) -> tuple[float, float]:
+    """Drift, signed, and slow swing beyond chance over a stretch."""
     if len(t) < 4:
-        return 0.0, 0.0, False
+        return 0.0, 0.0
     z = t - float(weight @ t)
     spread = float(weight @ (z * z))
     if spread <= 0:
-        return 0.0, 0.0, False
+        return 0.0, 0.0
     mean = float(weight @ v)
     slope = float(weight @ (z * (v - mean))) / spread
     length = float(t[-1] - t[0])
     count = max(2.0, 1.0 / float(weight @ weight))
     error = noise.sd * np.sqrt(noise.inflation / count) * length / np.sqrt(spread)
     error = float(np.hypot(error, noise.coarse))
-    drift = abs(slope * length)
-    beyond = float(np.sqrt(max(0.0, drift**2 - 2.0 * error**2)))
+    drift = slope * length
+    beyond = float(np.copysign(np.sqrt(max(0.0, drift**2 - 2.0 * error**2)), drift))
     left = v - mean - slope * z
     swing = float(np.sqrt(max(0.0, float(weight @ (left * left)) - 1.3 * noise.sd**2)))
-    drifting = drift > max(CONSTANTS.drift_share, CONSTANTS.drift_sd * error)
-    reach = float(np.ptp(_smoothed(left)))
-    swinging = reach > max(CONSTANTS.moving_share, CONSTANTS.moving_sd * noise.total)
-    return beyond, swing, drifting or swinging
-
-
-def _smoothed(v: Array) -> Array:
-    """Running mean of five, for the look at slow swings."""
-    if len(v) < 8:
-        return v
-    total = np.concatenate([[0.0], np.cumsum(v)])
-    mean: Array = (total[5:] - total[:-5]) / 5.0
-    return mean
+    return beyond, swing

@@ -14,6 +14,9 @@ from audit.response.localfit import Array, Fit
 
 ALIKE = 1e-9
 """Values closer than this part of the change are one value."""
+ENOUGH = 80
+"""Samples half of the time before the change has to hold to tell the noise: fewer samples of
+correlated noise look calmer than they are."""
 THINNED = 3.0
 """An archive that keeps fewer than one scan in so many is taken to be compressed."""
 
@@ -51,7 +54,8 @@ class Noise:
 def estimate(curve: Curve) -> Noise:
     """Noise from the quietest of: before the change, the last half, the last quarter.
 
-    The hops of a level that is reported by exception are the deadband's, not noise.
+    Also from the last half of the time before where it holds enough samples. The hops of a level
+    that is reported by exception are the deadband's, not noise.
     """
     quantum = _quantum(curve.v)
     deadband = max(_deadband(curve), _thinning(curve))
@@ -59,6 +63,9 @@ def estimate(curve: Curve) -> Noise:
     stretches = [(-curve.before_s, 0.0), (0.5 * end, end), (0.75 * end, end)]
     found = [_residual(curve, lo, hi) for lo, hi in stretches]
     found = [r for r in found if len(r) >= 8]
+    lead = _residual(curve, -0.5 * curve.before_s, 0.0)
+    if len(lead) >= ENOUGH:
+        found.append(lead)
     if not found:
         return Noise(_bend_sd(curve), 0.0, quantum, deadband)
     sds = [_scale(r) for r in found]

@@ -21,6 +21,7 @@ from audit.records import (
 )
 from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
+from audit.response.levels import Level
 from audit.response.noise import Noise
 from audit.response.shape import boxcar
 
@@ -28,6 +29,12 @@ SETTLING = (
     Quantity.SETTLING_TIME,
     Quantity.SETTLING_TIME_2PCT,
     Quantity.SETTLING_TIME_5PCT,
+)
+PEAKS = (
+    Quantity.OVERSHOOT,
+    Quantity.PEAK_TIME,
+    Quantity.DECAY_RATIO,
+    Quantity.DAMPED_PERIOD,
 )
 SHAPE = (
     Quantity.RISE_TIME,
@@ -41,7 +48,7 @@ SHAPE = (
 FROM_MODEL = (Quantity.DEAD_TIME, Quantity.DAMPING_RATIO, Quantity.NATURAL_FREQUENCY)
 SPARE_LONGER = (Reason.UNSETTLED_BEFORE, Reason.OUTPUT_SATURATED)
 """A "longer than" stands in spite of these."""
-CAUSES = (Reason.GAP, Reason.BAD_QUALITY, Reason.OSCILLATING)
+CAUSES = (Reason.GAP, Reason.BAD_QUALITY, Reason.OSCILLATING, Reason.UNSETTLED_BEFORE)
 FOLLOW = (Reason.NOISY, Reason.NO_PEAK, Reason.TOO_SPARSE)
 
 
@@ -115,18 +122,42 @@ def oscillating(curve: Curve, noise: Noise) -> bool:
     the signal itself; similar in amplitude and, where the time before shows it, in period.
     """
     end = curve.window_s
-    after = _swing(curve, 0.5 * end, end)
+    after = _swing(curve, CONSTANTS.oscillation_from * end, end)
     prior = _swing(curve, -curve.before_s, 0.0)
     if after is None or prior is None:
         return False
     amplitude, period, regular, sustained = after
-    was, was_period, _, _ = prior
-    least = max(CONSTANTS.oscillation_share, CONSTANTS.oscillation_sd * 0.3 * noise.sd)
+    was, was_period, was_regular, _ = prior
+    sure = CONSTANTS.oscillation_sd if was_regular else CONSTANTS.oscillation_sd_alone
+    least = max(CONSTANTS.oscillation_share, sure * noise.sd)
     if not (regular and sustained) or amplitude < least:
         return False
     ratio = CONSTANTS.oscillation_ratio
     alike = amplitude / ratio <= was <= amplitude * ratio
     return alike and (was_period is None or period is None or 0.5 <= was_period / period <= 2.0)
+
+
+def unsettled(
+    measured: dict[Quantity, Measured],
+    y0: Level,
+    size: float,
+    entry_s: float | None,
+    window_s: float,
+    band_pct: float,
+) -> None:
+    """Spoil what the motion before the change would add to materially, if it went on.
+
+    To the shape: more than 3 % of the change over the rise. To a settling time: more than half its
+    band until it settles. ``size``: y_end - y0; ``entry_s``: coarse settling, None if it did not.
+    """
+    rise = measured[Quantity.RISE_TIME]
+    rise_s = rise.value or rise.high or window_s
+    if np.hypot(y0.rate * rise_s, y0.swing) > CONSTANTS.carried_share * abs(size):
+        spoil(measured, SHAPE, Reason.UNSETTLED_BEFORE)
+    added = np.hypot(y0.rate * (entry_s or window_s), y0.swing)
+    for quantity, band in zip(SETTLING, (band_pct, 2.0, 5.0), strict=True):
+        if added > CONSTANTS.carried_band * band / 100.0 * abs(size):
+            spoil(measured, (quantity,), Reason.UNSETTLED_BEFORE)
 
 
 def _swing(curve: Curve, lo: float, hi: float) -> tuple[float, float | None, bool, bool] | None:

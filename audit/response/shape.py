@@ -69,12 +69,26 @@ def boxcar(x: Array, width: int) -> Array:
 
 
 def first_look(curve: Curve, x: Array, noise: Noise) -> Look:
-    """Crossings of a running mean that brings the noise down to 3 % of the change."""
+    """Crossings of a running mean that brings the noise down to 3 % of the change.
+
+    Where such a mean would be as long as the rise itself (noise that swings slowly) a shorter one
+    has to do.
+    """
     width = int(np.ceil((noise.sd / CONSTANTS.coarse_sd) ** 2 * noise.inflation)) | 1
-    smooth = boxcar(x, min(width, len(x) // 4 | 1))
+    width = min(width, len(x) // 4 | 1)
     start = max(int(np.searchsorted(curve.ft, 0.0, "right")) - 1, 0)
     stop = int(np.searchsorted(curve.ft, curve.window_s, "right"))
-    t, s = curve.ft[start:stop], smooth[start:stop]
+    t = curve.ft[start:stop]
+    while True:
+        look = _levels_crossed(t, boxcar(x, width)[start:stop])
+        rise = look.rise_s
+        if width <= 3 or rise is None or rise >= CONSTANTS.look_rises * width * curve.step_s:
+            return look
+        width = width // 2 | 1
+
+
+def _levels_crossed(t: Array, s: Array) -> Look:
+    """First crossings of 10 and 90 %, the former before the first of 50 %."""
     high = np.flatnonzero(s >= 0.5)
     if len(high) == 0:
         low = np.flatnonzero(s >= 0.1)
@@ -96,12 +110,21 @@ def _cross(t: Array, s: Array, at: int, level: float) -> float:
 
 
 def samples_a_rise(curve: Curve, t10: float, t90: float) -> float:
-    """Rise time over the mean interval of the samples that span it."""
-    first = max(int(np.searchsorted(curve.t, t10, "right")) - 1, 0)
-    last = min(int(np.searchsorted(curve.t, t90, "left")), len(curve.t) - 1)
+    """Rise time over the mean interval of the samples that span it.
+
+    A sample from long before or after (a level reported once and then held) spans nothing.
+    """
+    t = curve.t
+    first = max(int(np.searchsorted(t, t10, "right")) - 1, 0)
+    last = min(int(np.searchsorted(t, t90, "left")), len(t) - 1)
+    far = CONSTANTS.fill_ratio * curve.step_s
+    if last - first > 1 and t10 - t[first] > far:
+        first += 1
+    if last - first > 1 and t[last] - t90 > far:
+        last -= 1
     if last <= first:
         return 0.0
-    return (t90 - t10) * (last - first) / float(curve.t[last] - curve.t[first])
+    return (t90 - t10) * (last - first) / float(t[last] - t[first])
 
 
 def half_width(curve: Curve, rise_s: float, noise: Noise) -> float:

@@ -16,7 +16,7 @@ from audit.response.curve import Curve
 from audit.response.ends import Ends
 from audit.response.localfit import Array
 from audit.response.noise import Noise, scan_s
-from audit.response.screening import SETTLING, SHAPE
+from audit.response.screening import PEAKS, SETTLING, SHAPE
 from audit.response.shape import (
     Crossing,
     Path,
@@ -34,8 +34,9 @@ class View:
     """All that the shape is measured from.
 
     ``x`` of each point of ``curve.ft``; ``noise`` in the same unit; ``u0``, ``u1``: standard
-    uncertainties of the levels in parts of y_end - y0; ``stamp_u`` of t0, s; ``end_s``: what is
-    looked at ends there; ``cut``: why nothing is known after the window.
+    uncertainties of the levels in parts of y_end - y0; ``rate``: drift before the change, per s;
+    ``stamp_u`` of t0, s; ``end_s``: what is looked at ends there; ``has_level``: y_end is its own;
+    ``cut``: why nothing is known after the window.
     """
 
     curve: Curve
@@ -43,9 +44,10 @@ class View:
     noise: Noise
     u0: float
     u1: float
+    rate: float
     stamp_u: float
     end_s: float
-    settled: bool
+    has_level: bool
     how: str
     cut: Reason
     seed: int
@@ -53,6 +55,10 @@ class View:
     @property
     def level_u(self) -> float:
         return float(np.hypot(self.u1, self.u0))
+
+    def carried_u(self, t: float) -> float:
+        """Of x at t: a drift before the change that went on, or did not (uniform, JCGM 100)."""
+        return self.rate * t / float(np.sqrt(3.0))
 
 
 def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Measured]:
@@ -67,12 +73,14 @@ def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Me
     low, high = crossings(view.curve, view.x, view.noise, (seen.t10, seen.t90), half)
     rise = max(high.t - low.t, 0.25 * view.curve.step_s, 1e-9)
     path = smooth(view.curve, view.x, view.noise, _reach(view, ends, high.t, rise), half, rise)
-    found = _peaks(view, path, low.t)
+    found = _peaks(view, path, low.t, count)
     found[Quantity.RISE_TIME] = _rise(view, low, high, count)
     found[Quantity.UNDERSHOOT] = _undershoot(view, path, low.t)
-    found |= _settlings(view, path, settings)
+    entry = ends.settled.entry_s
+    until = view.end_s if entry is None else min(entry, view.end_s)
+    found |= _settlings(view, path, settings, until)
     if sparse:
-        found |= _sparse(view, found, _why_sparse(view, rise))
+        found |= _sparse(view, found, count, _why_sparse(view, rise))
     if view.noise.deadband > 1.1 * CONSTANTS.compressed_share:
         found |= dict.fromkeys(SHAPE, Measured.missing(Reason.COMPRESSED))
     return found
@@ -98,7 +106,7 @@ def _never_rose(view: View, t10: float | None) -> dict[Quantity, Measured]:
 
 def _reach(view: View, ends: Ends, t90: float, rise: float) -> float:
     """How far the smoothed path is drawn, s: well past settling, or to the end."""
-    if not view.settled or ends.settled.entry_s is None:
+    if ends.settled.entry_s is None:
         return view.end_s
     return min(view.end_s, max(4.0 * ends.settled.entry_s, t90 + 6.0 * rise))
 
@@ -110,29 +118,32 @@ def _rise(view: View, low: Crossing, high: Crossing, count: float) -> Measured:
     noise = np.hypot(low.sd / low.slope, high.sd / high.slope)
     step = view.curve.step_s
     sampling = step / np.sqrt(12.0) * min(1.0, (CONSTANTS.sparse_rise / max(count, 1e-9)) ** 2)
-    u = float(np.sqrt(from_y0**2 + from_end**2 + noise**2 + sampling**2))
+    carried = view.carried_u(high.t) / high.slope
+    u = float(np.sqrt(from_y0**2 + from_end**2 + noise**2 + sampling**2 + carried**2))
     return interval(high.t - low.t, u, view.how, 0.0)
 
 
-def _peaks(view: View, path: Path, t10: float) -> dict[Quantity, Measured]:
-    """Overshoot, peak time, decay ratio, damped period."""
+def _peaks(view: View, path: Path, t10: float, count: float) -> dict[Quantity, Measured]:
+    """Overshoot, peak time, decay ratio, damped period. ``count``: samples a rise."""
+    few = min(1.0, CONSTANTS.sparse_peak / max(count, 1e-9))
     tops = _tops(path, t10)
     last = float(path.turn_x[-1])
     highest = max((float(path.turn_x[i]) for i in tops), default=-np.inf)
-    if not view.settled and last >= highest:
+    if not view.has_level and last >= highest:
         return _still_rising(view, path, last)
     u1 = view.u1
     if not tops or highest <= 1.0:
         return _no_peak(view, path, t10)
     top = max(tops, key=lambda i: float(path.turn_x[i]))
     excess = float(path.turn_x[top]) - 1.0
-    u = float(
-        np.sqrt(path.turn_sd[top] ** 2 + ((1.0 + excess) * u1) ** 2 + (excess * view.u0) ** 2)
-    )
+    levels = ((1.0 + excess) * u1, excess * view.u0, view.carried_u(float(path.turn_t[top])))
+    parts = (path.turn_sd[top], *levels, CONSTANTS.sparse_peak_u * few**2)
+    u = float(np.sqrt(sum(part**2 for part in parts)))
     if excess <= CONSTANTS.peak_u * u:
         return _no_peak(view, path, t10)
     found = {Quantity.OVERSHOOT: interval(100.0 * excess, 100.0 * u, view.how, 0.0)}
-    when_u = float(np.hypot(path.turn_t_sd[top], view.stamp_u))
+    between = CONSTANTS.sparse_when_u * few * view.curve.step_s
+    when_u = float(np.sqrt(path.turn_t_sd[top] ** 2 + view.stamp_u**2 + between**2))
     found[Quantity.PEAK_TIME] = interval(float(path.turn_t[top]), when_u, view.how, 0.0)
     return found | _decay(view, path, tops, u)
 
@@ -149,15 +160,7 @@ def _tops(path: Path, t10: float) -> list[int]:
 
 def _still_rising(view: View, path: Path, last: float) -> dict[Quantity, Measured]:
     """The window ends on the way up: at least so much."""
-    found = dict.fromkeys(
-        (
-            Quantity.OVERSHOOT,
-            Quantity.PEAK_TIME,
-            Quantity.DECAY_RATIO,
-            Quantity.DAMPED_PERIOD,
-        ),
-        Measured.missing(view.cut),
-    )
+    found = dict.fromkeys(PEAKS, Measured.missing(view.cut))
     least = 100.0 * (last - 1.0 - CONSTANTS.cover_z * float(np.hypot(path.sd, view.u1)))
     if least > 0:
         found[Quantity.OVERSHOOT] = Measured.longer_than(least, view.how, view.cut)
@@ -194,7 +197,7 @@ def _decay(view: View, path: Path, tops: list[int], u: float) -> dict[Quantity, 
         sd_two = float(np.hypot(path.turn_sd[second], view.u1))
         if two > CONSTANTS.second_peak_u * sd_two:
             return _two_peaks(view, path, first, second)
-    if not view.settled:
+    if not view.has_level:
         missing = Measured.missing(view.cut)
         return {Quantity.DECAY_RATIO: missing, Quantity.DAMPED_PERIOD: missing}
     later = path.x[path.t > 2.0 * float(path.turn_t[first])]
@@ -226,9 +229,12 @@ def _undershoot(view: View, path: Path, t10: float) -> Measured:
     return interval(100.0 * max(0.0, -lowest), 100.0 * u, view.how, 0.0, 100.0 * max(1.0, -lowest))
 
 
-def _settlings(view: View, path: Path, settings: MeasureSettings) -> dict[Quantity, Measured]:
-    """Settling into the spec's band, 2 % and 5 %."""
-    draws = settling.draw(path, view.u0, view.u1, view.stamp_u, view.seed)
+def _settlings(
+    view: View, path: Path, settings: MeasureSettings, until_s: float
+) -> dict[Quantity, Measured]:
+    """Settling into the spec's band, 2 % and 5 %. ``until_s``: about when it settles."""
+    u1 = float(np.hypot(view.u1, view.carried_u(until_s)))
+    draws = settling.draw(path, view.u0, u1, view.stamp_u, view.seed)
     bands = dict(zip(SETTLING, (settings.band_pct, 2.0, 5.0), strict=True))
     once = {band: _settling(view, path, draws, band / 100.0) for band in set(bands.values())}
     return {q: once[band] for q, band in bands.items()}
@@ -252,21 +258,36 @@ def _why_sparse(view: View, rise_s: float) -> Reason:
     return Reason.COMPRESSED if enough else Reason.TOO_SPARSE
 
 
-def _sparse(view: View, found: dict[Quantity, Measured], why: Reason) -> dict[Quantity, Measured]:
-    """Fewer than four samples a rise: the rise time is bounded, the shape between is unknown."""
+def _sparse(
+    view: View, found: dict[Quantity, Measured], count: float, why: Reason
+) -> dict[Quantity, Measured]:
+    """Fewer than four samples a rise: the rise time is bounded, the shape between is unknown.
+
+    A peak is broader than the rise: it is still seen with fewer.
+    """
     curve = view.curve
     margin = CONSTANTS.cover_z * float(np.hypot(view.noise.total, view.level_u))
-    real = np.isin(curve.ft, curve.t)
-    t, x = curve.ft[real], view.x[real]
-    above = np.flatnonzero((t > 0) & (x >= 0.9 - margin))
+    real = np.isin(curve.ft, curve.t) & (curve.ft <= curve.window_s)
+    low, high = _rise_bounds(curve.ft[real], view.x[real], margin)
+    seen = count >= CONSTANTS.sparse_peak and why is Reason.TOO_SPARSE
+    kept: tuple[Quantity, ...] = PEAKS if seen else ()
+    kept += tuple(q for q in SETTLING if (found[q].value or np.inf) >= 10.0 * curve.step_s)
+    lost = {q: Measured.missing(why) for q in SHAPE if q not in kept}
+    return lost | {Quantity.RISE_TIME: Measured(low=low, high=high, how=view.how, why=why)}
+
+
+def _rise_bounds(t: Array, x: Array, margin: float) -> tuple[float, float]:
+    """Least and greatest rise time, s, that the samples allow.
+
+    At most from the last sample surely below 10 % to the first surely above 90 %, at least from the
+    first surely above 10 % after it to the last surely below 90 % before it.
+    """
+    above = np.flatnonzero((t > 0) & (x >= 0.9 + margin))
     stop = int(above[0]) if len(above) else len(t) - 1
-    sure = np.flatnonzero(x[: stop + 1] <= 0.1 + margin)
-    start = max(float(t[sure[-1]]), 0.0) if len(sure) else 0.0
-    missing = Measured.missing(why)
-    lost = {
-        q: missing
-        for q in SHAPE
-        if q not in SETTLING or (found[q].value or np.inf) < 10.0 * curve.step_s
-    }
-    bound = Measured(low=0.0, high=float(t[stop]) - start, how=view.how, why=why)
-    return lost | {Quantity.RISE_TIME: bound}
+    sure = np.flatnonzero(x[: stop + 1] <= 0.1 - margin)
+    start = int(sure[-1]) if len(sure) else max(int(np.searchsorted(t, 0.0)) - 1, 0)
+    between = np.arange(start + 1, stop)
+    begun = between[x[between] >= 0.1 + margin]
+    short = between[x[between] <= 0.9 - margin]
+    least = float(t[short[-1]] - t[begun[0]]) if len(begun) and len(short) else 0.0
+    return max(least, 0.0), float(t[stop]) - max(float(t[start]), 0.0)
