@@ -37,6 +37,9 @@ KNOWN: Mapping[str, tuple[str, ...]] = {
 }
 """Every table of site.toml and the settings in it."""
 
+_ABSENT = (
+    "--config names the site's folder or its site.toml; `loopassay demo` lays down a site to try"
+)
 _STORES = "sqlite:///FILE or postgresql+psycopg://USER@HOST/DATABASE"
 
 
@@ -111,8 +114,8 @@ def load(path: Path, env: Mapping[str, str]) -> Config:
 def examine(path: Path, env: Mapping[str, str]) -> Examined:
     """As ``load``, but gives the faults back together with what is usable of the settings."""
     path = Path(os.path.abspath(path))
-    path = path / FILE_NAME if path.is_dir() else path
-    sheet, folder = Sheet(open_file(path)), path.parent
+    path = path / FILE_NAME if os.path.isdir(path) else path
+    sheet, folder = Sheet(open_file(path, _ABSENT)), path.parent
     note_unknown(sheet, KNOWN)
     tables = {name: _table(sheet, name) for name in KNOWN if name != "exports"}
     name, zone = _site(tables["site"], sheet.readable)

@@ -44,6 +44,10 @@ class AuditError(Exception):
     def __str__(self) -> str:
         return f"{self.message} — {self.remedy}" if self.remedy else self.message
 
+    def __reduce__(self) -> tuple[object, ...]:
+        """How a worker process hands it over: from what it was made of."""
+        return type(self), (self.message, self.remedy)
+
 
 class FilesWrong(AuditError):
     """The site's own files are wrong; holds every fault found, not just the first."""
@@ -56,6 +60,9 @@ class FilesWrong(AuditError):
             "\n".join([f"{head} in the site's files:", *(f"  {fault}" for fault in self.faults)])
         )
 
+    def __reduce__(self) -> tuple[object, ...]:
+        return type(self), (self.faults,)
+
 
 class ExportRefused(AuditError):
     """One export file cannot be read; the audit goes on with the others."""
@@ -66,6 +73,9 @@ class ExportRefused(AuditError):
         self.path = path
         self.line = line
         self.reason = message
+
+    def __reduce__(self) -> tuple[object, ...]:
+        return type(self), (self.path, self.reason, self.remedy, self.line)
 
 
 class StoreUnready(AuditError):

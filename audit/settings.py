@@ -172,6 +172,8 @@ class Section:
             self.wrong(key, f"{shown(value)} is not a text", f'write it in quotes: {key} = "..."')
         elif not value.strip() and not blank:
             self.wrong(key, f"'{key}' is empty", "give it a value" + _or_leave_out(default))
+        elif "\0" in value:
+            self.wrong(key, f"{shown(value)} holds a NUL character", "leave it out")
         else:
             return value
         return default or ""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -33,7 +34,7 @@ def open_site(path: Path, env: Mapping[str, str]) -> Site:
     )
     if settings.config is None:
         paths = (settings.loops_path, settings.specs_path)
-        absent = {p.name for p in paths if not settings.files_named and not p.exists()}
+        absent = {p.name for p in paths if not settings.files_named and not os.path.exists(p)}
         raise FilesWrong([*settings.faults, *(f for f in faults if f.file not in absent)])
     if faults:
         raise FilesWrong(faults)

@@ -31,13 +31,16 @@ class SiteFile:
     faults: tuple[Fault, ...]
 
 
-def open_file(path: Path) -> SiteFile:
-    """The text of ``path``; bytes that are not UTF-8 and NUL bytes are faults, and left out."""
+def open_file(path: Path, absent: str = "create it, or name the right file") -> SiteFile:
+    """The text of ``path``; bytes that are not UTF-8 and NUL bytes are faults, and left out.
+
+    ``absent``: the remedy where there is no such file.
+    """
     name = path.name
     try:
         raw = path.read_bytes()
     except FileNotFoundError:
-        return _unread(name, f"there is no such file ({path})", "create it, or name the right file")
+        return _unread(name, f"there is no such file ({path})", absent)
     except IsADirectoryError:
         return _unread(name, f"{path} is a folder", "name a file")
     except OSError as failure:

@@ -12,6 +12,8 @@ from collections import deque
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import Future, ProcessPoolExecutor
 from contextlib import contextmanager
+from multiprocessing import connection
+from threading import Thread
 from typing import Protocol, TypeVar
 
 Item = TypeVar("Item")
@@ -64,5 +66,17 @@ def workers(count: int | None = None) -> Iterator[Workers]:
         return
     # "spawn": the lease's heartbeat thread must not be forked into the workers.
     context = multiprocessing.get_context("spawn")
-    with ProcessPoolExecutor(cores, mp_context=context) as pool:
+    with ProcessPoolExecutor(cores, context, _end_with_parent) as pool:
         yield Processes(pool, cores)
+
+
+def _end_with_parent() -> None:
+    """In a worker: end when the parent is killed. The queue it waits at would never say so."""
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        Thread(target=_end_after, args=(parent.sentinel,), name="parent", daemon=True).start()
+
+
+def _end_after(sentinel: int) -> None:
+    connection.wait([sentinel])
+    os._exit(1)

@@ -134,7 +134,7 @@ def test_revision(path: str, pattern: str, number: int) -> None:
     [
         ("a.csv", b"", "empty"),
         ("a.csv", b"\xef\xbb\xbf\n \n"[:4], "empty"),
-        ("a.csv.gz", gzip.compress(b""), "empty"),
+        ("a.csv.gz", gzip.compress(b"", mtime=0), "empty"),
         ("a.csv", b"2026-03-14T08:00:00Z,1\n", "no column 'timestamp'"),
         ("a.csv", b"timestamp;A\n2026-03-14T08:00:00Z;1\n", "no column 'timestamp'"),
         ("a.csv", b"timestamp,A,B,A\n", "more than once: A"),
@@ -146,7 +146,7 @@ def test_revision(path: str, pattern: str, number: int) -> None:
         ("a.csv.bz2", WIDE.encode(), "decompressed"),
         ("a.csv.xz", WIDE.encode(), "decompressed"),
         ("a.csv.zst", WIDE.encode(), "decompressed"),
-        ("a.csv", gzip.compress(WIDE.encode()), "byte"),
+        ("a.csv", gzip.compress(WIDE.encode(), mtime=0), "byte"),
         ("a.csv", parquet_of(WIDE), "byte"),
     ],
 )

@@ -18,6 +18,7 @@ INTERRUPTED = 130
 def main(arguments: Sequence[str] | None = None) -> int:
     """Run one command and return its exit code; what goes wrong is one message, no traceback."""
     words = sys.argv[1:] if arguments is None else list(arguments)
+    _have_streams()
     _never_fail_on_a_letter()
     try:
         return _run(words)
@@ -43,6 +44,14 @@ def _run(words: Sequence[str]) -> int:
     code = run(parsed)
     sys.stdout.flush()
     return code
+
+
+def _have_streams() -> None:
+    """A closed stream, as some schedulers start a command with, is one that nobody reads."""
+    for name in ("stdout", "stderr"):
+        if getattr(sys, name) is None:
+            # left open until the process ends
+            setattr(sys, name, open(os.devnull, "w", encoding="utf-8"))  # noqa: SIM115
 
 
 def _never_fail_on_a_letter() -> None:

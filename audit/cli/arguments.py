@@ -18,6 +18,9 @@ DEMO_FOLDER = Path("loopassay-demo")
 DEMO_LOOPS = 60
 DEMO_DAYS = 90
 
+YEARS = range(1970, 2200)
+"""Years a date may be in: those of the stamps an export may hold."""
+
 EXIT_CODES = (
     "Exit codes: 0 all well; 1 an unexpected failure; 2 the command or the site's files are wrong; "
     "3 the audit ran, but a file, or more than 1 % of the cells, was refused; 4 it ran, but there "
@@ -184,11 +187,16 @@ def _add_store(commands: Commands) -> None:
 
 def _day(text: str) -> date:
     try:
-        return date.fromisoformat(text)
+        day = date.fromisoformat(text)
     except ValueError:
         raise argparse.ArgumentTypeError(
             f"'{text}' is not a date; write it as 2026-03-14"
         ) from None
+    if day.year not in YEARS:
+        raise argparse.ArgumentTypeError(
+            f"'{text}' lies outside the years {YEARS[0]} to {YEARS[-1]}"
+        )
+    return day
 
 
 def _whole(what: str, least: int, most: int) -> Callable[[str], int]:

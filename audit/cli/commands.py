@@ -100,6 +100,11 @@ def _warn_if_old(found: Json) -> None:
 
 
 def _history(words: argparse.Namespace) -> int:
+    if words.since and words.until and words.until < words.since:
+        raise CommandWrong(
+            f"loopassay history: --since {words.since} is after --until {words.until}",
+            "give the earlier day first",
+        )
     site = _reading(words)
     with open_store(site.config.store_url) as store:
         found = reports.history(store, site, words.tag, words.since, words.until)

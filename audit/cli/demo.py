@@ -40,7 +40,7 @@ def demo(words: argparse.Namespace) -> int:
     """
     folder: Path = words.folder
     with screen.progress() as progress:
-        if _is_there(folder, words.loops, words.days):
+        if _looked_at(folder, words.loops, words.days):
             screen.messages().print(f"The demonstration site in {folder} is there already.")
         else:
             _lay_down(folder, words.loops, words.days, progress)
@@ -53,6 +53,17 @@ def demo(words: argparse.Namespace) -> int:
         print_ranking(console, found)
         _print_next(console, folder, found)
     return REFUSED if exit_code(report) == REFUSED else 0
+
+
+def _looked_at(folder: Path, loops: int, days: int) -> bool:
+    """As ``_is_there``, for a folder that may be closed to this user, or damaged."""
+    try:
+        return _is_there(folder, loops, days)
+    except (OSError, ValueError, KeyError, TypeError) as failure:
+        raise DemoRefused(
+            f"{folder} cannot be read as a demonstration of loopassay: {failure}",
+            "name another folder, or remove it",
+        ) from failure
 
 
 def _is_there(folder: Path, loops: int, days: int) -> bool:

@@ -39,7 +39,21 @@ PLAIN_EVERY_S = 10.0
 def results() -> Console:
     """Standard output; without the blanks that fill lines where it is no terminal."""
     out = sys.stdout if sys.stdout.isatty() else cast("IO[str]", _Trimmed(sys.stdout))
-    return Console(file=out, markup=False, highlight=False, emoji=False)
+    return _Results(file=out, markup=False, highlight=False, emoji=False)
+
+
+class _Results(Console):
+    """A console that leaves it to ``main`` what a reader who stops reading means."""
+
+    def on_broken_pipe(self) -> None:
+        raise BrokenPipeError
+
+
+class _Messages(Console):
+    """A console whose reader may go: an audit goes on without being watched."""
+
+    def on_broken_pipe(self) -> None:
+        self.quiet = True
 
 
 class _Trimmed:
@@ -62,7 +76,7 @@ class _Trimmed:
 
 def messages() -> Console:
     """Standard error."""
-    return Console(file=sys.stderr, markup=False, highlight=False, emoji=False, soft_wrap=True)
+    return _Messages(file=sys.stderr, markup=False, highlight=False, emoji=False, soft_wrap=True)
 
 
 def print_json(found: Mapping[str, Any]) -> None:
@@ -81,6 +95,15 @@ def table(*columns: str, numbers: tuple[str, ...] = ()) -> Table:
 def indented(text: str | Text, columns: int) -> Padding:
     """A wrapped paragraph, set in by so many columns."""
     return Padding(text, (0, 0, 0, columns))
+
+
+def hanging(text: str, lead: str, columns: int) -> Table:
+    """A wrapped paragraph behind a lead such as a dash, its lines set in alike."""
+    made = Table.grid()
+    made.add_column(no_wrap=True)
+    made.add_column()
+    made.add_row(" " * columns + lead, text)
+    return made
 
 
 @contextmanager

@@ -28,6 +28,7 @@ from audit.records import SECOND_US, ExportSource
 
 _FIRST = datetime(1970, 1, 1, tzinfo=UTC)
 _LAST_US = int((datetime(2200, 1, 1, tzinfo=UTC) - _FIRST).total_seconds()) * SECOND_US
+_EPOCH_FROM_US = 365 * 86_400 * SECOND_US
 _EPOCH_DIGITS = {"epoch_s": 6, "epoch_ms": 3, "epoch_us": 0, "epoch_ns": -3}
 
 _DAY = r"(19[7-9]\d|20\d\d|21\d\d)-(0[1-9]|1[0-2])-(0[1-9]|[12]\d|3[01])"
@@ -66,7 +67,8 @@ def stamps(column: Any, source: ExportSource, groups: NDArray[np.int64] | None =
 
     ``groups`` [n]: which rows stand in the order they were recorded in (default: all); by that
     order the repeated hour of an autumn clock change is told apart where it can be. A stamp before
-    1970 or from 2200 on is BAD. Raises ValueError for a time_format that cannot be followed.
+    1970 or from 2200 on is BAD, and so is an epoch number of 1970: today's numbers fall there when
+    they are read in too small a unit. Raises ValueError for a time_format that cannot be followed.
     """
     read = _bounded(_typed(column, source))
     local = np.flatnonzero(read.told == Told.LOCAL)
@@ -110,7 +112,7 @@ def _typed(column: Any, source: ExportSource) -> Stamps:
     if pa.types.is_date(kind):
         return _native(pc.cast(column, pa.timestamp("us")), "us", aware=False)
     if pa.types.is_floating(kind) and source.time_format in _EPOCH_DIGITS:
-        return _floats(column, _EPOCH_DIGITS[source.time_format])
+        return _of_this_unit(_floats(column, _EPOCH_DIGITS[source.time_format]))
     kinds = (pa.types.is_string, pa.types.is_large_string, pa.types.is_integer, pa.types.is_decimal)
     if not any(is_kind(kind) for is_kind in kinds):
         return _nothing(len(column))
@@ -124,7 +126,13 @@ def _texts(column: Any, source: ExportSource) -> Stamps:
         return _pattern(column, source.time_format)
     if source.decimal != ".":
         column = pc.replace_substring(column, source.decimal, ".")
-    return _epoch(column, _EPOCH_DIGITS[source.time_format])
+    return _of_this_unit(_epoch(column, _EPOCH_DIGITS[source.time_format]))
+
+
+def _of_this_unit(read: Stamps) -> Stamps:
+    """Epoch numbers without those that only a wrong unit can have brought into 1970."""
+    early = (read.us < _EPOCH_FROM_US) & (read.told == Told.FINE)
+    return Stamps(read.us, np.where(early, np.int8(Told.BAD), read.told))
 
 
 def _nothing(count: int) -> Stamps:

@@ -29,6 +29,7 @@ from audit.errors import ExportRefused
 from audit.records import ExportFile, ExportSource
 
 _BROKEN = (OSError, EOFError, ValueError, zlib.error, lzma.LZMAError, zstandard.ZstdError)
+_MOST_REVISED = 10**18 - 1
 _STAMPS = ("ETag", "etag", "mtime", "LastModified", "last_modified", "updated", "modified")
 
 
@@ -44,8 +45,9 @@ def discover(source: ExportSource) -> list[ExportFile]:
     """The files an export source names, in the byte order of their paths.
 
     A missing folder or no match is an empty list. Paths are relative to the site's folder with
-    ``/``; a URL, or a local pattern given as an absolute path to elsewhere, stays as it is.
-    Raises ExportRefused where a URL cannot be listed at all.
+    ``/``; a URL, or a local pattern given as an absolute path to elsewhere, stays as it is. A file
+    that cannot even be looked at is in the list, to be refused when it is read.
+    Raises ExportRefused where a URL or a folder cannot be listed at all.
     """
     found = _listed_url(source) if "://" in source.files else _listed_folder(source)
     files = [
@@ -56,12 +58,17 @@ def discover(source: ExportSource) -> list[ExportFile]:
 
 
 def revision(path: str, pattern: str) -> int:
-    """The integer the regular expression finds in the path (first group, else all); none: 0."""
+    """The integer the regular expression finds in the path (first group, else all); none: 0.
+
+    Beyond 18 digits it counts as the largest, or smallest, of that length.
+    """
     match = re.search(pattern, path) if pattern else None
     if match is None:
         return 0
     text = match.group(1) if match.re.groups else match.group()
-    return int(text) if text and re.fullmatch(r"[+-]?\d+", text, re.ASCII) else 0
+    if not text or re.fullmatch(r"[+-]?\d+", text, re.ASCII) is None:
+        return 0
+    return max(-_MOST_REVISED, min(_MOST_REVISED, int(text[:4000])))
 
 
 def fetch(file: ExportFile, source: ExportSource) -> Stored:
@@ -72,12 +79,16 @@ def fetch(file: ExportFile, source: ExportSource) -> Stored:
         stored = cast(bytes, fs.cat_file(path))
         after = _state(fs, path)
     except FileNotFoundError as error:
+        if "\\" in file.path and os.sep == "/":
+            raise ExportRefused(file.path, "its name is not UTF-8", "rename the file") from error
         raise ExportRefused(
             file.path, "the file is gone", "nothing to do if it was moved on purpose"
         ) from error
     except OSError as error:
         raise ExportRefused(
-            file.path, f"cannot be read: {error}", "check the path and its permissions"
+            file.path,
+            f"cannot be read: {error.strerror or error}",
+            "check the path and its permissions",
         ) from error
     if before != after or len(stored) != after[0]:
         raise ExportRefused(file.path, "still being written", "left for the next run")
@@ -96,26 +107,52 @@ def streamed(file: ExportFile, source: ExportSource) -> Iterator[BinaryIO]:
         with fs.open(path, "rb") as raw:
             yield raw if opener is None else opener(raw)
     except _BROKEN as error:
+        why = getattr(error, "strerror", None) or error
         raise ExportRefused(
-            file.path, f"cannot be read: {error}", "check the file, export it again"
+            file.path, f"cannot be read: {why}", "check the file, export it again"
         ) from error
 
 
 def _listed_folder(source: ExportSource) -> Iterator[tuple[str, int, str]]:
+    _check_folder(source)
     for found in glob.glob(source.files, root_dir=source.folder, recursive=True):
+        path = os.path.join(source.folder, found)
         try:
-            status = os.stat(os.path.join(source.folder, found))
+            status = os.stat(path)
         except FileNotFoundError:  # moved away since it was listed: as if it had not been there
             continue
-        if os.path.isfile(os.path.join(source.folder, found)):
+        except OSError:  # a loop of links, a folder that is closed: refused when it is read
+            yield _relative(found, source.folder), 0, ""
+            continue
+        if os.path.isfile(path):
             yield _relative(found, source.folder), status.st_size, str(status.st_mtime_ns)
+
+
+def _check_folder(source: ExportSource) -> None:
+    """Refuse a folder that is there and cannot be listed: ``glob`` would call it empty."""
+    fixed = PurePath(source.folder)
+    for part in PurePath(source.files).parts[:-1]:
+        if glob.has_magic(part):
+            break
+        fixed /= part
+    try:
+        with os.scandir(fixed):
+            return
+    except (FileNotFoundError, NotADirectoryError):
+        return
+    except OSError as error:
+        raise ExportRefused(
+            source.files,
+            f"its folder cannot be listed: {error.strerror or error}",
+            "see that the folder is there and that this user may read it",
+        ) from error
 
 
 def _relative(found: str, folder: str) -> str:
     path = PurePath(os.path.normpath(found))
     if path.is_absolute() and path.is_relative_to(os.path.abspath(folder)):
         path = path.relative_to(os.path.abspath(folder))
-    return path.as_posix()
+    return os.fsencode(path.as_posix()).decode("utf-8", "backslashreplace")
 
 
 def _listed_url(source: ExportSource) -> Iterator[tuple[str, int, str]]:

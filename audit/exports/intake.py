@@ -8,6 +8,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 
+import pyarrow as pa
+
 from audit.errors import ExportRefused, Fault
 from audit.exports import csv_file, files, layouts, parquet_file
 from audit.exports.sheet import Sheet
@@ -39,7 +41,7 @@ def read(file: ExportFile, source: ExportSource, wanted: Mapping[str, bool]) -> 
     few or too many, has all its cells refused, also those no loop uses.
     """
     stored = files.fetch(file, source)
-    got = layouts.taken(_sheet(stored.data, source, wanted, file.path), source, wanted)
+    got = _taken(_sheet(stored.data, source, wanted, file.path), source, wanted)
     named = tuple(sorted(tag for tag in got.tags if tag in wanted))
     return ExportRead(
         stored.content_hash,
@@ -57,16 +59,30 @@ def peek(file: ExportFile, source: ExportSource, rows: int = 1000) -> Peek:
 
     Columns that hold no values of a wide file's tags cannot be told and are among the tags.
     """
-    got = layouts.taken(_head(file, source, rows), source, {})
+    got = _taken(_head(file, source, rows), source, {})
     return Peek(tuple(tag for tag in got.tags if tag), got.first_us, got.faults)
 
 
 def first_stamp(file: ExportFile, source: ExportSource) -> int | None:
     """Earliest stamp [us, UTC] of the first few rows; None where there is none to read."""
     try:
-        return layouts.taken(_head(file, source, _FIRST_ROWS), source, {}).first_us
+        return _taken(_head(file, source, _FIRST_ROWS), source, {}).first_us
     except ExportRefused:
         return None
+
+
+def _taken(sheet: Sheet, source: ExportSource, wanted: Mapping[str, bool]) -> layouts.Taken:
+    """The samples of a sheet; columns of a type nothing can be made of refuse the file."""
+    try:
+        return layouts.taken(sheet, source, wanted)
+    except (pa.ArrowException, NotImplementedError) as error:
+        kinds = {name: str(column.type) for name, column in sheet.columns.items()}
+        shown = ", ".join(f"{name} {kind}" for name, kind in list(kinds.items())[:8])
+        raise ExportRefused(
+            sheet.path,
+            f"a column is of a type that cannot be read ({shown}): {error}",
+            "export time stamps, numbers and texts as such",
+        ) from error
 
 
 def _sheet(data: bytes, source: ExportSource, wanted: Mapping[str, bool], path: str) -> Sheet:

@@ -7,11 +7,14 @@ from collections.abc import Mapping
 from typing import Any, BinaryIO
 
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
 from audit.errors import ExportRefused
 from audit.exports.sheet import Sheet, asked_for, check_names
 from audit.records import ExportSource
+
+_BYTES = (pa.types.is_binary, pa.types.is_large_binary, pa.types.is_fixed_size_binary)
 
 
 def sheet(data: bytes, source: ExportSource, wanted: Mapping[str, object], path: str) -> Sheet:
@@ -52,4 +55,20 @@ def _read(
 
 def _one(column: Any) -> Any:
     whole = column.combine_chunks()
-    return pa.concat_arrays(whole.chunks) if isinstance(whole, pa.ChunkedArray) else whole
+    return _plain(pa.concat_arrays(whole.chunks) if isinstance(whole, pa.ChunkedArray) else whole)
+
+
+def _plain(column: Any) -> Any:
+    """The kinds of text that not every Arrow function knows, as plain text.
+
+    Some writers leave the mark of a text column out; its bytes are taken for text where they are.
+    """
+    kind = column.type
+    if pa.types.is_string_view(kind):
+        return pc.cast(column, pa.string())
+    if not any(is_kind(kind) for is_kind in _BYTES):
+        return column
+    try:
+        return pc.cast(column, pa.string())
+    except pa.ArrowInvalid:
+        return column

@@ -16,7 +16,7 @@ from typing import Any
 
 from sqlalchemy import URL, Connection, Engine, create_engine, event, make_url
 from sqlalchemy.engine.interfaces import DBAPIConnection
-from sqlalchemy.exc import ArgumentError, DBAPIError
+from sqlalchemy.exc import ArgumentError, DatabaseError, DBAPIError, OperationalError
 from sqlalchemy.pool import ConnectionPoolEntry
 
 from audit.errors import StoreUnready
@@ -94,18 +94,50 @@ def _begin_sqlite(connection: Connection) -> None:
     connection.exec_driver_sql("BEGIN" if reads else "BEGIN IMMEDIATE")
 
 
+def shown(url: URL) -> str:
+    """The URL as it may be printed: without password, and without options, which can hold one."""
+    return url.set(query={}).render_as_string()
+
+
 @contextmanager
 def connected(engine: Engine, purpose: Purpose) -> Iterator[Connection]:
-    """A connection for one transaction. Raises StoreUnready when the database is not reached."""
+    """A connection for one transaction.
+
+    Raises StoreUnready when the database is not reached, and when it fails on the way: a full disk,
+    a file that may not be written, a server that goes away.
+    """
     try:
         connection = engine.connect()
     except DBAPIError as error:
         raise StoreUnready(
-            f"the store {engine.url.render_as_string()} cannot be opened: {error.orig}",
-            "see that the database is there, running, and open to this user",
+            f"the store {shown(engine.url)} cannot be opened: {_reason(error)}",
+            _to_open(engine.url),
         ) from error
-    with connection:
-        options: dict[str, Any] = {_PURPOSE: purpose}
-        if engine.dialect.name == "postgresql" and purpose is Purpose.READ:
-            options |= {"isolation_level": "REPEATABLE READ", "postgresql_readonly": True}
-        yield connection.execution_options(**options)
+    try:
+        with connection:
+            options: dict[str, Any] = {_PURPOSE: purpose}
+            if engine.dialect.name == "postgresql" and purpose is Purpose.READ:
+                options |= {"isolation_level": "REPEATABLE READ", "postgresql_readonly": True}
+            yield connection.execution_options(**options)
+    except DatabaseError as error:
+        if type(error) not in (OperationalError, DatabaseError):
+            raise  # a statement of ours is wrong
+        raise StoreUnready(
+            f"the store {shown(engine.url)} failed: {_reason(error)}",
+            "what was not finished was not kept; see that there is room on the disk and that this "
+            f"user may write there, then start again ({_to_open(engine.url)})",
+        ) from error
+
+
+def _reason(error: DBAPIError) -> str:
+    """What the database says, on one line and without the statement."""
+    return " ".join(str(error.orig).split())
+
+
+def _to_open(url: URL) -> str:
+    file = sqlite_file(url)
+    if file is None:
+        return "see that the database is there, running, and open to this user"
+    if not file.parent.is_dir():
+        return f"there is no folder {file.parent}"
+    return "SQLite keeps a log beside the file: reading too needs the right to write in its folder"

@@ -18,7 +18,7 @@ from sqlalchemy.orm import Session
 from audit.errors import StoreUnready
 from audit.store import lease as lease_row
 from audit.store import schema as schema_of
-from audit.store.engine import Purpose, checked_url, connected, make_engine, sqlite_file
+from audit.store.engine import Purpose, checked_url, connected, make_engine, shown, sqlite_file
 from audit.store.entries import Lease, Schema
 
 __all__ = ["Lease", "Schema", "Store", "backup", "open_store", "take_lease"]
@@ -33,8 +33,8 @@ class Store:
 
     @property
     def url(self) -> str:
-        """The store's URL, a password in it hidden."""
-        return self._url.render_as_string()
+        """The store's URL, without its password and its options."""
+        return shown(self._url)
 
     def close(self) -> None:
         """Closes all connections."""
