@@ -122,9 +122,9 @@ def test_history_shows_numbers_with_unit_interval_and_outcome(
     assert run("history", "FIC-101", "--config", folder) == 0
     printed = " ".join(capsys.readouterr().out.split())
     for text in (
-        "rise time 12.34 s (11.90 to 12.80): undecided",
-        "settling time longer than 55 s: out of spec [cut_short]",
-        "not_following: not in an automatic mode",
+        "rise time 12.3 s (11.9 to 12.8): undecided",
+        "settling time (2 %) longer than 55 s: out of spec (the next move, or the end of the",
+        "Not counted: not in an automatic mode",
         "50 → 55 m3/h step, window 600 s, usable",
         "2026-03-13 08:00:00",  # 07:00 UTC is 08:00 in Oslo in March
         "range 0 to 100 m3/h",

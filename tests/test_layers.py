@@ -21,6 +21,7 @@ MAY_KNOW: dict[str, set[str]] = {
     "errors": set(),
     "records": {"errors"},
     "evidence": {"records"},
+    "figures": set(),
     # a site's own files
     "sitefile": {"errors"},
     "localtime": {"sitefile"},
@@ -38,7 +39,7 @@ MAY_KNOW: dict[str, set[str]] = {
     "response": VOCABULARY,
     "verdict": {*VOCABULARY, "evidence"},
     "trend": {*VOCABULARY, "evidence"},
-    "ranking": {*VOCABULARY, "evidence"},
+    "ranking": {*VOCABULARY, "evidence", "figures"},
     "weaving": VOCABULARY,
     "workers": set(),
     "store": {*VOCABULARY, "migrations"},
@@ -58,13 +59,13 @@ MAY_KNOW: dict[str, set[str]] = {
         *("feed", "gather", "intake", "loopwork", "ranking", "run_report", "site", "standings"),
         *("store", "weaving", "workers"),
     },
-    "reports": {*VOCABULARY, "feed", "run_report", "site", "store"},
+    "reports": {*VOCABULARY, "feed", "figures", "run_report", "site", "store"},
     "check": {*VOCABULARY, "config", "exports", "site"},
     # the edge
     "cli": {
         *VOCABULARY,
-        *("check", "config", "demo_site", "nightly", "register", "reports", "run_report", "site"),
-        "store",
+        *("check", "config", "demo_site", "figures", "nightly", "register", "reports"),
+        *("run_report", "site", "store"),
     },
     "__init__": set(),
     "__main__": {"cli"},

@@ -12,7 +12,7 @@ from zoneinfo import ZoneInfo
 import pytest
 import stored
 
-from audit import reports
+from audit import figures, reports
 from audit.errors import AuditError, StoreUnready, UnknownLoop
 from audit.records import (
     ChangeKind,
@@ -22,8 +22,9 @@ from audit.records import (
     Reason,
     StandingWord,
 )
-from audit.reports import contract, figures, words
+from audit.reports import contract, words
 from audit.reports.contract import Json
+from audit.reports.place import order_sentence
 from audit.site import Site, open_site
 from audit.store import Store, open_store
 
@@ -255,20 +256,20 @@ def test_stamps_are_rfc_3339_in_utc(moment: datetime | int | None, text: str | N
 
 
 # JCGM 100:2008, 7.2.2 and 7.2.6: m = 100.021 47 g with uc = 0.35 mg is given as 100.02147(35) g,
-# two digits of the uncertainty and the value to the same place; its interval of +-0.70 mg as well.
+# two digits of the uncertainty at most and the value to the same place; here one, +-0.7 mg.
 @pytest.mark.parametrize(
     ("value", "low", "high", "text"),
     [
-        (100.02147, 100.02077, 100.02217, "100.02147 g (100.02077 to 100.02217)"),
-        (12.3456, 11.9, 12.8, "12.35 g (11.90 to 12.80)"),
+        (100.02147, 100.02077, 100.02217, "100.0215 g (100.0208 to 100.0222)"),
+        (12.3456, 11.9, 12.8, "12.3 g (11.9 to 12.8)"),
         (1234.6, 1100.0, 1400.0, "1235 g (1100 to 1400)"),
-        (-0.001, -0.5, 0.5, "0.00 g (-0.50 to 0.50)"),
+        (-0.001, -0.5, 0.5, "0.0 g (-0.5 to 0.5)"),
         (63.4, 60.0, None, "63.4 g (at least 60.0)"),
-        (5.0, None, None, "5.000 g"),
-        (0.0, 0.0, 0.0, "0 g (0 to 0)"),
+        (5.0, None, None, "5.00 g"),
+        (0.0, 0.0, 0.0, "0 g"),
         (None, 600.0, None, "more than 600 g"),
         (None, None, 0.1234, "at most 0.123 g"),
-        (None, 1.0, 2.0, "1.00 to 2.00 g"),
+        (None, 1.0, 2.0, "1.0 to 2.0 g"),
         (None, None, None, None),
     ],
 )
@@ -276,6 +277,22 @@ def test_digits_fit_the_interval(
     value: float | None, low: float | None, high: float | None, text: str | None
 ) -> None:
     assert figures.interval(value, low, high, "g") == text
+
+
+@pytest.mark.parametrize(
+    ("value", "low", "high", "limit", "text"),
+    [
+        (50.0, 40.0, 60.04, 60.0, "50.00 s (40.00 to 60.04)"),
+        (50.0, 40.0, 60.0, 60.0, "50 s (40 to 60)"),
+        (0.0, -0.157, 0.157, 0.16, "0.000 s (-0.157 to 0.157)"),
+        (-20.4, -31.0, -9.8, 10.0, "-20.4 s (-31.0 to -9.8)"),
+        (None, 0.0, 0.2, 0.3, "at most 0.2 s"),
+    ],
+)
+def test_no_number_is_rounded_onto_or_across_its_limit(
+    value: float | None, low: float, high: float, limit: float, text: str
+) -> None:
+    assert figures.interval(value, low, high, "s", limit=limit) == text
 
 
 def test_a_time_that_was_cut_is_longer_than() -> None:
@@ -303,6 +320,41 @@ def test_two_levels_are_written_to_the_same_place(
 )
 def test_shares_are_never_rounded_to_nothing_or_all(fraction: float | None, text: str) -> None:
     assert figures.percent(fraction) == text
+
+
+@pytest.mark.parametrize(
+    ("change", "sentence"),
+    [
+        (
+            {"value": 7.034, "distance": 1.7586, "quantity": "settling_time_s", "reference": 462.34}
+            | {"reference_kind": "baseline"},
+            "criticality 4 times distance 1.76 is 7.03; the distance is that of the settling time "
+            "(5 %) from its baseline, 462 s.",
+        ),
+        (
+            {"value": 1.2, "distance": 0.3, "quantity": "rise_time_s", "reference": 172.25}
+            | {"reference_kind": "limit"},
+            "criticality 4 times distance 0.3 is 1.2; the distance is that of the rise time from "
+            "its limit, 172.25 s.",
+        ),
+        (
+            {"value": 4.0, "distance": 1.0, "quantity": None, "reference": None},
+            "criticality 4 times distance 1 is 4; a loop that does not answer counts as one whole "
+            "change away.",
+        ),
+        ({"value": None}, "by criticality, 4."),
+    ],
+)
+def test_each_part_of_the_order_is_said(change: Json, sentence: str) -> None:
+    assert order_sentence(change, 4, "degC", 5.0) == f"Order in the group: {sentence}"
+
+
+def test_what_needs_a_model_is_said_by_the_kind_of_change() -> None:
+    code = Reason.NEEDS_MODEL.value
+    said = {words.reason_of(code, kind) for kind in ChangeKind}
+    assert "not measured on ramps" in said
+    assert len(said) == len(ChangeKind)
+    assert all("model" not in words.reason_of(code, kind) for kind in words.MANY_MOVES)
 
 
 def test_every_code_has_its_words() -> None:

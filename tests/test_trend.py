@@ -303,6 +303,35 @@ def test_too_few_steps_have_no_baseline() -> None:
     assert "there are 9" in found.note
 
 
+def test_bounds_alone_make_no_baseline() -> None:
+    """Ten changes that were cut: no baseline; with eleven that were not, there is one of 21."""
+    cut = Measured.longer_than(600.0, "direct", Reason.CUT_SHORT)
+    only = [past(at, rise_time_s=cut) for at in range(10)]
+    found = rise(only)
+    assert (found.baseline, found.was, found.recent, found.recent_low) == (None, None, None, 600.0)
+    assert "at least" in found.note
+    assert rise([*only, *times([700.0] * 10, 10)]).was is None
+    both = rise([*only, *times([700.0] * 11, 10)])
+    assert (both.baseline, both.baseline_steps) == (700.0, 21)
+
+
+@pytest.mark.parametrize(("without", "is_there"), [(1, True), (2, False)])
+def test_a_peak_that_was_seldom_seen_has_no_baseline(without: int, is_there: bool) -> None:
+    """Between two peaks so many changes without one."""
+    peak, none = Measured(30.0, 29.0, 31.0, "direct"), Measured.missing(Reason.NO_PEAK)
+    steps = [past(at, peak_time_s=none if at % (without + 1) else peak) for at in range(60)]
+    found = assess(steps, LOOP, LIMITED).quantities[Quantity.PEAK_TIME]
+    assert (found.was is not None) is is_there
+    assert is_there or "no peak" in found.note
+
+
+def test_the_settling_time_in_five_percent_does_not_come_twice() -> None:
+    two = [past(at, settling_time_s=50.0, settling_time_5pct_s=50.0) for at in range(12)]
+    five = [replace(one, band_pct=5.0) for one in two]
+    assert Quantity.SETTLING_TIME_5PCT in assess(two, LOOP, LIMITED).quantities
+    assert list(assess(five, LOOP, LIMITED).quantities) == [SETTLING]
+
+
 def test_longer_than_counts_as_at_least_that() -> None:
     rng = np.random.default_rng(9)
     steps = times(scattered(rng, 40, 12.0, 0.08))

@@ -2,17 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from zoneinfo import ZoneInfo
 
 from rich.console import Console
 from rich.text import Text
 
+from audit import figures
 from audit.cli.moments import local, local_day
-from audit.cli.screen import STYLE, indented, table
+from audit.cli.screen import STYLE, hanging, indented, table
 from audit.records import LIMITED, ChangeKind, Group, Outcome, Quantity, StandingWord
-from audit.reports import figures, words
+from audit.reports import words
 from audit.reports.contract import Json
+from audit.reports.place import order_sentence
 
 NEWEST_STEPS = 20
 NEWEST_DAYS = 14
@@ -25,7 +27,7 @@ def print_history(console: Console, found: Json, everything: bool = False) -> No
     _print_loop(console, found, zone)
     _print_specs(console, found["specs"], loop["eu"], zone)
     _print_standing(console, found["standing"], loop["eu"])
-    _print_trend(console, found["standing"].get("trend", {}), loop["eu"], zone)
+    _print_trend(console, found["standing"], loop["eu"], zone)
     _print_days(console, found["days"] if everything else found["days"][-NEWEST_DAYS:])
     _print_steps(console, found["steps"], loop["eu"], zone, everything)
     console.print()
@@ -76,7 +78,8 @@ def _print_specs(console: Console, specs: list[Json], eu: str, zone: ZoneInfo) -
         console.print("None: without limits nothing is judged.")
     for spec in reversed(specs):
         limits = [
-            f"{words.name_of(code)} {figures.with_unit(figures.plain(limit), _unit(code, eu))}"
+            f"{words.name_of(code, spec['settling_band_pct'])} "
+            f"{figures.with_unit(figures.plain(limit), _unit(code, eu))}"
             for code, limit in spec["limits"].items()
         ]
         least = spec["min_step_eu"]
@@ -103,66 +106,73 @@ def _print_standing(console: Console, standing: Json, eu: str) -> None:
     since = f", since about {standing['since']}" if standing["since"] else ""
     worse = f"; worse than it used to be{since}" if standing["degraded"] else ""
     line = Text(
-        f"Night {standing['night']}: rank {standing['rank']}, {words.STANDING[word]}{worse}, from "
-        f"{standing['usable_steps']} usable changes."
+        f"Night {standing['night']}: rank {standing['rank']}, {words.STANDING[word]}{worse}. "
+        f"Usable changes in the period: {standing['usable_steps']}."
     )
     line.highlight_words([words.STANDING[word]], STYLE[word.value])
     console.print(line)
     console.print(f"Group: {words.GROUP[Group(standing['group'])]}.")
     for reason in standing["reasons"]:
-        console.print(indented(f"- {reason['text']}", 2))
-    _print_order(console, standing["order"], eu)
+        console.print(hanging(reason["text"], "- ", 2))
+    band, criticality = standing["settling_band_pct"], standing["criticality"]
+    console.print(order_sentence(standing["order"], criticality, eu, band))
     if standing["limits"]:
-        _print_limits(console, standing["limits"], eu)
+        _print_limits(console, standing["limits"], eu, band)
 
 
-def _print_order(console: Console, order: Json, eu: str) -> None:
-    if order["value"] is None or order["quantity"] is None:
-        return
-    reference = figures.with_unit(figures.plain(order["reference"]), _unit(order["quantity"], eu))
-    console.print(
-        f"Order in the group: {order['value']:.3g} = criticality times distance "
-        f"{order['distance']:.3g} of the {words.name_of(order['quantity'])} from its "
-        f"{order['reference_kind']}, {reference}."
-    )
-
-
-def _print_limits(console: Console, limits: Mapping[str, Json], eu: str) -> None:
-    rows = table("QUANTITY", "LIMIT", "MEDIAN (95 % INTERVAL)", "STEPS", "OUTCOME")
+def _print_limits(
+    console: Console, limits: Mapping[str, Json], eu: str, band: float | None
+) -> None:
+    console.print()
+    rows = table("QUANTITY", "LIMIT", "MEDIAN (INTERVAL)", "CHANGES", "OUTCOME")
     for code, limit in limits.items():
-        outcome = Outcome(limit["outcome"])
+        outcome, unit = Outcome(limit["outcome"]), _unit(code, eu)
+        median = figures.interval(
+            limit["median"],
+            limit["low"],
+            limit["high"],
+            unit,
+            limit=limit["limit"],
+            at_least=limit["longer_than"],
+        )
         rows.add_row(
-            words.name_of(code),
-            figures.with_unit(figures.plain(limit["limit"]), _unit(code, eu)),
-            _median(limit, _unit(code, eu)),
+            words.name_of(code, band),
+            figures.with_unit(figures.plain(limit["limit"]), unit),
+            median or "-",
             str(limit["steps"]),
             Text(words.OUTCOME[outcome], style=STYLE[outcome.value]),
         )
     console.print(rows)
 
 
-def _median(limit: Json, unit: str) -> str:
-    text = figures.interval(limit["median"], limit["low"], limit["high"], unit) or "-"
-    return f"at least {text}" if limit["longer_than"] and limit["median"] is not None else text
-
-
-def _print_trend(console: Console, trend: Mapping[str, Json], eu: str, zone: ZoneInfo) -> None:
-    known = {code: found for code, found in trend.items() if found["baseline"] is not None}
-    if not known:
+def _print_trend(console: Console, standing: Json, eu: str, zone: ZoneInfo) -> None:
+    trend: Mapping[str, Json] = standing.get("trend", {})
+    if not trend:
         return
-    _heading(console, "Against the loop's own baseline")
-    rows = table("QUANTITY", "BASELINE (95 % INTERVAL)", "RECENT (95 % INTERVAL)", "CHANGED")
-    for code, found in known.items():
+    _heading(console, "Against the loop's own baseline (its first usable changes)")
+    rows = table("QUANTITY", "BASELINE (INTERVAL)", "RECENT (INTERVAL)", "GOT WORSE")
+    for code, found in trend.items():
         unit = _unit(code, eu)
-        baseline = found["baseline"], found["baseline_low"], found["baseline_high"]
         recent = found["recent"], found["recent_low"], found["recent_high"]
         rows.add_row(
-            words.name_of(code),
-            f"{figures.interval(*baseline, unit)}{', provisional' if found['provisional'] else ''}",
+            words.name_of(code, standing["settling_band_pct"]),
+            _baseline(found, unit),
             figures.interval(*recent, unit) or "-",
             _changed(found, zone),
         )
     console.print(rows)
+    for code, found in trend.items():
+        if found["note"]:
+            name = words.name_of(code, standing["settling_band_pct"])
+            console.print(indented(f"{name}: {found['note']}.", 2))
+
+
+def _baseline(found: Json, unit: str) -> str:
+    level = found["baseline"], found["baseline_low"], found["baseline_high"]
+    text = figures.interval(*level, unit)
+    if text is None:
+        return "no baseline"
+    return f"{text}, provisional" if found["provisional"] else text
 
 
 def _changed(found: Json, zone: ZoneInfo) -> Text:
@@ -171,8 +181,8 @@ def _changed(found: Json, zone: ZoneInfo) -> Text:
     span = ""
     if found["since_low"] and found["since_high"]:
         low, high = local_day(found["since_low"], zone), local_day(found["since_high"], zone)
-        span = f" ({low} to {high})"
-    return Text(f"worse since {local_day(found['since'], zone)}{span}", style="bold red")
+        span = "" if low == high else f" ({low} to {high})"
+    return Text(f"about {local_day(found['since'], zone)}{span}", style="bold red")
 
 
 def _print_days(console: Console, days: list[Json]) -> None:
@@ -213,23 +223,47 @@ def _print_step(console: Console, step: Json, eu: str, zone: ZoneInfo) -> None:
         f"{local(step['at'], zone, seconds=True)}  {before} → {figures.with_unit(after, eu)}  "
         f"{kind}, window {figures.plain(round(step['window_s'], 1))} s, {use}"
     )
+    change = ChangeKind(step["kind"])
     if step["set_aside"]:
-        why = "; ".join(f"{code}: {words.reason_of(code)}" for code in step["set_aside"])
-        console.print(indented(why, 2))
+        why = "; ".join(words.reason_of(code, change) for code in step["set_aside"])
+        console.print(indented(f"Not counted: {why}.", 2))
     judged = [q.value for q in LIMITED if q.value in step["verdicts"]]
     if step["usable"] and judged:
-        parts = [_judged(code, step, eu) for code in judged]
+        parts = [_judged(code, step, eu) for code in judged if _is_known(step, code)]
+        parts += [Text(text) for text in _missing(judged, step, change)]
         console.print(indented(Text("; ").join(parts), 2))
 
 
+def _is_known(step: Json, code: str) -> bool:
+    measured = step["measured"][code]
+    return any(measured[key] is not None for key in ("value", "low", "high"))
+
+
 def _judged(code: str, step: Json, eu: str) -> Text:
-    """One limited quantity of one step: value, interval, outcome, or why there is none."""
+    """One limited quantity of one step: value, interval, outcome, and why it is only a bound."""
     measured, verdict = step["measured"][code], step["verdicts"][code]
     outcome = Outcome(verdict["outcome"])
-    value = figures.interval(measured["value"], measured["low"], measured["high"], _unit(code, eu))
+    value = figures.interval(
+        measured["value"],
+        measured["low"],
+        measured["high"],
+        _unit(code, eu),
+        limit=verdict["limit"],
+    )
     why = verdict["why"] or measured["why"]
-    text = Text(f"{words.name_of(code)} {value or '-'}: ")
+    text = Text(f"{words.name_of(code, step['settling_band_pct'])} {value}: ")
     text.append(words.OUTCOME[outcome], STYLE[outcome.value])
     if why and outcome is not Outcome.IN_SPEC:
-        text.append(f" [{why}]")
+        text.append(f" ({words.reason_of(why)})")
     return text
+
+
+def _missing(judged: Sequence[str], step: Json, change: ChangeKind) -> list[str]:
+    """The quantities without a number, those with the same reason together."""
+    by_why: dict[str, list[str]] = {}
+    for code in judged:
+        if not _is_known(step, code):
+            why = step["verdicts"][code]["why"] or step["measured"][code]["why"]
+            names = by_why.setdefault(words.reason_of(why, change), [])
+            names.append(words.name_of(code, step["settling_band_pct"]))
+    return [f"{', '.join(names)}: {why}" for why, names in by_why.items()]

@@ -14,6 +14,7 @@ from audit.cli.screen import STYLE, indented
 from audit.records import Group, StandingWord
 from audit.reports import words
 from audit.reports.contract import Json
+from audit.reports.place import order_sentence
 
 GAP = "  "
 FIXED = {"rank": 4, "criticality": 4, "standing": 11, "since": 10, "usable_steps": 5}
@@ -34,12 +35,20 @@ def print_ranking(console: Console, found: Json, everything: bool = False) -> No
         if not members:
             continue
         console.print(Text(f"{words.GROUP[group]} ({len(members)})", style="bold underline"))
+        shown = members
         if group is Group.IN_SPEC and not everything:
-            console.print(indented(", ".join(row["tag"] for row in members), 6))
-            continue
-        for row in members:
+            shown = [row for row in members if _remarks(row)]
+        for row in shown:
             _print_loop(console, row, columns, everything)
+        _print_rest(console, [row["tag"] for row in members if row not in shown], bool(shown))
     _print_foot(console, found)
+
+
+def _print_rest(console: Console, tags: Sequence[str], after_others: bool) -> None:
+    """The loops in spec of which there is nothing to say, in one block."""
+    if tags:
+        lead = f"and {len(tags)} without a remark: " if after_others else ""
+        console.print(indented(f"{lead}{', '.join(tags)}", 6))
 
 
 HEADINGS: Json = {
@@ -55,8 +64,9 @@ HEADINGS: Json = {
 
 
 COLUMNS = (
-    "CRIT: 5 is the most critical. SINCE: estimated date of the change. STEPS: usable setpoint "
-    "changes the standing rests on."
+    "CRIT: 5 is the most critical. SINCE: when it got worse, estimated. STEPS: usable setpoint "
+    "changes in the period; the standing rests on the newest of them. 95 %: the interval the value "
+    "lies in; range: what fewer than six changes span."
 )
 
 
@@ -81,10 +91,16 @@ def _print_head(console: Console, found: Json) -> None:
 
 
 def _counts(loops: Sequence[Json]) -> str:
-    counts = Counter(row["standing"] for row in loops)
-    parts = [f"{counts[word.value]} {words.STANDING[word]}" for word in StandingWord]
-    degraded = sum(row["degraded"] for row in loops)
-    return f"{len(loops)} loops: {', '.join(parts)}. Worse than their own past: {degraded}."
+    """How many loops are in which group, as the headings below count them."""
+    counts = Counter(row["group"] for row in loops)
+    remarked = sum(row["group"] == Group.IN_SPEC.value and bool(_remarks(row)) for row in loops)
+    worse, never = counts[Group.OUT_AND_CHANGED.value], counts[Group.NEVER_MET.value]
+    return (
+        f"{len(loops)} loops: {worse + never} out of spec ({worse} of them got worse), "
+        f"{counts[Group.DEGRADING.value]} degrading, {counts[Group.UNDECIDED.value]} undecided, "
+        f"{counts[Group.UNSEEN.value]} unseen, {counts[Group.IN_SPEC.value]} in spec "
+        f"({remarked} of them with a remark)."
+    )
 
 
 def _columns(loops: Sequence[Json], width: int) -> dict[str, int]:
@@ -117,9 +133,26 @@ def _print_loop(console: Console, row: Json, columns: dict[str, int], everything
     line = Text(_line(columns, cells))
     line.highlight_words([standing], STYLE[row["standing"]])
     _print_line(console, line)
-    reasons = [reason["text"] for reason in row["reasons"]]
-    for text in reasons if everything else reasons[:1]:
-        console.print(indented(text, 6))
+    for reason in row["reasons"] if everything else _telling(row):
+        console.print(indented(reason["text"], 6))
+    if everything:
+        console.print(indented(order_sentence(row["order"], row["criticality"], row["eu"]), 6))
+
+
+def _remarks(row: Json) -> list[Json]:
+    return [reason for reason in row["reasons"] if reason["code"] in words.REMARKS]
+
+
+def _telling(row: Json) -> list[Json]:
+    """The reasons of the short list: what put the loop in its group, what of it got worse since
+    when, and the remarks."""
+    reasons = row["reasons"]
+    chosen = [] if row["group"] == Group.IN_SPEC.value else reasons[:1]
+    if row["degraded"]:
+        worse = [reason for reason in reasons if reason["code"].endswith(("_slower", "_larger"))]
+        chosen = [*chosen, *worse[:1]]
+    chosen = [*chosen, *_remarks(row)]
+    return [reason for at, reason in enumerate(chosen) if reason not in chosen[:at]]
 
 
 def _print_line(console: Console, line: Text) -> None:

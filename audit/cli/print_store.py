@@ -7,8 +7,8 @@ from datetime import UTC, datetime
 from rich.console import Console
 from rich.text import Text
 
+from audit import figures
 from audit.cli.screen import table
-from audit.reports import figures
 from audit.reports.contract import Json
 
 NEWEST_FILES = 20

@@ -52,7 +52,18 @@ def stand(
     distance = distance_of(group, limits, trend, loop, evidence.chosen)
     since = trend.since_us if trend.degraded else None
     case = Case(
-        loop, word, group, evidence, limits, spec, trend, tuple(days), rule, zone, in_register
+        loop=loop,
+        word=word,
+        group=group,
+        evidence=evidence,
+        limits=limits,
+        spec=spec,
+        trend=trend,
+        days=tuple(days),
+        rule=rule,
+        cutoff_us=cutoff_us,
+        zone=zone,
+        in_register=in_register,
     )
     return Standing(
         tag=loop.tag,

@@ -91,10 +91,10 @@ def from_baseline(trend: Trend, loop: Loop, steps: Sequence[PastStep]) -> list[D
     """Distance of each quantity that got worse from what it used to be, farthest first."""
     found = []
     for one in trend.quantities.values():
-        if one.changed and one.recent is not None and one.baseline is not None:
-            floor = floor_of(one.quantity, loop, steps)
-            reach = (one.recent - one.baseline) / max(one.baseline, floor)
-            found.append(Distance(reach, one.baseline, "baseline", one.quantity))
+        was, now = one.was, one.now
+        if one.changed and now is not None and was is not None:
+            reach = (now - was) / max(was, floor_of(one.quantity, loop, steps))
+            found.append(Distance(reach, was, "baseline", one.quantity))
     return sorted(found, key=lambda distance: -distance.value)
 
 

@@ -10,7 +10,8 @@ from audit.evidence import FEWEST_FOR_ORDER, SIGNED, decide
 from audit.ranking.distance import from_baseline, from_limits
 from audit.ranking.limits import Evidence, does_not_answer, measured_in
 from audit.ranking.loop_days import day_reasons, is_parked
-from audit.ranking.seen import none_usable, seen_reasons, unanswered_sentence
+from audit.ranking.rest import restless
+from audit.ranking.seen import none_usable, old_evidence, seen_reasons, unanswered_sentence
 from audit.ranking.sentences import (
     REMEDY,
     SEEN_AS,
@@ -21,6 +22,7 @@ from audit.ranking.sentences import (
     limit_sentence,
     name_of,
     plural,
+    rests_on,
     times_the_limit,
 )
 from audit.records import (
@@ -52,6 +54,7 @@ class Case:
     trend: Trend
     days: tuple[DayRecord, ...]
     rule: StandingRule
+    cutoff_us: int
     zone: tzinfo
     in_register: bool
 
@@ -69,7 +72,9 @@ def reasons_of(case: Case) -> tuple[ListReason, ...]:
     unseen = _unseen(case)
     first = changed + out if case.group is Group.DEGRADING else out + changed
     parked = day_reasons(case.days)
-    sides = seen_reasons(case.evidence) + _baseline(case)
+    old = old_evidence(case.evidence, case.cutoff_us, case.zone)
+    sides = restless(case.evidence, case.loop) + seen_reasons(case.evidence, case.loop)
+    sides = old + sides + _baseline(case)
     if not case.in_register:
         sides.insert(0, ListReason("not_in_register", "Not in the loop register any more."))
     if case.word is StandingWord.UNSEEN and is_parked(case.days):
@@ -90,13 +95,17 @@ def _out(case: Case) -> list[ListReason]:
     for distance in from_limits(case.limits, case.loop, case.evidence.chosen):
         if distance.quantity is not None:
             one = by_quantity[distance.quantity]
-            text = _limit_sentence(one, case) + times_the_limit(one)
+            text = _limit_sentence(one, case) + times_the_limit(one) + _rests_on(one, case)
             reasons.append(ListReason(f"{STEM[one.quantity]}_out", f"{text}."))
     return reasons
 
 
 def _limit_sentence(one: LimitStanding, case: Case) -> str:
-    return limit_sentence(one, case.loop, case.band_pct, len(case.evidence.chosen))
+    return limit_sentence(one, case.loop, case.band_pct)
+
+
+def _rests_on(one: LimitStanding, case: Case) -> str:
+    return rests_on(one, len(case.evidence.chosen))
 
 
 def _changed(case: Case) -> list[ListReason]:
@@ -120,7 +129,7 @@ def _unseen(case: Case) -> list[ListReason]:
     """Why there is no usable step: what was seen, and what was wrong with it."""
     if case.word is not StandingWord.UNSEEN:
         return []
-    reasons = [none_usable(case.evidence.seen, case.rule.days)]
+    reasons = [none_usable(case.evidence.seen, case.rule.days, case.loop)]
     return reasons if case.limits else [*reasons, _no_limits()]
 
 
@@ -142,7 +151,7 @@ def _undecided(case: Case) -> list[ListReason]:
 
 
 def _undecided_reason(one: LimitStanding, case: Case) -> ListReason:
-    text = f"{_limit_sentence(one, case)}: undecided, {_decider(one, case)}."
+    text = f"{_limit_sentence(one, case)}: undecided, {_decider(one, case)}{_rests_on(one, case)}."
     return ListReason(f"{STEM[one.quantity]}_undecided", text)
 
 
@@ -152,16 +161,37 @@ def _decider(one: LimitStanding, case: Case) -> str:
         return _missing(one.quantity, case)
     if one.steps < FEWEST_FOR_ORDER:
         needed = FEWEST_FOR_ORDER - one.steps
-        return f"needs about {plural(needed, 'more usable step')}"
+        return f"needs about {plural(needed, 'more usable change')}"
     if one.high is None or one.longer_than:
-        return "some responses were cut before they were over: longer windows would decide"
+        return _bounded(one.quantity, case)
+    if one.median is None:
+        return "only an upper bound is known: larger changes or less noise would decide"
     more = case.rule.steps - one.steps
     spans = "the interval still spans the limit"
     if _each_spans(one, case):
-        return f"{spans}, and so does that of most steps: larger changes or less noise would decide"
+        return (
+            f"{spans}, and so does that of most changes: larger changes or less noise would decide"
+        )
     if more > 0:
-        return f"{spans}: needs about {plural(more, 'more usable step')}"
-    return f"{spans}: the steps lie on both sides of it"
+        return f"{spans}: needs about {plural(more, 'more usable change')}"
+    return f"{spans}: the changes lie on both sides of it"
+
+
+def _bounded(quantity: Quantity, case: Case) -> str:
+    """Why of some responses only "longer than" is known, and what would help."""
+    found = (step.measured.get(quantity) for step in case.evidence.chosen)
+    whys = Counter(m.why for m in found if m and m.why and m.value is None and m.high is None)
+    why = _commonest(whys)
+    cut = "some responses were not over when "
+    if why is Reason.NO_RESPONSE:
+        return f"to some changes it did not answer: {REMEDY[why]}"
+    if why is Reason.NOT_FOLLOWING:
+        return f"{cut}the loop left automatic: changes left in automatic for longer would decide"
+    return f"{cut}the setpoint was moved again or the window ended: more time would decide"
+
+
+def _commonest(whys: Counter[Reason]) -> Reason | None:
+    return min(whys, key=lambda why: (-whys[why], why.value), default=None)
 
 
 def _each_spans(one: LimitStanding, case: Case) -> bool:
@@ -180,11 +210,11 @@ def _missing(quantity: Quantity, case: Case) -> str:
         if measured is not None and measured.why is not None:
             whys[measured.why] += 1
     chosen = f"none of the {last_steps(len(case.evidence.chosen))} has it"
-    if not whys:
+    why = _commonest(whys)
+    if why is None:
         return chosen
-    why, count = min(whys.items(), key=lambda item: (-item[1], item[0].value))
     remedy = REMEDY.get(why)
-    return f"{chosen} ({count} {SEEN_AS[why]})" + (f": {remedy}" if remedy else "")
+    return f"{chosen} ({whys[why]} {SEEN_AS[why]})" + (f": {remedy}" if remedy else "")
 
 
 def _in_spec(case: Case) -> list[ListReason]:
@@ -198,7 +228,9 @@ def _in_spec(case: Case) -> list[ListReason]:
     ]
     why = "an averaging level" if case.loop.averaging else "no peak"
     texts = met + [f"{name}: does not apply ({why})" for name in spared]
-    return [ListReason("in_spec", "; ".join(texts) + ".")]
+    over = last_steps(len(case.evidence.chosen))
+    medians = f" (medians over the {over}, of those that show it)" if met else ""
+    return [ListReason("in_spec", f"{'; '.join(texts)}{medians}.")]
 
 
 def _baseline(case: Case) -> list[ListReason]:
@@ -208,12 +240,12 @@ def _baseline(case: Case) -> list[ListReason]:
     most = max(case.trend.quantities.values(), key=lambda one: one.baseline_steps)
     if not most.provisional:
         return []
-    if most.baseline is None:
-        text = f"No baseline yet: it needs 10 usable steps, there are {most.baseline_steps}."
+    if most.was is None:
+        text = f"No baseline yet: it needs 10 usable changes, there are {most.baseline_steps}."
     else:
         text = (
-            f"The baseline is provisional ({plural(most.baseline_steps, 'step')}): "
-            "only gross changes are flagged."
+            f"The baseline is provisional ({plural(most.baseline_steps, 'change')}): "
+            "only gross worsening is flagged."
         )
     return [ListReason("provisional_baseline", text)]
 

@@ -33,7 +33,7 @@ class QuantityTrend:
 
     ``baseline`` and ``recent`` are levels (medians) with 95 % intervals in the quantity's unit;
     ``changed``: worse, beyond chance and large enough to matter; ``since``: estimated instant of
-    the change and its 95 % range.
+    the change and its 95 % range. ``recent_steps``: how many steps the recent level rests on.
     """
 
     quantity: Quantity
@@ -51,6 +51,17 @@ class QuantityTrend:
     since_low_us: int | None = None
     since_high_us: int | None = None
     note: str = ""
+    recent_steps: int = 0
+
+    @property
+    def was(self) -> float | None:
+        """The baseline, or where it is only bounded above that bound."""
+        return self.baseline_high if self.baseline is None else self.baseline
+
+    @property
+    def now(self) -> float | None:
+        """The recent level, or where it is only bounded below that bound."""
+        return self.recent_low if self.recent is None else self.recent
 
     @property
     def changed(self) -> bool:

@@ -145,6 +145,7 @@ def quantity_trend(found: QuantityTrend) -> Json:
         "recent": found.recent,
         "recent_low": found.recent_low,
         "recent_high": found.recent_high,
+        "recent_steps": found.recent_steps,
         "changed": found.changed,
         "since": stamp(found.since_us),
         "since_low": stamp(found.since_low_us),

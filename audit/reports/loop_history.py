@@ -9,12 +9,13 @@ from difflib import get_close_matches
 from zoneinfo import ZoneInfo
 
 from audit.errors import UnknownLoop
-from audit.records import DayRecord, Standing, Step, instant, to_us
+from audit.figures import share
+from audit.records import DayRecord, Spec, Standing, Step, instant, spec_in_force, to_us
 from audit.reports import contract
 from audit.reports.contract import Json
-from audit.reports.figures import share
 from audit.site import Site
 from audit.store import Store, queries
+from audit.store.entries import NightInfo
 
 
 def history(
@@ -47,19 +48,26 @@ def history(
         "specs": [contract.spec(row) for row in specs],
         "interventions": [],
         "steps": [contract.step(step) for step in steps],
-        "standing": _standing(standing, newest[1] if newest else []),
+        "standing": _standing(standing, newest, specs),
         "days": [_day(day, count) for day, count in _with_counts(days, steps, zone)],
     }
 
 
-def _standing(standing: Standing | None, ranked: Sequence[Standing]) -> Json:
-    """The newest standing with its rank and trends; empty where the loop has none yet."""
-    if standing is None:
+def _standing(
+    standing: Standing | None,
+    newest: tuple[NightInfo, list[Standing]] | None,
+    specs: Sequence[Spec],
+) -> Json:
+    """The newest standing with its rank, settling band and trends; empty without one."""
+    if standing is None or newest is None:
         return {}
+    night, ranked = newest
+    spec = spec_in_force(specs, night.cutoff)
     trend = standing.trend.quantities if standing.trend else {}
     return (
         {"rank": [row.tag for row in ranked].index(standing.tag) + 1}
         | contract.standing(standing)
+        | {"settling_band_pct": spec.settling_band_pct if spec else None}
         | {"trend": {q.value: contract.quantity_trend(found) for q, found in trend.items()}}
     )
 

@@ -23,8 +23,8 @@ QUANTITY: Mapping[Quantity, Term] = {
     Quantity.RISE_TIME: Term("rise time", "s"),
     Quantity.PEAK_TIME: Term("peak time", "s"),
     Quantity.SETTLING_TIME: Term("settling time", "s"),
-    Quantity.SETTLING_TIME_2PCT: Term("settling time, 2 %", "s"),
-    Quantity.SETTLING_TIME_5PCT: Term("settling time, 5 %", "s"),
+    Quantity.SETTLING_TIME_2PCT: Term("settling time (2 %)", "s"),
+    Quantity.SETTLING_TIME_5PCT: Term("settling time (5 %)", "s"),
     Quantity.OVERSHOOT: Term("overshoot", "%"),
     Quantity.UNDERSHOOT: Term("undershoot", "%"),
     Quantity.STEADY_STATE_ERROR: Term("steady-state error", "EU"),
@@ -75,7 +75,7 @@ REASON: Mapping[Reason, str] = {
     Reason.TOO_SMALL: "the change is inside the noise, or smaller than the spec's minimum",
     Reason.NOT_FOLLOWING: "not in an automatic mode, or the setpoint tracks the process variable",
     Reason.UNSETTLED_BEFORE: "the loop was not at rest before the change",
-    Reason.CUT_SHORT: "the next move came before it settled",
+    Reason.CUT_SHORT: "the next move, or the end of the window, came before it settled",
     Reason.OUTPUT_SATURATED: "the controller output was at its limit",
     Reason.DISTURBED: "a disturbance that the change does not explain",
     Reason.OSCILLATING: "a sustained oscillation before and after",
@@ -88,10 +88,25 @@ REASON: Mapping[Reason, str] = {
     Reason.NO_PEAK: "there is no peak beyond the noise",
     Reason.NO_RANGE: "the loop's range is not in the register",
     Reason.NO_OUTPUT: "the loop has no controller output tag",
-    Reason.NEEDS_MODEL: "only a model of the response could give it",
+    Reason.NEEDS_MODEL: "not measured yet: only a model of the response could give it",
     Reason.NOISY: "the noise is too large for it",
     Reason.AVERAGING: "an averaging level is meant to float",
 }
+
+MANY_MOVES: Mapping[ChangeKind, str] = {
+    ChangeKind.STAIRCASE: "not measured on changes of several moves",
+    ChangeKind.RAMP: "not measured on ramps",
+    ChangeKind.MOVING: "not measured on a setpoint that never rests",
+}
+"""What ``needs_model`` means to a person, by the kind of change."""
+
+REMARKS = frozenset(
+    {
+        *("parked_manual", "pv_bad_often", "output_saturated_often", "evidence_old", "restless"),
+        *("no_response_seen", "oscillating_often", "few_usable", "not_in_register"),
+    }
+)
+"""Codes of reasons that say something of a loop whatever its standing: never left out of a list."""
 
 CAUTIONS = (
     "Loopassay advises and changes nothing in the plant. Changes to tuning, setpoints or equipment "
@@ -102,8 +117,8 @@ CAUTIONS = (
 
 ORDER = (
     "Order: by the groups above; within the first three by criticality times distance from the "
-    "limit (or, when degrading, from the loop's own past), in the others by criticality. 5 is the "
-    "most critical."
+    "limit (or, when degrading, from the loop's own past), in the others by criticality; ties by "
+    "tag. --all shows each loop's."
 )
 
 
@@ -112,12 +127,18 @@ def unit_of(quantity: Quantity, eu: str) -> str:
     return QUANTITY[quantity].unit.replace("EU", eu or "EU")
 
 
-def name_of(code: str) -> str:
-    """A quantity's name from its code; a code this version does not know stays itself."""
+def name_of(code: str, band_pct: float | None = None) -> str:
+    """A quantity's name from its code, the settling time with the band it is judged in; a code
+    this version does not know stays itself.
+    """
     names = {quantity.value: term.name for quantity, term in QUANTITY.items()}
+    if code == Quantity.SETTLING_TIME.value and band_pct is not None:
+        return f"{names[code]} ({band_pct:g} %)"
     return names.get(code, code)
 
 
-def reason_of(code: str) -> str:
+def reason_of(code: str, kind: ChangeKind = ChangeKind.STEP) -> str:
     """A reason's words from its code; a code this version does not know stays itself."""
+    if code == Reason.NEEDS_MODEL.value and kind in MANY_MOVES:
+        return MANY_MOVES[kind]
     return {reason.value: words for reason, words in REASON.items()}.get(code, code)

@@ -69,6 +69,17 @@ class Baseline:
         return references
 
 
+def first_baseline(series: Series) -> int | None:
+    """How many of the first steps make the first baseline: PROVISIONAL, or as many more, up to
+    FULL, as it takes for fewer than half to be an "at least". None where they are not there.
+    """
+    least = np.cumsum(series.bound[:FULL] == AT_LEAST).tolist()
+    for count in range(PROVISIONAL, len(least) + 1):
+        if 2 * least[count - 1] < count:
+            return count
+    return None
+
+
 def baseline_of(series: Series, taken: Sequence[int], scale: Scale) -> Baseline:
     """The baseline that some steps make.
 

@@ -6,6 +6,7 @@ changes. The same steps always lead to the same state: the history is gone throu
 
 from __future__ import annotations
 
+import statistics
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -37,12 +38,12 @@ class Watch:
     series: Series
     scale: Scale
     baseline: Baseline
+    from_index: int = PROVISIONAL
+    run_from: int = PROVISIONAL
     alarm: int | None = None
     onset: int = 0
-    from_index: int = PROVISIONAL
     worse: float = 0.0
     better: float = 0.0
-    run_from: int = PROVISIONAL
     waiting: list[int] = field(default_factory=list)
     alarms: list[int] = field(default_factory=list)
 
@@ -56,21 +57,21 @@ class Watch:
         told = np.flatnonzero(self.baseline.tells(self.series, slice(first, upto)))
         return told[-RECENT:] + first
 
-    def recent_excess(self, upto: int) -> float | None:
-        """Median excess of the recent steps on the scale; None where none tells."""
+    def recent_excess(self, upto: int, fewest: int = 1) -> float | None:
+        """Median excess of the recent steps on the scale; None where fewer than so many tell."""
         chosen = self.recent(upto)
-        if not len(chosen):
+        if len(chosen) < fewest:
             return None
         part = slice(int(chosen[0]), upto)
-        return float(np.median(self.baseline.excess(self.series, part)[chosen - chosen[0]]))
+        excess = self.baseline.excess(self.series, part)[chosen - chosen[0]]
+        median: float = statistics.median(excess.tolist())
+        return median
 
 
-def watch(series: Series, scale: Scale) -> Watch | None:
-    """The state after all steps; None where they are too few for a baseline."""
-    if len(series) < PROVISIONAL:
-        return None
-    state = Watch(series, scale, baseline_of(series, range(PROVISIONAL), scale))
-    index = PROVISIONAL
+def watch(series: Series, scale: Scale, first: int = PROVISIONAL) -> Watch:
+    """The state after all steps, the first so many of which are the first baseline."""
+    state = Watch(series, scale, baseline_of(series, range(first), scale), first, first)
+    index = first
     while index < len(series):
         ahead = 4 * GROWS_BY if state.provisional else CHUNK
         index = go_on(state, index, min(index + ahead, len(series)))
@@ -121,10 +122,9 @@ def _grow(state: Watch, index: int) -> bool:
 
 def _clear_if_back(state: Watch, index: int) -> None:
     """End the alarm once the last RECENT steps since its onset are at the baseline again."""
-    chosen = state.recent(index + 1)
-    excess = state.recent_excess(index + 1)
+    excess = state.recent_excess(index + 1, fewest=RECENT)
     near = min(state.scale.matters, BACK_WITHIN * state.baseline.scatter)
-    if excess is not None and len(chosen) >= RECENT and excess < near:
+    if excess is not None and excess < near:
         state.alarm = None
         state.worse = state.better = 0.0
         state.from_index = state.run_from = index + 1

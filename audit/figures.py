@@ -1,8 +1,10 @@
 """Numbers in, text out: as many digits as the number's own interval carries, and its unit.
 
-Of an interval's half width two significant digits are kept, and the value is written to the same
-decimal place (common practice with standard uncertainties, JCGM 100 7.2.6). With one bound, its
-distance from the value takes the place of the half width; without any, four digits are kept.
+The value and both ends of its interval are written to the decimal place of the first significant
+digit of half the interval's width: no finer than that is known (common practice; JCGM 100 7.2.6
+allows at most two digits). Of a number without interval, or a lone bound, three digits are kept.
+Where rounding would carry a number onto its limit or past it, more decimals are shown. Times are
+in seconds everywhere, as limits are set: the same number reads alike in a sentence and a table.
 """
 
 from __future__ import annotations
@@ -10,15 +12,31 @@ from __future__ import annotations
 from math import floor, log10
 
 MOST_DECIMALS = 9
+MORE_DECIMALS = 3
+"""At most so many more decimals keep a number on its side of the limit."""
 
 
-def decimals(value: float, low: float | None = None, high: float | None = None) -> int:
+def decimals(
+    value: float,
+    low: float | None = None,
+    high: float | None = None,
+    limit: float | None = None,
+) -> int:
     """Decimal places fit for ``value`` known to lie between ``low`` and ``high``."""
     known = [bound for bound in (low, high) if bound is not None]
     spread = (max(known) - min(known)) / 2.0 if len(known) == 2 else 0.0
-    if len(known) == 1:
-        spread = abs(value - known[0])
-    return _places(spread, 2) if spread > 0.0 else _places(abs(value), 4)
+    places = _places(spread, 1) if spread > 0.0 else _places(abs(value), 3)
+    limits = () if limit is None else (limit, -limit)
+    for more in range(MORE_DECIMALS + 1):
+        if all(_same_side(n, places + more, one) for n in (value, *known) for one in limits):
+            return places + more
+    return places
+
+
+def _same_side(exact: float, places: int, limit: float) -> bool:
+    """Whether a number keeps its side of a limit when it is rounded."""
+    shown = round(exact, places)
+    return (shown > limit, shown < limit) == (exact > limit, exact < limit)
 
 
 def _places(size: float, digits: int) -> int:
@@ -42,7 +60,7 @@ def plain(value: float) -> str:
 
 def pair(one: float, other: float) -> tuple[str, str]:
     """Two levels written to the same decimal, fine enough to show what lies between them."""
-    places = max(decimals(other - one), 0) if one != other else decimals(one)
+    places = _places(abs(other - one) or abs(one), 4)
     texts = number(one, places), number(other, places)
     while places and all(text.endswith("0") for text in texts):
         places -= 1
@@ -56,31 +74,44 @@ def with_unit(text: str, unit: str) -> str:
 
 
 def interval(
-    value: float | None, low: float | None, high: float | None, unit: str = ""
+    value: float | None,
+    low: float | None,
+    high: float | None,
+    unit: str = "",
+    *,
+    kind: str = "",
+    limit: float | None = None,
+    at_least: bool = False,
 ) -> str | None:
     """A measured number with its 95 % interval, in words where only a bound is known.
 
     ``12.3 s (11.9 to 12.8)``, ``longer than 600 s``, ``at most 0.12``; None where nothing is known.
+    ``kind`` is put before the interval; ``limit``: what its ends must not seem to lie on;
+    ``at_least``: the value is a lower bound itself.
     """
     if value is not None:
-        places = decimals(value, low, high)
-        text = with_unit(number(value, places), unit)
-        if low is None and high is None:
+        places = decimals(value, low, high, limit)
+        least = "at least " if at_least else ""
+        text = f"{least}{with_unit(number(value, places), unit)}"
+        if (low is None and high is None) or low == high == value:
             return text
-        return f"{text} ({_bounds(low, high, places)})"
+        return f"{text} ({kind}{': ' if kind else ''}{_bounds(low, high, places)})"
     if low is not None and high is not None:
-        return with_unit(_bounds(low, high, decimals(low, low, high)), unit)
+        if low == 0.0:
+            short = plain(float(number(high, decimals(high, None, high, limit))))
+            return f"at most {with_unit(short, unit)}"
+        return with_unit(_bounds(low, high, decimals(low, low, high, limit)), unit)
     if low is not None:
         words = "longer than" if unit == "s" else "more than"
-        return f"{words} {with_unit(_lone(low), unit)}"
+        return f"{words} {with_unit(lone(low), unit)}"
     if high is not None:
-        return f"at most {with_unit(_lone(high), unit)}"
+        return f"at most {with_unit(lone(high), unit)}"
     return None
 
 
-def _lone(bound: float) -> str:
-    """A bound without a partner: three significant digits, no zeros behind."""
-    return plain(float(number(bound, _places(abs(bound), 3))))
+def lone(number_: float) -> str:
+    """A number without an interval: three significant digits, no zeros behind."""
+    return plain(float(number(number_, _places(abs(number_), 3))))
 
 
 def _bounds(low: float | None, high: float | None, places: int) -> str:
