@@ -54,8 +54,10 @@ class Constants:
     """Draws of one swing from this share on are a hump the settling time's interval must hold."""
     skew: float = 0.15
     """Bias of a peak's time by its skewness, s: at most about skew x half-width² / rise."""
-    excess_doubt: float = 0.2
-    """Relative standard uncertainty of the noise part of the IAE."""
+    excess_doubt: float = 0.07
+    excess_doubt_cap: float = 0.3
+    """Relative standard uncertainty of the noise part of the IAE, times the noise's inflation
+    (see ``Noise``) up to a cap: slow noise is harder to tell from the error."""
     """Settled at all: inside 5 % or 5 sd of the smoothed curve for the dwell."""
     dwell_samples: int = 10
     carried_share: float = 0.03

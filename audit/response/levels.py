@@ -143,7 +143,7 @@ def _motion(t: Array, v: Array, weight: Array, noise: Noise) -> tuple[float, flo
     error = noise.sd * np.sqrt(noise.inflation / count) * length / np.sqrt(spread)
     error = float(np.hypot(error, noise.coarse))
     drift = slope * length
-    beyond = float(np.copysign(np.sqrt(max(0.0, drift**2 - 2.0 * error**2)), drift))
+    beyond = float(np.copysign(np.sqrt(max(0.0, drift**2 - 4.0 * error**2)), drift))
     left = v - mean - slope * z
     swing = float(np.sqrt(max(0.0, float(weight @ (left * left)) - 1.3 * noise.sd**2)))
     return beyond, swing
