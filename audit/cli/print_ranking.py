@@ -143,6 +143,12 @@ def _remarks(row: Json) -> list[Json]:
     return [reason for reason in row["reasons"] if reason["code"] in words.REMARKS]
 
 
+def _about(reason: Json) -> str:
+    """What the code of a reason about a quantity begins with: the quantity."""
+    code: str = reason["code"]
+    return code.rpartition("_")[0]
+
+
 def _telling(row: Json) -> list[Json]:
     """The reasons of the short list: what put the loop in its group, what of it got worse since
     when, and the remarks."""
@@ -150,7 +156,8 @@ def _telling(row: Json) -> list[Json]:
     chosen = [] if row["group"] == Group.IN_SPEC.value else reasons[:1]
     if row["degraded"]:
         worse = [reason for reason in reasons if reason["code"].endswith(("_slower", "_larger"))]
-        chosen = [*chosen, *worse[:1]]
+        same = [reason for reason in worse if _about(reason) == _about(reasons[0])]
+        chosen = [*chosen, *(same or worse)[:1]]
     chosen = [*chosen, *_remarks(row)]
     return [reason for at, reason in enumerate(chosen) if reason not in chosen[:at]]
 
