@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from audit.records import SECOND_US, Between, MeasureSettings, Record, Role, SetpointChange
 from audit.response.constants import CONSTANTS
 from audit.response.localfit import Array
+from audit.response.order import differences, lower_quartile, median
 
 
 @dataclass(frozen=True, eq=False)
@@ -60,7 +61,7 @@ def typical_interval(t: Array, from_s: float, to_s: float) -> float:
     inside = t[(t >= from_s) & (t <= to_s)]
     if len(inside) < 2:
         return 0.0
-    return float(np.quantile(np.diff(inside), 0.25, method="lower"))
+    return lower_quartile(differences(inside))
 
 
 def spikes(t: Array, v: Array) -> NDArray[np.bool_]:
@@ -75,13 +76,13 @@ def spikes(t: Array, v: Array) -> NDArray[np.bool_]:
     middle = 0.5 * (v[:-2] + v[2:])
     off = np.abs(v[1:-1] - middle)
     bend = v[2:] - 2.0 * v[1:-1] + v[:-2]
-    sd = 1.4826 * float(np.median(np.abs(bend))) / np.sqrt(6.0)
+    sd = 1.4826 * median(np.abs(bend)) / np.sqrt(6.0)
     padded = np.pad(off, 3, mode="edge")
     near = np.max([padded[3 + k : 3 + k + len(off)] for k in (-3, -2, 2, 3)], axis=0)
     least = max(CONSTANTS.spike_sd * sd, CONSTANTS.spike_share)
     agree = np.abs(v[2:] - v[:-2]) < 0.25 * off
-    length = np.diff(t)
-    brief = length[1:] <= 1.5 * np.median(length)
+    length = differences(t)
+    brief = length[1:] <= 1.5 * median(length)
     flag[1:-1] = (off > least) & (off > 4.0 * near) & agree & brief
     return flag
 

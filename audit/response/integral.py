@@ -12,6 +12,7 @@ from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.localfit import Array
 from audit.response.noise import Noise
+from audit.response.order import differences
 from audit.response.shape import boxcar
 
 
@@ -35,7 +36,7 @@ def absolute_error(
     grid = np.unique(np.concatenate([[0.0], inside, cuts, [end_s]]))
     sp = held[np.searchsorted(at, grid[:-1], "right") - 1]
     start, stop = _sides(curve, grid)
-    width = np.diff(grid)
+    width = differences(grid)
     left, right = start - sp, stop - sp
     plain = float(width @ (0.5 * (np.abs(left) + np.abs(right))))
     excess = _folded(0.5 * (left + right), noise, None if level is None else level - sp)
@@ -54,7 +55,7 @@ def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
     """The process variable at the start and at the end of each interval of the grid."""
     if curve.hold:
         place = np.searchsorted(curve.ft, grid[:-1], "right") - 1
-        value = curve.fv[np.clip(place, 0, len(curve.fv) - 1)]
+        value = curve.fv[np.minimum(np.maximum(place, 0), len(curve.fv) - 1)]
         return value, value
     value = np.interp(grid, curve.ft, curve.fv)
     return value[:-1], value[1:]
@@ -71,7 +72,7 @@ def _sampling(curve: Curve, grid: Array, left: Array, right: Array) -> float:
 
 def _area(value: Array, at: Array) -> float:
     """Trapezoid."""
-    return float(np.diff(at) @ (0.5 * (value[1:] + value[:-1])))
+    return float(differences(at) @ (0.5 * (value[1:] + value[:-1])))
 
 
 def _folded(error: Array, noise: Noise, final: Array | None) -> Array:

@@ -13,6 +13,7 @@ from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.localfit import Array
 from audit.response.noise import ALIKE, Noise
+from audit.response.order import clamped, differences
 
 TAILS = ((0.5, 0.7), (0.25, 1.4), (0.1, 3.5))
 """Shares of the time to the end that are tried as the final stretch; how much of a stretch's own
@@ -111,8 +112,8 @@ def _durations(t: Array, lo: float, hi: float, hold: bool) -> Array:
         edges = np.append(t, max(hi, float(t[-1])))
     else:
         edges = np.concatenate([[-np.inf], 0.5 * (t[1:] + t[:-1]), [np.inf]])
-    edges = np.clip(edges, lo, hi)
-    return np.diff(edges)
+    edges = clamped(edges, lo, hi)
+    return differences(edges)
 
 
 def _robust_mean(v: Array, weight: Array) -> float:
@@ -124,7 +125,7 @@ def _robust_mean(v: Array, weight: Array) -> float:
     robust = 1.4826 * float(far[len(far) // 2])
     if robust > ALIKE:
         reach = CONSTANTS.hampel_clip * robust
-        off = np.clip(off, -reach, reach)
+        off = clamped(off, -reach, reach)
     return middle + float(weight @ off)
 
 

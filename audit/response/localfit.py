@@ -33,15 +33,15 @@ def _windows(
     t: Array, at: Array, left: Array, right: Array
 ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
     """First and one-past-last sample of each window; at least four samples in each."""
-    first = np.searchsorted(t, at - left, "left")
-    last = np.searchsorted(t, at + right, "right")
+    first = t.searchsorted(at - left, "left")
+    last = t.searchsorted(at + right, "right")
     few = last - first < LEAST_POINTS
-    here = np.searchsorted(t, at, "left")
+    here = t.searchsorted(at, "left")
     first = np.where(few, np.minimum(first, here - 2), first)
     last = np.where(few, np.maximum(last, here + 2), last)
     last = np.where(first < 0, np.maximum(last, LEAST_POINTS), last)
     first = np.where(last > len(t), np.minimum(first, len(t) - LEAST_POINTS), first)
-    return np.clip(first, 0, len(t)), np.clip(last, 0, len(t))
+    return np.minimum(np.maximum(first, 0), len(t)), np.minimum(np.maximum(last, 0), len(t))
 
 
 def fit(t: Array, v: Array, at: Array, left: Array, right: Array) -> Fit:

@@ -11,6 +11,7 @@ import numpy as np
 
 from audit.response.curve import Curve
 from audit.response.localfit import Array, Fit
+from audit.response.order import clamped, differences, median, quantile
 
 ALIKE = 1e-9
 """Values closer than this part of the change are one value."""
@@ -92,11 +93,11 @@ def _residual(curve: Curve, lo: float, hi: float) -> Array:
 
 def _scale(residual: Array) -> float:
     """Standard deviation, samples beyond 3.5 robust ones drawn in."""
-    robust = 1.4826 * float(np.median(np.abs(residual)))
+    robust = 1.4826 * median(np.abs(residual))
     plain = float(np.sqrt(residual @ residual / (len(residual) - 2)))
     if robust <= ALIKE:
         return plain if plain > ALIKE else 0.0
-    drawn = np.clip(residual, -3.5 * robust, 3.5 * robust)
+    drawn = clamped(residual, -3.5 * robust, 3.5 * robust)
     return float(np.sqrt(drawn @ drawn / (len(drawn) - 2)))
 
 
@@ -104,7 +105,7 @@ def _correlation(residual: Array, sd: float) -> float:
     """Correlation from one sample to the next, 0 to 0.95, with most of its own doubt added."""
     if sd <= 0:
         return 0.0
-    drawn = np.clip(residual, -3.5 * sd, 3.5 * sd)
+    drawn = clamped(residual, -3.5 * sd, 3.5 * sd)
     square = float(drawn @ drawn)
     rho = float(drawn[:-1] @ drawn[1:]) / square
     rho += 1.0 / len(residual) + 0.7 / float(np.sqrt(len(residual)))
@@ -120,14 +121,14 @@ def _bend_sd(curve: Curve) -> float:
     if len(v) < 16:
         return 0.0
     bend = np.abs(v[2:] - 2.0 * v[1:-1] + v[:-2])
-    return float(np.quantile(bend, 0.25)) / (0.3186 * float(np.sqrt(6.0)))
+    return float(quantile(bend, 0.25)) / (0.3186 * float(np.sqrt(6.0)))
 
 
 def _quantum(v: Array) -> float:
     """The step all values are multiples of; 0 where there is none to see."""
     if len(v) < 8:
         return 0.0
-    apart = np.diff(np.sort(v))
+    apart = differences(np.sort(v))
     apart = apart[apart > ALIKE]
     if len(apart) < 4 or len(apart) > 0.5 * len(v):
         return 0.0
@@ -142,16 +143,16 @@ def _deadband(curve: Curve) -> float:
     t, v = curve.t[inside], curve.v[inside]
     if len(t) < 8:
         return 0.0
-    length = np.diff(t)
-    change = np.abs(np.diff(v))
-    regular = np.abs(length - np.median(length)) < 0.05 * np.median(length)
+    length = differences(t)
+    change = np.abs(differences(v))
+    regular = np.abs(length - median(length)) < 0.05 * median(length)
     if float(regular.mean()) > 0.9:
         return 0.0
     told = change[(length < 0.9 * length.max()) & (change > ALIKE)]
     if len(told) < 6:
         return 0.0
-    least = float(np.quantile(told, 0.05))
-    return least if least > 0.3 * float(np.median(told)) else 0.0
+    least = float(quantile(told, 0.05))
+    return least if least > 0.3 * float(median(told)) else 0.0
 
 
 def _thinning(curve: Curve) -> float:
@@ -165,13 +166,13 @@ def _thinning(curve: Curve) -> float:
     if curve.hold or len(t) < 5:
         return 0.0
     scan = scan_s(curve)
-    length = np.diff(t)
-    few = len(t) < 16 and float(length.max()) > THINNED * float(np.median(length))
+    length = differences(t)
+    few = len(t) < 16 and float(length.max()) > THINNED * median(length)
     thinned = scan > 0 and float(t[-1] - t[0]) > THINNED * scan * (len(t) - 1)
     if not (few or thinned):
         return 0.0
     share = (t[1:-1] - t[:-2]) / (t[2:] - t[:-2])
-    return float(np.median(np.abs(v[1:-1] - (1.0 - share) * v[:-2] - share * v[2:])))
+    return median(np.abs(v[1:-1] - (1.0 - share) * v[:-2] - share * v[2:]))
 
 
 def scan_s(curve: Curve) -> float:
@@ -179,7 +180,7 @@ def scan_s(curve: Curve) -> float:
 
     0 where there is none to see.
     """
-    length = np.diff(curve.t)
+    length = differences(curve.t)
     if len(length) < 8:
         return 0.0
     least = float(length.min())

@@ -23,6 +23,7 @@ from audit.records import (
 )
 from audit.response.constants import CONSTANTS
 from audit.response.localfit import Array
+from audit.response.order import clamped, differences, median
 from audit.response.shape import turning
 from audit.response.uncertainty import interval
 
@@ -71,12 +72,12 @@ def _noise(before: Array) -> float:
     """Noise of the output from its first differences before the change, output units."""
     if len(before) < 8:
         return 0.0
-    step = np.diff(before)
-    return float(np.sqrt(0.5 * float(np.mean(np.clip(step, *_reach(step)) ** 2))))
+    step = differences(before)
+    return float(np.sqrt(0.5 * float(np.mean(clamped(step, *_reach(step)) ** 2))))
 
 
 def _reach(step: Array) -> tuple[float, float]:
-    robust = 1.4826 * float(np.median(np.abs(step)))
+    robust = 1.4826 * median(np.abs(step))
     reach = 4.0 * robust if robust > 0 else float(np.abs(step).max())
     return -reach, reach
 
@@ -86,8 +87,8 @@ def at_limit_s(output: Output, from_s: float, to_s: float) -> float:
     slack = CONSTANTS.saturated_tolerance * abs(output.high - output.low)
     stuck = (output.u >= output.high - slack) | (output.u <= output.low + slack)
     ends = np.append(output.t[1:], max(to_s, float(output.t[-1])))
-    start = np.clip(output.t, from_s, to_s)
-    stop = np.clip(ends, from_s, to_s)
+    start = clamped(output.t, from_s, to_s)
+    stop = clamped(ends, from_s, to_s)
     until = stuck if output.hold else stuck & np.append(stuck[1:], stuck[-1])
     return float((stop - start) @ until)
 
@@ -124,7 +125,7 @@ def _inside(output: Output, window_s: float) -> Array:
 
 def _travel(turns: Array, sd: float) -> Measured:
     """Total variation of the swings beyond noise, output units."""
-    swings = np.abs(np.diff(turns))
+    swings = np.abs(differences(turns))
     net = abs(float(turns[-1] - turns[0]))
     doubt = sd * np.sqrt(2.0 * max(len(swings), 1))
     return interval(float(swings.sum()), float(doubt), "direct", max(net - 4.0 * sd, 0.0))
@@ -147,8 +148,8 @@ def _overshoot(turns: Array, output: Output, window_s: float) -> Measured:
     if len(before) == 0:
         return Measured.missing(Reason.GAP)
     held = output.u[output.t <= window_s]
-    start = float(np.median(before))
-    end = float(np.median(tail)) if len(tail) else float(held[-1])
+    start = median(before)
+    end = float(median(tail)) if len(tail) else float(held[-1])
     net = end - start
     spread = max(output.sd, 0.25 * float(np.ptp(tail)) if len(tail) else 0.0)
     u_level = spread / np.sqrt(max(min(len(before), len(tail)), 1))

@@ -23,6 +23,7 @@ from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.levels import Level
 from audit.response.noise import Noise
+from audit.response.order import differences
 from audit.response.shape import boxcar
 
 SETTLING = (
@@ -108,7 +109,7 @@ def in_transient(curve: Curve, noise: Noise, rise_s: float, until_s: float) -> b
     """
     if curve.hold or noise.deadband > 0 or len(curve.t) < 3:
         return False
-    length = np.diff(curve.t)
+    length = differences(curve.t)
     regular = float(np.mean(length < 1.5 * curve.step_s)) > 0.9
     least = max(0.5 * rise_s, (3.0 if regular else 10.0) * curve.step_s)
     inside = (curve.t[1:] > 0) & (curve.t[:-1] < until_s)
@@ -176,7 +177,7 @@ def _swing(curve: Curve, lo: float, hi: float) -> tuple[float, float | None, boo
     sustained = second > 0.6 * first
     if len(cross) < 3:
         return amplitude, None, False, sustained
-    apart = np.diff(cross)
+    apart = differences(cross)
     period = 2.0 * float(apart.mean())
     sd = float(apart.std())
     count = len(cross) >= CONSTANTS.oscillation_crossings

@@ -16,6 +16,7 @@ from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.localfit import Array, Fit, fit
 from audit.response.noise import Noise, value_sd
+from audit.response.order import clamped, differences
 
 SLOPE_OF_VALUE = 1.31
 """sd of a fitted slope x half-width / sd of the fitted value, Epanechnikov weights, quadratic."""
@@ -156,10 +157,10 @@ def crossings(
         left = np.array([reach, half])
         right = np.array([max(half, 3.2 * step), half])
         found = fit(curve.ft, x, place, left, right)
-        place = place + np.clip(_root(found, level), -0.5 * half, 0.5 * half)
+        place = place + clamped(_root(found, level), -0.5 * half, 0.5 * half)
         place = np.maximum(place, 0.0)
     found = fit(curve.ft, x, place, left, right)
-    place = np.maximum(place + np.clip(_root(found, level), -half, half), 0.0)
+    place = np.maximum(place + clamped(_root(found, level), -half, half), 0.0)
     sd = value_sd(found, noise, curve)
     least = 0.1 / max(t90 - t10, 1e-9)
     slope = np.maximum(found.slope, least)
@@ -181,7 +182,7 @@ def turning(x: Array, threshold: float) -> NDArray[np.int64]:
 
     Small swings go first, each with both its ends (as in rainflow counting, ASTM E1049).
     """
-    step = np.diff(x)
+    step = differences(x)
     moving = np.flatnonzero(step != 0)
     if len(moving) == 0:
         return np.array([0], np.int64)
@@ -189,7 +190,7 @@ def turning(x: Array, threshold: float) -> NDArray[np.int64]:
     flips = np.flatnonzero(sign[1:] != sign[:-1])
     keep = np.concatenate([[0], moving[flips + 1], [len(x) - 1]]).astype(np.int64)
     while len(keep) > 2:
-        swing = np.abs(np.diff(x[keep]))
+        swing = np.abs(differences(x[keep]))
         wall = np.concatenate([[np.inf], swing, [np.inf]])
         small = (swing < threshold) & (swing <= wall[:-2]) & (swing < wall[2:])
         if not bool(small.any()):
@@ -232,7 +233,7 @@ def _extremes(
     The top of a fitted parabola is too far out by var(slope) / (4 |curvature|) on the average: the
     place was chosen for being far out. That much is taken off.
     """
-    apart = np.diff(place)
+    apart = differences(place)
     near = np.minimum(apart[:-1], apart[1:])
     wide = min(CONSTANTS.eta_peak * half, max(CONSTANTS.eta_peak_cap * rise_s, half))
     reach = np.minimum(wide, np.maximum(0.45 * near, CONSTANTS.least_half_samples * curve.step_s))
@@ -241,8 +242,8 @@ def _extremes(
     for _ in range(3):
         found = fit(curve.ft, x, when, reach, reach)
         bend = np.where(np.abs(found.curvature) > 1e-12, found.curvature, 1e-12)
-        move = np.clip(-found.slope / (2.0 * bend), -0.5 * reach, 0.5 * reach)
-        when = np.clip(when + move, 0.0, curve.window_s)
+        move = clamped(-found.slope / (2.0 * bend), -0.5 * reach, 0.5 * reach)
+        when = clamped(when + move, 0.0, curve.window_s)
         if bool((np.abs(move) < 0.2 * reach).all()):
             break
     found = fit(curve.ft, x, when, reach, reach)
@@ -253,8 +254,8 @@ def _extremes(
     value = found.value + outward
     near = np.maximum(CONSTANTS.eta_when * reach, CONSTANTS.least_half_samples * curve.step_s)
     found = fit(curve.ft, x, when, near, near)
-    move = np.clip(-found.slope / np.copysign(bend, found.curvature), -0.5 * near, 0.5 * near)
-    when = np.clip(when + move, 0.0, curve.window_s)
+    move = clamped(-found.slope / np.copysign(bend, found.curvature), -0.5 * near, 0.5 * near)
+    when = clamped(when + move, 0.0, curve.window_s)
     when_u = SLOPE_OF_VALUE * value_sd(found, noise, curve) / near / bend
     when_u = np.hypot(when_u, CONSTANTS.skew * near**2 / rise_s)
     return when, value, sd, np.minimum(when_u, reach)
