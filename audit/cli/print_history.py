@@ -176,13 +176,10 @@ def _baseline(found: Json, unit: str) -> str:
 
 
 def _changed(found: Json, zone: ZoneInfo) -> Text:
+    """The estimated date; its range stands in the reasons."""
     if not found["changed"]:
         return Text("no")
-    span = ""
-    if found["since_low"] and found["since_high"]:
-        low, high = local_day(found["since_low"], zone), local_day(found["since_high"], zone)
-        span = "" if low == high else f" ({low} to {high})"
-    return Text(f"about {local_day(found['since'], zone)}{span}", style="bold red")
+    return Text(f"about {local_day(found['since'], zone)}", style="bold red")
 
 
 def _print_days(console: Console, days: list[Json]) -> None:
