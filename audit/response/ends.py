@@ -12,7 +12,7 @@ import numpy as np
 from audit.records import ChangeKind, MeasureSettings, SetpointChange
 from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
-from audit.response.levels import Level, before, final, level
+from audit.response.levels import Level, final, leads, least_uncertain, level
 from audit.response.localfit import Array
 from audit.response.noise import Noise
 from audit.response.settling import Settled, coarse
@@ -60,7 +60,8 @@ def find(
     curve: Curve, noise: Noise, change: SetpointChange, settings: MeasureSettings
 ) -> Ends | None:
     """The ends of a response; None where there is no sample to take y0 from."""
-    y0 = before(curve, noise)
+    stretches = leads(curve, noise)
+    y0 = least_uncertain(stretches)
     if y0 is None:
         return None
     end = curve.window_s
@@ -77,7 +78,7 @@ def find(
     origin = (change.moves[-1][0] - change.at_us) / 1e6 if change.moves else 0.0
     rise, stay = _stay(curve, noise, y0.value, tail.value, origin)
     swing_s = SWING_RISES * rise
-    y0 = before(curve, noise, swing_s) or y0
+    y0 = least_uncertain(stretches, swing_s) or y0
     from_s = stay.entry_s or origin
     found = final(curve, noise, from_s, stay.until_s, swing_s)
     if found is None or not (stay.entry_s is not None or _near(found, y0)):

@@ -41,54 +41,77 @@ class Level:
     samples: int
 
 
-def before(curve: Curve, noise: Noise, least_s: float = 0.0) -> Level | None:
-    """The level reached at the end of [-before, 0]; None without any sample to take it from.
+@dataclass(frozen=True)
+class Stretch:
+    """A stretch that ends where all do: its length, s, and its level."""
 
-    Of several stretches that end at 0, as ``final``: what moved long before is no matter. A drift
-    beyond chance is followed to its end.
+    length_s: float
+    level: Level
+
+
+def leads(curve: Curve, noise: Noise) -> list[Stretch]:
+    """Stretches of [-before, 0] that end at 0, the longest first; none without any sample.
+
+    The level of each is the one reached at its end: a drift beyond chance is followed to it.
     """
-    found = _least_uncertain(curve, noise, -curve.before_s, 0.0, LEADS, least_s)
-    return None if found is None else replace(found, value=found.value + 0.5 * found.drift)
+    found = _stretches(curve, noise, -curve.before_s, 0.0, LEADS)
+    return [
+        replace(one, level=replace(one.level, value=one.level.value + 0.5 * one.level.drift))
+        if one.level.drift
+        else one
+        for one in found
+    ]
 
 
 def final(
     curve: Curve, noise: Noise, from_s: float, end_s: float, least_s: float = 0.0
 ) -> Level | None:
-    """The level at the end of from_s..end_s: of several final stretches the least uncertain."""
-    return _least_uncertain(curve, noise, from_s, end_s, TAILS, least_s)
+    """The level at the end of from_s..end_s; None without any sample to take it from."""
+    return least_uncertain(_stretches(curve, noise, from_s, end_s, TAILS), least_s)
 
 
-def _least_uncertain(
+def least_uncertain(stretches: list[Stretch], least_s: float = 0.0) -> Level | None:
+    """Of several stretches with one end the level with the least uncertainty.
+
+    What moved long before is no matter then. None shorter than ``least_s`` but the longest, so
+    that a swing is not taken for a level where it turns.
+    """
+    best: Level | None = None
+    for stretch in stretches:
+        found = stretch.level
+        if best is None:
+            best = found
+        elif stretch.length_s >= least_s and found.samples >= CONSTANTS.dwell_samples:
+            best = found if found.u < 0.98 * best.u else best
+    return best
+
+
+def _stretches(
     curve: Curve,
     noise: Noise,
     from_s: float,
     end_s: float,
     tried: tuple[tuple[float, float], ...],
-    least_s: float,
-) -> Level | None:
-    """Of the stretches that are these shares of from_s..end_s the one with the least uncertainty.
-
-    None shorter than ``least_s`` but the longest, so that a swing is not taken for a level where
-    it turns.
-    """
-    upto = curve.t <= end_s
-    if not bool(upto.any()):
-        return None
-    t, v = curve.t[upto], curve.v[upto]
-    best: Level | None = None
+) -> list[Stretch]:
+    """The stretches that are these shares of from_s..end_s, what drifts ahead in their u."""
+    upto = int(curve.t.searchsorted(end_s, "right"))
+    if upto == 0:
+        return []
+    t, v = curve.t[:upto], curve.v[:upto]
+    stretches = []
     for share, ahead in tried:
         length = share * (end_s - from_s)
-        if best is not None and length < least_s:
-            break
         found = level(t, v, end_s - length, end_s, curve.hold, noise)
-        found = replace(found, u=float(np.hypot(found.u, ahead * found.drift)))
-        enough = found.samples >= CONSTANTS.dwell_samples or best is None
-        if enough and (best is None or found.u < 0.98 * best.u):
-            best = found
-    return best
+        if found.drift:
+            found = replace(found, u=float(np.hypot(found.u, ahead * found.drift)))
+        stretches.append(Stretch(length, found))
+    return stretches
 
 
 def level(t: Array, v: Array, lo: float, hi: float, hold: bool, noise: Noise) -> Level:
+    """The level of t, v [n] over lo..hi."""
+    first = max(int(t.searchsorted(lo, "right")) - 1, 0)
+    t, v = t[first:], v[first:]
     weight = _durations(t, lo, hi, hold)
     used = weight > 0
     if not bool(used.any()):

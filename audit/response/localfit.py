@@ -28,6 +28,12 @@ class Fit:
     first: NDArray[np.int64]
     weights: Array
 
+    def row(self, place: int) -> Fit:
+        """The fit at one place alone."""
+        one = slice(place, place + 1)
+        value, slope, curvature = self.value[one], self.slope[one], self.curvature[one]
+        return Fit(value, slope, curvature, self.first[one], self.weights[one])
+
 
 def _windows(
     t: Array, at: Array, left: Array, right: Array

@@ -211,10 +211,9 @@ def smooth(curve: Curve, x: Array, noise: Noise, end_s: float, half: float, rise
         grid = np.linspace(0.0, end_s, CONSTANTS.grid_points)
     width = np.full(len(grid), half)
     start = np.maximum(np.minimum(grid, half), 0.6 * curve.step_s)
-    values = fit(curve.ft, x, grid, start, width).value
-    middle = grid[[len(grid) // 2]]
-    sample = fit(curve.ft, x, middle, width[:1], width[:1])
-    sd = float(value_sd(sample, noise, curve)[0])
+    found = fit(curve.ft, x, grid, start, width)
+    values = found.value
+    sd = float(value_sd(found.row(len(grid) // 2), noise, curve)[0])
     turns = turning(values, max(CONSTANTS.turn_sd * sd, 1e-7))
     where, value = grid[turns], values[turns]
     value_u, when_u = np.full(len(turns), sd), np.zeros(len(turns))
