@@ -123,7 +123,7 @@ def test_history_shows_numbers_with_unit_interval_and_outcome(
     printed = " ".join(capsys.readouterr().out.split())
     for text in (
         "rise time 12.3 s (11.9 to 12.8): undecided",
-        "settling time (2 %) longer than 55 s: out of spec (the next move, or the end of the",
+        "settling time (2 %) longer than 55 s: out of spec (the next move came before it",
         "Not counted: not in an automatic mode",
         "50 → 55 m3/h step, window 600 s, usable",
         "2026-03-13 08:00:00",  # 07:00 UTC is 08:00 in Oslo in March

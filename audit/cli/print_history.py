@@ -11,7 +11,7 @@ from rich.text import Text
 from audit import figures
 from audit.cli.moments import local, local_day
 from audit.cli.screen import STYLE, hanging, indented, table
-from audit.records import LIMITED, ChangeKind, Group, Outcome, Quantity, StandingWord
+from audit.records import LIMITED, ChangeKind, Group, Outcome, Quantity, Reason, StandingWord
 from audit.reports import words
 from audit.reports.contract import Json
 from audit.reports.place import order_sentence
@@ -29,7 +29,7 @@ def print_history(console: Console, found: Json, everything: bool = False) -> No
     _print_standing(console, found["standing"], loop["eu"])
     _print_trend(console, found["standing"], loop["eu"], zone)
     _print_days(console, found["days"] if everything else found["days"][-NEWEST_DAYS:])
-    _print_steps(console, found["steps"], loop["eu"], zone, everything)
+    _print_steps(console, found["steps"], loop, zone, everything)
     console.print()
     for caution in words.CAUTIONS:
         console.print(Text(caution, style="italic"))
@@ -200,19 +200,20 @@ def _print_days(console: Console, days: list[Json]) -> None:
 
 
 def _print_steps(
-    console: Console, steps: list[Json], eu: str, zone: ZoneInfo, everything: bool
+    console: Console, steps: list[Json], loop: Json, zone: ZoneInfo, everything: bool
 ) -> None:
     shown = list(reversed(steps))
     if not everything:
         shown = shown[:NEWEST_STEPS]
     _heading(console, f"Setpoint changes, newest first ({len(shown)} of {len(steps)})")
     for step in shown:
-        _print_step(console, step, eu, zone)
+        _print_step(console, step, loop, zone)
     if len(shown) < len(steps):
         console.print("Older ones: --all, or --since and --until.")
 
 
-def _print_step(console: Console, step: Json, eu: str, zone: ZoneInfo) -> None:
+def _print_step(console: Console, step: Json, loop: Json, zone: ZoneInfo) -> None:
+    eu = loop["eu"]
     before, after = figures.pair(step["sp_from"], step["sp_to"])
     kind = words.KIND[ChangeKind(step["kind"])]
     use = "usable" if step["usable"] else "set aside"
@@ -220,15 +221,22 @@ def _print_step(console: Console, step: Json, eu: str, zone: ZoneInfo) -> None:
         f"{local(step['at'], zone, seconds=True)}  {before} → {figures.with_unit(after, eu)}  "
         f"{kind}, window {figures.plain(round(step['window_s'], 1))} s, {use}"
     )
-    change = ChangeKind(step["kind"])
     if step["set_aside"]:
-        why = "; ".join(words.reason_of(code, change) for code in step["set_aside"])
+        why = "; ".join(_why(code, step, loop) for code in step["set_aside"])
         console.print(indented(f"Not counted: {why}.", 2))
     judged = [q.value for q in LIMITED if q.value in step["verdicts"]]
     if step["usable"] and judged:
-        parts = [_judged(code, step, eu) for code in judged if _is_known(step, code)]
-        parts += [Text(text) for text in _missing(judged, step, change)]
+        parts = [_judged(code, step, loop) for code in judged if _is_known(step, code)]
+        parts += [Text(text) for text in _missing(judged, step, loop)]
         console.print(indented(Text("; ").join(parts), 2))
+
+
+def _why(code: str, step: Json, loop: Json) -> str:
+    """A reason's words for one change: of what was cut, what cut it."""
+    if code == Reason.CUT_SHORT.value:
+        whole = step["window_s"] >= loop["after_s"]
+        return f"{'the window ended' if whole else 'the next move came'} before it settled"
+    return words.reason_of(code, ChangeKind(step["kind"]))
 
 
 def _is_known(step: Json, code: str) -> bool:
@@ -236,7 +244,7 @@ def _is_known(step: Json, code: str) -> bool:
     return any(measured[key] is not None for key in ("value", "low", "high"))
 
 
-def _judged(code: str, step: Json, eu: str) -> Text:
+def _judged(code: str, step: Json, loop: Json) -> Text:
     """One limited quantity of one step: value, interval, outcome, and why it is only a bound."""
     measured, verdict = step["measured"][code], step["verdicts"][code]
     outcome = Outcome(verdict["outcome"])
@@ -244,23 +252,23 @@ def _judged(code: str, step: Json, eu: str) -> Text:
         measured["value"],
         measured["low"],
         measured["high"],
-        _unit(code, eu),
+        _unit(code, loop["eu"]),
         limit=verdict["limit"],
     )
     why = verdict["why"] or measured["why"]
     text = Text(f"{words.name_of(code, step['settling_band_pct'])} {value}: ")
     text.append(words.OUTCOME[outcome], STYLE[outcome.value])
     if why and outcome is not Outcome.IN_SPEC:
-        text.append(f" ({words.reason_of(why)})")
+        text.append(f" ({_why(why, step, loop)})")
     return text
 
 
-def _missing(judged: Sequence[str], step: Json, change: ChangeKind) -> list[str]:
+def _missing(judged: Sequence[str], step: Json, loop: Json) -> list[str]:
     """The quantities without a number, those with the same reason together."""
     by_why: dict[str, list[str]] = {}
     for code in judged:
         if not _is_known(step, code):
             why = step["verdicts"][code]["why"] or step["measured"][code]["why"]
-            names = by_why.setdefault(words.reason_of(why, change), [])
+            names = by_why.setdefault(_why(why, step, loop), [])
             names.append(words.name_of(code, step["settling_band_pct"]))
     return [f"{', '.join(names)}: {why}" for why, names in by_why.items()]
