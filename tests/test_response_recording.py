@@ -18,7 +18,7 @@ from audit.records import (
     Role,
     Samples,
 )
-from audit.response import measure
+from audit.response import measure, order
 from reference import second_order, steps
 
 SHAPE = (Quantity.RISE_TIME, Quantity.OVERSHOOT, Quantity.SETTLING_TIME_5PCT)
@@ -226,6 +226,15 @@ def test_a_level_reported_long_ago_and_held_is_no_sparse_sampling(first_s: float
     for quantity, truth in exact(0.5).items():
         assert measured[quantity].value == pytest.approx(truth, rel=0.02), quantity
         assert holds(measured[quantity], truth), quantity
+
+
+@pytest.mark.parametrize("count", [1, 2, 3, 4, 5, 8, 31])
+def test_order_statistics_are_numpys(count: int) -> None:
+    x = np.random.default_rng(count).standard_normal(count)
+    assert order.median(x) == np.median(x)
+    assert order.lower_quartile(x) == np.quantile(x, 0.25, method="lower")
+    for share in (0.05, 0.25, 0.9):
+        assert order.quantile(x, share) == pytest.approx(np.quantile(x, share), rel=1e-14)
 
 
 def rough(seed: int) -> steps.Made:

@@ -30,6 +30,7 @@ from audit.response.ends import Ends
 from audit.response.integral import absolute_error
 from audit.response.noise import Noise
 from audit.response.uncertainty import interval, seed
+from audit.response.view import View
 
 LEAST_SAMPLES = 5
 
@@ -128,7 +129,7 @@ def _shape(
         return dict.fromkeys(screening.SHAPE, Measured.missing(Reason.DISTURBED))
     x, seen = levels_of.seen_from(curve, noise, ends)
     size = abs(ends.size)
-    view = transient.View(
+    view = View(
         curve=curve,
         x=x,
         noise=seen,

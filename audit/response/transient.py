@@ -5,17 +5,14 @@ In: the curve seen as x, its noise, its ends. Out: ``Measured`` by quantity, not
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 
 from audit.records import Measured, MeasureSettings, Quantity, Reason
 from audit.response import settling
 from audit.response.constants import CONSTANTS
-from audit.response.curve import Curve
 from audit.response.ends import Ends
-from audit.response.localfit import Array
-from audit.response.noise import Noise, scan_s
 from audit.response.screening import PEAKS, SETTLING, SHAPE
 from audit.response.shape import (
     Crossing,
@@ -26,39 +23,9 @@ from audit.response.shape import (
     samples_a_rise,
     smooth,
 )
+from audit.response.sparse import bounded, why_sparse
 from audit.response.uncertainty import from_draws, interval
-
-
-@dataclass(frozen=True, eq=False)
-class View:
-    """All that the shape is measured from.
-
-    ``x`` of each point of ``curve.ft``; ``noise`` in the same unit; ``u0``, ``u1``: standard
-    uncertainties of the levels in parts of y_end - y0; ``rate``: drift before the change, per s;
-    ``stamp_u`` of t0, s; ``end_s``: what is looked at ends there; ``has_level``: y_end is its own;
-    ``cut``: why nothing is known after the window.
-    """
-
-    curve: Curve
-    x: Array
-    noise: Noise
-    u0: float
-    u1: float
-    rate: float
-    stamp_u: float
-    end_s: float
-    has_level: bool
-    how: str
-    cut: Reason
-    seed: int
-
-    @property
-    def level_u(self) -> float:
-        return float(np.hypot(self.u1, self.u0))
-
-    def carried_u(self, t: float) -> float:
-        """Of x at t: a drift before the change that went on, or did not (uniform, JCGM 100)."""
-        return self.rate * t / float(np.sqrt(3.0))
+from audit.response.view import View
 
 
 def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Measured]:
@@ -80,7 +47,7 @@ def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Me
     until = view.end_s if entry is None else min(entry, view.end_s)
     found |= _settlings(view, path, settings, until)
     if sparse:
-        found |= _sparse(view, found, count, _why_sparse(view, rise))
+        found |= bounded(view, found, count, why_sparse(view, rise))
     if view.noise.deadband > 1.1 * CONSTANTS.compressed_share:
         found |= dict.fromkeys(SHAPE, Measured.missing(Reason.COMPRESSED))
     return found
@@ -249,45 +216,3 @@ def _settling(view: View, path: Path, draws: settling.Draws, band: float) -> Mea
     dwell = CONSTANTS.dwell_samples * view.curve.step_s
     values, known, swing = settling.settle(path, draws, band, view.end_s, dwell)
     return from_draws(values, known, swing, view.end_s, view.how, view.cut)
-
-
-def _why_sparse(view: View, rise_s: float) -> Reason:
-    """Thinned out by an archive where its scan would have been enough, else never sampled."""
-    scan = scan_s(view.curve)
-    enough = scan > 0 and rise_s >= CONSTANTS.sparse_rise * scan
-    return Reason.COMPRESSED if enough else Reason.TOO_SPARSE
-
-
-def _sparse(
-    view: View, found: dict[Quantity, Measured], count: float, why: Reason
-) -> dict[Quantity, Measured]:
-    """Fewer than four samples a rise: the rise time is bounded, the shape between is unknown.
-
-    A peak is broader than the rise: it is still seen with fewer.
-    """
-    curve = view.curve
-    margin = CONSTANTS.cover_z * float(np.hypot(view.noise.total, view.level_u))
-    real = np.isin(curve.ft, curve.t) & (curve.ft <= curve.window_s)
-    low, high = _rise_bounds(curve.ft[real], view.x[real], margin)
-    seen = count >= CONSTANTS.sparse_peak and why is Reason.TOO_SPARSE
-    kept: tuple[Quantity, ...] = PEAKS if seen else ()
-    kept += tuple(q for q in SETTLING if (found[q].value or np.inf) >= 10.0 * curve.step_s)
-    lost = {q: Measured.missing(why) for q in SHAPE if q not in kept}
-    return lost | {Quantity.RISE_TIME: Measured(low=low, high=high, how=view.how, why=why)}
-
-
-def _rise_bounds(t: Array, x: Array, margin: float) -> tuple[float, float]:
-    """Least and greatest rise time, s, that the samples allow.
-
-    At most from the last sample surely below 10 % to the first surely above 90 %, at least from the
-    first surely above 10 % after it to the last surely below 90 % before it.
-    """
-    above = np.flatnonzero((t > 0) & (x >= 0.9 + margin))
-    stop = int(above[0]) if len(above) else len(t) - 1
-    sure = np.flatnonzero(x[: stop + 1] <= 0.1 - margin)
-    start = int(sure[-1]) if len(sure) else max(int(np.searchsorted(t, 0.0)) - 1, 0)
-    between = np.arange(start + 1, stop)
-    begun = between[x[between] >= 0.1 + margin]
-    short = between[x[between] <= 0.9 - margin]
-    least = float(t[short[-1]] - t[begun[0]]) if len(begun) and len(short) else 0.0
-    return max(least, 0.0), float(t[stop]) - max(float(t[start]), 0.0)
