@@ -16,7 +16,7 @@ from dataclasses import dataclass, field, replace
 from datetime import date, datetime, timedelta
 
 from audit import feed, intake
-from audit.errors import ExportRefused, Fault
+from audit.errors import AuditError, ExportRefused, Fault
 from audit.gather import LoopContext, loop_work, standing_works
 from audit.loopwork import LoopWork, audit_loop
 from audit.ranking import order
@@ -62,8 +62,9 @@ def run(
     ``nights``: first and last night (inclusive) to publish a list for; None: the first cut-off
     after the newest good stamp. ``accept_older``: take site files the store has seen replaced.
     Raises StoreUnready where the store is not at this program's schema, belongs to another site or
-    is held by another audit.
+    is held by another audit; AuditError for a night that has not begun.
     """
+    _check_begun(site, nights, now)
     store.require_current()
     with take_lease(store, _holder()) as lease, workers(cores) as pool:
         audit = _Run(site, store, lease, pool, now, progress or _silent)
@@ -74,6 +75,15 @@ def run(
             asked = now if nights is None else min(now, site.config.cutoff(published[-1]))
             audit.tally.quiet = _quiet(audit, asked, published[-1])
         return audit.tally.report()
+
+
+def _check_begun(site: Site, nights: tuple[date, date] | None, now: datetime) -> None:
+    """A list of a later night would stand as the newest, over every true one to come."""
+    newest = site.config.night_after(now)
+    if nights is not None and nights[1] > newest:
+        raise AuditError(
+            f"the night {nights[1]} has not begun", f"the newest that can be ranked is {newest}"
+        )
 
 
 def _holder() -> str:

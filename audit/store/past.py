@@ -72,16 +72,26 @@ def edges(s: Session, tag: str) -> list[tuple[int, str]]:
 
 
 def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record]:
-    """The kept edges of a loop next to a span, however far: the last before, two after it.
+    """The kept slices of a loop next to a span, however far.
 
-    Two, because the first setpoint sample of a covered span can have an edge of its own.
+    Edges: the last before, two after it, because the first setpoint sample of a covered span can
+    have one of its own. Steps: the last before and the first after it, because a span may begin or
+    end in the middle of what was taken, where the last step knows what the setpoint holds.
     """
     of_loop = select(EdgeRow.data).where(EdgeRow.loop_id == _loop_id(tag))
     before = of_loop.where(EdgeRow.side == "to", EdgeRow.border_us < from_us)
     after = of_loop.where(EdgeRow.side == "from", EdgeRow.border_us > to_us)
+    steps = (
+        select(CurveRow.data)
+        .join_from(CurveRow, MeasurementRow, _SAME_CURVE)
+        .where(MeasurementRow.loop_id == _loop_id(tag), _CURRENT)
+    )
+    at_us = MeasurementRow.at_us
     found = [
         *s.scalars(before.order_by(EdgeRow.border_us.desc()).limit(1)),
         *s.scalars(after.order_by(EdgeRow.border_us).limit(2)),
+        *s.scalars(steps.where(at_us < from_us).order_by(at_us.desc()).limit(1)),
+        *s.scalars(steps.where(at_us > to_us).order_by(at_us).limit(1)),
     ]
     return [decode(data) for data in found]
 

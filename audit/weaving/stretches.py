@@ -123,23 +123,21 @@ def _all_known(stamps: Sequence[int | None]) -> list[int] | None:
 
 
 def edges(record: Record, spans: Iterable[Span], windows: Windows) -> list[Edge]:
-    """The slices to keep at both borders of each newly covered span.
+    """The slices to keep at both borders of each newly covered span, each border once.
 
     Where the first setpoint sample of a span lies further in than a change can reach, its own slice
     is kept too: an earlier export may show it to be a move.
     """
     reach_us = windows.reach_us
     sp_us = record.of(Role.SP).only_good().t_us
-    kept: list[Edge] = []
+    spans = list(spans)
+    kept: dict[tuple[int, str], Record] = {}
+    for start, end in spans:  # those of several tags may share a border
+        kept[start, "from"] = record.around(start, start + reach_us)
+        kept[end, "to"] = record.around(end - reach_us, end)
     for start, end in spans:
-        kept.append(Edge(start, "from", record.around(start, start + reach_us)))
-        kept.append(Edge(end, "to", record.around(end - reach_us, end)))
         first = int(np.searchsorted(sp_us, start))
         if first < len(sp_us) and start + windows.before_us < sp_us[first] <= end:
-            kept.append(_around_setpoint(record, int(sp_us[first]), windows))
-    return kept
-
-
-def _around_setpoint(record: Record, at_us: int, windows: Windows) -> Edge:
-    slice_ = record.around(at_us - windows.reach_us, at_us + windows.reach_us)
-    return Edge(at_us, "from", slice_)
+            at_us = int(sp_us[first])  # holds what a border at the same instant needs
+            kept[at_us, "from"] = record.around(at_us - reach_us, at_us + reach_us)
+    return [Edge(border_us, side, slice_) for (border_us, side), slice_ in kept.items()]
