@@ -34,7 +34,8 @@ def test_parquet_cells_of_odd_types(tmp_path: Path) -> None:
 
 def test_one_bad_cell_costs_one_cell(tmp_path: Path) -> None:
     cells = ["x", "1,5", "NaN", "inf", "-Infinity", "1_000", "0x10", "1e999", "٣", "1 000", "--1"]
-    good = ["1", " 2 ", "+3", "4.", ".5", "-6e-1", "0007", "1e-400", "1.7976931348623157e308"]
+    cells += ["1.7976931348623157e308", "-3.4028235e38"]  # fill values: the largest of IEEE 754
+    good = ["1", " 2 ", "+3", "4.", ".5", "-6e-1", "0007", "1e-400", "-1e30"]
     lines = [
         f'2026-03-14T08:00:{second:02}Z,"{cell}",1'
         for second, cell in enumerate([*cells, *good, " ", ""])

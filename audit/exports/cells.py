@@ -1,7 +1,8 @@
 """Cells of one column come in as an Arrow array, numbers or texts go out, each cell told apart.
 
-Text is parsed to the nearest double. What is no finite decimal number (words, NaN and Inf, a
-thousands separator, another decimal mark than the declared one) costs its cell, never the row.
+Text is parsed to the nearest double. What is no decimal number of up to LARGEST (words, NaN and
+Inf, a historian's fill value such as 3.4e38, a thousands separator, another decimal mark than the
+declared one) costs its cell, never the row.
 """
 
 from __future__ import annotations
@@ -19,6 +20,9 @@ from numpy.typing import NDArray
 _NUMBER = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?$"
 _PLAIN = re.compile(_NUMBER)
 _EXACT = 2.0**53
+
+LARGEST = 1e30
+"""Numbers beyond it are fill values, not readings; keeps what is reckoned with them finite."""
 
 
 class Cell(IntEnum):
@@ -112,7 +116,7 @@ def _valid(column: Any) -> NDArray[np.bool_]:
 def _typed(value: Any, column: Any) -> Cells:
     valid = _valid(column)
     number = pc.fill_null(value, 0.0).to_numpy(zero_copy_only=False)
-    finite = np.isfinite(number)
+    finite = np.isfinite(number) & (np.abs(number) <= LARGEST)
     held = np.where(valid, np.int8(Cell.VALUE), np.int8(Cell.BLANK))
     held[~finite] = Cell.NOT_A_NUMBER
     return Cells(np.where(finite, number, 0.0), held)

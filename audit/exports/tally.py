@@ -39,7 +39,7 @@ REFUSED = {
     ),
     "not_a_number": (
         "no number",
-        "plain numbers with the declared decimal mark and no thousands separator",
+        "plain numbers up to 1e30 with the declared decimal mark and no thousands separator",
     ),
 }
 """Reasons a cell is refused for, each with what is wrong and what would be right."""
