@@ -105,7 +105,8 @@ def _logged(audit: _Run) -> Iterator[None]:
     except BaseException as failure:
         with audit.store.write(audit.lease) as session:
             counts = audit.tally.counts()
-            writes.end_run(session, run_id, audit.clock(), "failed", counts, repr(failure))
+            why = failure.message if isinstance(failure, AuditError) else repr(failure)
+            writes.end_run(session, run_id, audit.clock(), "failed", counts, why)
         raise
     with audit.store.write(audit.lease) as session:
         writes.end_run(session, run_id, audit.clock(), "finished", audit.tally.counts(), None)

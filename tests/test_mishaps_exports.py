@@ -139,3 +139,27 @@ def test_a_type_that_nothing_can_be_made_of_refuses_the_file(
     (file,) = discover(a_source(tmp_path, files="a.csv"))
     with pytest.raises(ExportRefused, match="type that cannot be read"):
         peek(file, a_source(tmp_path))
+
+
+@pytest.mark.parametrize("stray", ["1970-01-01T00:00:00Z", "2000-01-01", "2199-12-31T00:00:00Z"])
+@pytest.mark.parametrize("layout", ["wide", "narrow"])
+def test_a_clock_that_was_reset_does_not_stretch_a_file_over_years(
+    stray: str, layout: str, tmp_path: Path
+) -> None:
+    head = "timestamp,FIC-1.PV,FIC-1.SP" if layout == "wide" else "timestamp,tag,value"
+    row = "{},1,2" if layout == "wide" else "{},FIC-1.PV,1"
+    stamps = [f"2026-03-14T08:00:{second:02}Z" for second in range(40)]
+    rows = [row.format(stamp) for stamp in [*stamps[:20], stray, *stamps[20:]]]
+    got = read_bytes(tmp_path, "\n".join([head, *rows]), layout=layout)
+    assert (got.first_us, got.last_us) == (START_US, START_US + 39_000_000)
+    assert got.account.refused == {"stray_time": 2 if layout == "wide" else 1}
+    assert got.faults[0].line == 22
+    assert "clock" in got.faults[0].remedy
+
+
+def test_years_apart_in_earnest_are_kept(tmp_path: Path) -> None:
+    for text in (
+        "timestamp,FIC-1.PV\n2019-01-01,1\n2026-03-14,2\n",
+        "timestamp,FIC-1.PV\n" + "".join(f"{year}-03-14,2\n" for year in range(1971, 2026, 2)),
+    ):
+        assert read_bytes(tmp_path, text).account.refused == {}

@@ -28,6 +28,7 @@ from audit.records import SECOND_US, ExportSource
 
 _FIRST = datetime(1970, 1, 1, tzinfo=UTC)
 _LAST_US = int((datetime(2200, 1, 1, tzinfo=UTC) - _FIRST).total_seconds()) * SECOND_US
+_APART_US = 366 * 86_400 * SECOND_US
 _EPOCH_FROM_US = 365 * 86_400 * SECOND_US
 _EPOCH_DIGITS = {"epoch_s": 6, "epoch_ms": 3, "epoch_us": 0, "epoch_ns": -3}
 
@@ -75,6 +76,23 @@ def stamps(column: Any, source: ExportSource, groups: NDArray[np.int64] | None =
     if len(local) == 0:
         return read
     return _bounded(_settled(read, local, ZoneInfo(source.timezone), groups))
+
+
+def strays(us: NDArray[np.int64]) -> NDArray[np.bool_]:
+    """Which of a file's stamps [n] lie more than a year away from the rest of them.
+
+    A controller whose clock was set back to its epoch, or far ahead, writes such stamps. A file
+    covers all of its time, so that a single one would take the place of years of other exports.
+    The rest is at least 19 in 20 of the file; where nothing is, no stamp is astray.
+    """
+    order = np.argsort(us, kind="stable")
+    part = np.zeros(len(us), np.int64)
+    part[order[1:]] = np.cumsum(np.diff(us[order]) > _APART_US)
+    count = np.bincount(part, minlength=1)
+    if count.max() * 20 < 19 * len(us):
+        return np.zeros(len(us), np.bool_)
+    astray: NDArray[np.bool_] = part != count.argmax()
+    return astray
 
 
 def _settled(

@@ -143,12 +143,15 @@ def _timed(
 ) -> Whole:
     """Rows with a stamp; the others' cells are refused, whatever they hold."""
     column = sheet.columns[source.time]
-    for reason, told in _NO_TIME.items():
-        rows = np.flatnonzero(stamps.told == told)
+    refused = {reason: np.flatnonzero(stamps.told == told) for reason, told in _NO_TIME.items()}
+    fine = np.flatnonzero(stamps.told == Told.FINE)
+    stray = clock.strays(stamps.us[fine])
+    refused["stray_time"] = fine[stray]
+    for reason, rows in refused.items():
         tally.refuse(
             reason, rows, lambda row: column[row].as_py(), source.time, cells_each=cells_each
         )
-    return np.flatnonzero(stamps.told == Told.FINE)
+    return fine[~stray]
 
 
 def _tags(column: Any) -> tuple[tuple[str, ...], Whole]:

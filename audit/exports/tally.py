@@ -32,6 +32,10 @@ REFUSED = {
         "the clock change skips this local time",
         "export in UTC, or declare the zone the stamps are in",
     ),
+    "stray_time": (
+        "the time stamp lies more than a year away from the others of the file",
+        "see to the clock of its source; if it is right, export those rows in a file of their own",
+    ),
     "no_tag": ("no tag name", "each row names its tag"),
     "no_such_quality": (
         "no code of the declared quality scheme",

@@ -125,7 +125,7 @@ def connected(engine: Engine, purpose: Purpose) -> Iterator[Connection]:
         raise StoreUnready(
             f"the store {shown(engine.url)} failed: {_reason(error)}",
             "what was not finished was not kept; see that there is room on the disk and that this "
-            f"user may write there, then start again ({_to_open(engine.url)})",
+            "user may write there, then start again",
         ) from error
 
 
