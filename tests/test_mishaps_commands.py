@@ -99,6 +99,15 @@ def test_a_store_without_its_folder_says_so(
     assert f"there is no folder {folder / 'not' / 'there'}" in said
 
 
+def test_what_is_no_store_is_said_to_be_none(
+    folder: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setenv("LOOPASSAY_STORE_URL", "sqlite:///loops.csv")
+    assert "name another one" in wrong(capsys, "rank", "--config", folder)
+    monkeypatch.setenv("LOOPASSAY_STORE_URL", "sqlite:///exports")
+    assert "see that it is a file" in wrong(capsys, "rank", "--config", folder)
+
+
 def test_a_full_disk_is_said_and_keeps_what_was_there(tmp_path: Path) -> None:
     with open_store(f"sqlite:///{tmp_path / 'site.db'}") as store:
         store.upgrade()
@@ -110,7 +119,7 @@ def test_a_full_disk_is_said_and_keeps_what_was_there(tmp_path: Path) -> None:
 
         event.listen(store._engine, "connect", small)
         with (
-            pytest.raises(StoreUnready, match=r"full.*room on the disk"),
+            pytest.raises(StoreUnready, match=r"full.*make room on the disk"),
             take_lease(store, "a") as lease,
             store.write(lease) as session,
         ):

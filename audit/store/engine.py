@@ -111,7 +111,7 @@ def connected(engine: Engine, purpose: Purpose) -> Iterator[Connection]:
     except DBAPIError as error:
         raise StoreUnready(
             f"the store {shown(engine.url)} cannot be opened: {_reason(error)}",
-            _to_open(engine.url),
+            _remedy(error, engine.url),
         ) from error
     try:
         with connection:
@@ -124,8 +124,7 @@ def connected(engine: Engine, purpose: Purpose) -> Iterator[Connection]:
             raise  # a statement of ours is wrong
         raise StoreUnready(
             f"the store {shown(engine.url)} failed: {_reason(error)}",
-            "what was not finished was not kept; see that there is room on the disk and that this "
-            "user may write there, then start again",
+            f"what was not finished was not kept; {_remedy(error, engine.url)}",
         ) from error
 
 
@@ -134,10 +133,24 @@ def _reason(error: DBAPIError) -> str:
     return " ".join(str(error.orig).split())
 
 
-def _to_open(url: URL) -> str:
+_REMEDIES = {
+    "not a database": "the file is none that SQLite made: name another one",
+    "malformed": "the file is damaged: put the last copy of it in its place",
+    "full": "make room on the disk, then start again",
+    "I/O error": "see that there is room on the disk and that it is sound, then start again",
+    "readonly": "SQLite keeps a log beside the file: reading too needs the right to write in its "
+    "folder, and an audit the right to write the file",
+    "unable to open": "see that it is a file, and that this user may read and write it and its "
+    "folder",
+}
+"""What helps, by a word of SQLite's message (its result codes, sqlite.org/rescode.html)."""
+
+
+def _remedy(error: DBAPIError, url: URL) -> str:
     file = sqlite_file(url)
     if file is None:
         return "see that the database is there, running, and open to this user"
     if not file.parent.is_dir():
         return f"there is no folder {file.parent}"
-    return "SQLite keeps a log beside the file: reading too needs the right to write in its folder"
+    fitting = (remedy for word, remedy in _REMEDIES.items() if word in str(error.orig))
+    return next(fitting, "start again; if it stays so, report it with this message")
