@@ -16,12 +16,12 @@ from urllib.parse import urlsplit
 from zoneinfo import ZoneInfo
 
 from audit.errors import Fault, FilesWrong
-from audit.localtime import instant, zone_meant, zone_named
 from audit.records import SECOND_US, ExportSource, StandingRule, Windows
-from audit.settings import Section, Sheet, note_unknown
-from audit.sitefile import LONGEST_WINDOW_S, fingerprint, open_file
-from audit.sources import KEYS as EXPORT_KEYS
-from audit.sources import read_sources
+from audit.sitefiles.localtime import instant, zone_meant, zone_named
+from audit.sitefiles.settings import Section, Sheet, note_unknown
+from audit.sitefiles.sources import KEYS as EXPORT_KEYS
+from audit.sitefiles.sources import read_sources
+from audit.sitefiles.text import LONGEST_WINDOW_S, fingerprint, open_file
 
 FILE_NAME = "site.toml"
 STORE_VARIABLE = "LOOPASSAY_STORE_URL"

@@ -13,10 +13,10 @@ from pathlib import Path
 from zoneinfo import ZoneInfo
 
 from audit.errors import Fault, FilesWrong
-from audit.localtime import moment
 from audit.records import LIMITED, SECOND_US, Loop, LoopKind, Quantity, Role, Spec, Windows
-from audit.sitefile import LONGEST_WINDOW_S
-from audit.table import Cells, Columns, Table, read_table
+from audit.sitefiles.localtime import moment
+from audit.sitefiles.table import Cells, Columns, Table, read_table
+from audit.sitefiles.text import LONGEST_WINDOW_S
 
 LOOP_COLUMNS = Columns(
     required=("tag", "pv", "sp"),

@@ -13,9 +13,9 @@ from hypothesis import strategies as st
 
 from audit.config import STORE_VARIABLE, Config, examine, load
 from audit.errors import Fault, FilesWrong
-from audit.localtime import instant
 from audit.records import SECOND_US, Between, Reading, Role, StandingRule, Windows
-from audit.settings import Lines
+from audit.sitefiles.localtime import instant
+from audit.sitefiles.settings import Lines
 
 BARE = """\
 [site]

@@ -23,13 +23,9 @@ MAY_KNOW: dict[str, set[str]] = {
     "evidence": {"records"},
     "figures": set(),
     # a site's own files
-    "sitefile": {"errors"},
-    "localtime": {"sitefile"},
-    "table": {"errors", "sitefile", "localtime"},
-    "settings": {"errors", "sitefile"},
-    "sources": {*VOCABULARY, "sitefile", "localtime", "settings"},
-    "config": {*VOCABULARY, "sitefile", "localtime", "settings", "sources"},
-    "register": {*VOCABULARY, "sitefile", "localtime", "table"},
+    "sitefiles": VOCABULARY,
+    "config": {*VOCABULARY, "sitefiles"},
+    "register": {*VOCABULARY, "sitefiles"},
     "site": {*VOCABULARY, "config", "register"},
     # the rooms on the way of the data: none knows another
     "exports": VOCABULARY,

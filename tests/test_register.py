@@ -15,7 +15,7 @@ from hypothesis import strategies as st
 from audit.errors import Fault, FilesWrong
 from audit.records import SECOND_US, LoopKind, Quantity, Windows
 from audit.register import LOOP_COLUMNS, Register, examine, read
-from audit.table import read_table
+from audit.sitefiles.table import read_table
 
 OSLO = ZoneInfo("Europe/Oslo")
 WINDOWS = Windows(120 * SECOND_US, 3600 * SECOND_US, 60 * SECOND_US)

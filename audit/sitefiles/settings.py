@@ -12,7 +12,7 @@ import tomllib
 from collections.abc import Collection, Mapping, Sequence
 
 from audit.errors import Fault
-from audit.sitefile import SiteFile, meant, nearest
+from audit.sitefiles.text import SiteFile, meant, nearest
 
 Path = tuple[str | int, ...]
 

@@ -12,10 +12,10 @@ from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 
-from audit.localtime import zone_meant, zone_named
 from audit.records import SECOND_US, Between, ExportSource, Reading, Role
-from audit.settings import Section, Sheet, shown
-from audit.sitefile import meant
+from audit.sitefiles.localtime import zone_meant, zone_named
+from audit.sitefiles.settings import Section, Sheet, shown
+from audit.sitefiles.text import meant
 
 KEYS = (
     "name",

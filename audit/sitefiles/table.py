@@ -17,7 +17,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from audit.errors import Fault
-from audit.sitefile import fingerprint, meant, nearest, open_file
+from audit.sitefiles.text import fingerprint, meant, nearest, open_file
 
 LARGEST = 1e30
 """Numbers beyond it are taken for a slip; keeps every difference of two finite."""

@@ -12,7 +12,7 @@ from datetime import UTC, datetime
 from functools import cache
 from zoneinfo import ZoneInfo, available_timezones
 
-from audit.sitefile import nearest
+from audit.sitefiles.text import nearest
 
 _MOMENT = re.compile(
     r"\d{4}-\d{2}-\d{2}(?P<time>[Tt ]\d{2}:\d{2}(:\d{2}(\.\d{1,9})?)?([Zz]|[+-]\d{2}:\d{2})?)?",
