@@ -13,7 +13,9 @@ from scipy.stats import binom
 
 from audit.records import Measured, Quantity, Reason
 from audit.response.curve import Curve
+from audit.response.levels import Level
 from audit.response.noise import Noise
+from audit.response.screening import unsettled
 from audit.response.shape import first_look
 from reference import second_order, steps
 
@@ -139,6 +141,20 @@ def test_noise_that_swings_slowly_is_not_smoothed_away_with_the_rise() -> None:
     curve = Curve(t, x, False, 0.4, 20.0, 60.0, t, x, place, place, np.zeros(len(t)))
     rise_s = first_look(curve, x, Noise(0.03, 0.9, 0.0, 0.0)).rise_s
     assert rise_s == pytest.approx(second_order.rise_time(0.5), rel=0.1)
+
+
+@pytest.mark.parametrize(("noise_sd", "spoils"), [(0.01, True), (0.06, False)])
+def test_motion_of_the_size_of_the_noise_is_no_unsettled_start(
+    noise_sd: float, spoils: bool
+) -> None:
+    """A swing of 5 % before the change spoils in a calm record; noise of 6 % has it in already."""
+    y0 = Level(0.0, 0.02, 0.01, 0.0, 0.0, 0.05, 100)
+    rise = Measured(2.0, 1.0, 3.0, "direct")
+    measured = dict.fromkeys(Quantity, rise)
+    unsettled(measured, y0, noise_sd, 1.0, 5.0, 60.0, 5.0)
+    left = Measured.missing(Reason.UNSETTLED_BEFORE) if spoils else rise
+    assert measured[Quantity.RISE_TIME] == measured[Quantity.SETTLING_TIME] == left
+    assert measured[Quantity.IAE] == rise
 
 
 def test_noise_alone_makes_no_peak() -> None:

@@ -18,7 +18,7 @@ class Constants:
 
     cover_z: float = 1.959964
     """Normal quantile of a 95 % interval with equal tails."""
-    draws: int = 200
+    draws: int = 500
     """Random draws for the settling time's interval."""
     spike_sd: float = 8.0
     spike_share: float = 0.05
@@ -66,6 +66,8 @@ class Constants:
     carried_band: float = 0.5
     """… and a settling time if it would add more than half its band over the settling; less than
     that goes into the intervals."""
+    carried_sd: float = 1.5
+    """Nor does it spoil under so many sd of the noise: that is in the intervals already."""
     near_share: float = 0.05
     """A final level is known without the dwell if its standard uncertainty is under 5 %."""
     least_away: float = 0.05

@@ -206,6 +206,7 @@ def _screen(
     if screening.oscillating(curve, noise):
         screening.spoil(measured, screening.SHAPE, Reason.OSCILLATING)
     if ends.y_end is not None:
-        screening.unsettled(measured, ends.y0, ends.size, entry, curve.window_s, settings.band_pct)
+        found = (ends.y0, noise.sd, ends.size, entry, curve.window_s)
+        screening.unsettled(measured, *found, settings.band_pct)
     if ends.settled.until_s < curve.window_s and ends.answers:
         screening.spoil(measured, (Quantity.IAE,), Reason.DISTURBED)

@@ -141,6 +141,7 @@ def oscillating(curve: Curve, noise: Noise) -> bool:
 def unsettled(
     measured: dict[Quantity, Measured],
     y0: Level,
+    noise_sd: float,
     size: float,
     entry_s: float | None,
     window_s: float,
@@ -149,15 +150,17 @@ def unsettled(
     """Spoil what the motion before the change would add to materially, if it went on.
 
     To the shape: more than 3 % of the change over the rise. To a settling time: more than half its
-    band until it settles. ``size``: y_end - y0; ``entry_s``: coarse settling, None if it did not.
+    band until it settles. Motion of the size of the noise is in the intervals and spoils nothing.
+    ``size``: y_end - y0; ``entry_s``: coarse settling, None if it did not.
     """
+    usual = CONSTANTS.carried_sd * noise_sd
     rise = measured[Quantity.RISE_TIME]
     rise_s = rise.value or rise.high or window_s
-    if np.hypot(y0.rate * rise_s, y0.swing) > CONSTANTS.carried_share * abs(size):
+    if np.hypot(y0.rate * rise_s, y0.swing) > max(CONSTANTS.carried_share * abs(size), usual):
         spoil(measured, SHAPE, Reason.UNSETTLED_BEFORE)
     added = np.hypot(y0.rate * (entry_s or window_s), y0.swing)
     for quantity, band in zip(SETTLING, (band_pct, 2.0, 5.0), strict=True):
-        if added > CONSTANTS.carried_band * band / 100.0 * abs(size):
+        if added > max(CONSTANTS.carried_band * band / 100.0 * abs(size), usual):
             spoil(measured, (quantity,), Reason.UNSETTLED_BEFORE)
 
 
