@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import json
 import os
+import sqlite3
 import subprocess
 import sys
+from contextlib import closing
 from dataclasses import replace
 from datetime import UTC, date, datetime
 from pathlib import Path
@@ -13,10 +15,11 @@ from typing import Any
 
 import pytest
 import stored
+from rich.console import Console
 
 from audit import cli, reports
 from audit.cli import demo as demo_command
-from audit.cli.print_run import exit_code
+from audit.cli.print_run import exit_code, print_report
 from audit.errors import Fault
 from audit.records import CellAccount
 from audit.run_report import RunReport
@@ -174,6 +177,27 @@ def test_store_upgrade_then_status(tmp_path: Path, capsys: pytest.CaptureFixture
     assert "upgraded" in capsys.readouterr().out
     assert run("store", "upgrade", "--config", place) == 0
     assert "already" in capsys.readouterr().out
+
+
+def test_the_status_of_a_newer_store_does_not_send_to_an_upgrade_that_refuses(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    place = stored.lay(tmp_path / "site")
+    assert run("store", "upgrade", "--config", place) == 0
+    with closing(sqlite3.connect(place / "site.db")) as connection, connection:
+        connection.execute("UPDATE alembic_version SET version_num = '9999'")
+    assert run("store", "status", "--config", place) == 0
+    assert "Use the newer program." in capsys.readouterr().out
+    assert run("store", "upgrade", "--config", place) == 2
+
+
+@pytest.mark.parametrize(("withdrawn", "said"), [(12, True), (5, False)])
+def test_an_audit_that_withdraws_more_than_it_finds_says_so(
+    withdrawn: int, said: bool, capsys: pytest.CaptureFixture[str]
+) -> None:
+    report = replace(ALL_WELL, steps_new=4, steps_withdrawn=withdrawn)
+    print_report(Console(), report)
+    assert ("More setpoint changes were withdrawn" in capsys.readouterr().out) == said
 
 
 @pytest.mark.parametrize(

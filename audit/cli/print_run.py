@@ -15,6 +15,14 @@ MOST_REFUSED = 0.01
 
 MOST_FAULTS = 10
 
+MANY_WITHDRAWN = 5
+WITHDRAWN = (
+    "More setpoint changes were withdrawn than found. An export replaces its tags from its first "
+    "to its last stamp, also where it has no samples of them: is there a file in this run with a "
+    "late row, or one cut short?"
+)
+"""Said where more than so many changes, and more than were found, are gone."""
+
 REFUSED, NOTHING_NEW, QUIET = 3, 4, 5
 """Exit codes of an audit that ran."""
 
@@ -66,6 +74,8 @@ def print_report(console: Console, report: RunReport) -> None:
         f"Setpoint changes: {report.steps_new} new, {report.steps_changed} measured again, "
         f"{report.steps_withdrawn} withdrawn."
     )
+    if report.steps_withdrawn > max(MANY_WITHDRAWN, report.steps_new + report.steps_changed):
+        console.print(Text(WITHDRAWN, style="yellow"))
     nights = [night.isoformat() for night in report.nights]
     if nights:
         span = nights[0] if len(nights) == 1 else f"{nights[0]} to {nights[-1]} ({len(nights)})"

@@ -31,9 +31,10 @@ def print_status(console: Console, found: Json, everything: bool = False) -> Non
     schema = found["schema"]
     console.print(f"Store: {found['url']}")
     if schema["current"] != schema["head"]:
+        remedy = "Run `loopassay store upgrade`." if schema["known"] else "Use the newer program."
         console.print(
             f"Schema: {schema['current'] or 'none yet'}, this program needs {schema['head']}. "
-            "Run `loopassay store upgrade`."
+            f"{remedy}"
         )
         return
     console.print(f"Schema: {schema['current']}, current. Site: {found['site'] or 'none yet'}.")

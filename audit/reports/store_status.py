@@ -20,7 +20,10 @@ def status(store: Store) -> Json:
     Where the store has no schema of this program yet, only ``url`` and ``schema`` are there.
     """
     schema = store.schema()
-    head = {"url": store.url, "schema": {"current": schema.current, "head": schema.head}}
+    head = {
+        "url": store.url,
+        "schema": {"current": schema.current, "head": schema.head, "known": schema.known},
+    }
     if schema.current != schema.head:
         return head
     with store.read() as session:
