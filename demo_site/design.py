@@ -168,7 +168,7 @@ def _tuned_level(drafted: Design, loop: PlantLoop, rng: np.random.Generator) -> 
 
 
 QUANTITIES = {
-    "stiction": ("settling_time_s", "overshoot_pct"),
+    "stiction": ("settling_time_s", "overshoot_pct", "unrest_eu"),
     "gain_loss": ("rise_time_s", "settling_time_s"),
     "dead_time": ("overshoot_pct", "settling_time_s", "decay_ratio"),
     "retune_tight": ("overshoot_pct", "settling_time_s", "decay_ratio"),

@@ -48,7 +48,7 @@ LOOPS = [
         since="2026-03-02",
     ),
     row(2, "FIC-2", "never_met", "out_of_spec", "rise_time_out: Rises late."),
-    row(3, "FIC-3", "undecided", "undecided", "a_undecided: Cannot tell.", "restless: No rest."),
+    row(3, "FIC-3", "undecided", "undecided", "a_undecided: Cannot tell.", "few_usable: Too few."),
     row(4, "FIC-4", "in_spec", "in_spec", "in_spec: All met.", "provisional_baseline: Young."),
     row(5, "FIC-5", "in_spec", "in_spec", "in_spec: All met.", "parked_manual: In manual."),
     row(6, "FIC-6", "in_spec", "in_spec", "in_spec: All met."),
@@ -89,7 +89,7 @@ def test_a_loop_that_got_worse_says_so_of_the_quantity_that_put_it_there() -> No
     assert "Too long.\n      Slower to settle.\n" in text
     assert "Too far." not in text
     assert "Slower to rise." not in text
-    assert "Cannot tell.\n      No rest.\n" in text
+    assert "Cannot tell.\n      Too few.\n" in text
 
 
 def test_all_shows_every_reason_once_and_the_order() -> None:

@@ -522,22 +522,6 @@ def test_old_evidence_says_its_age(days_ago: float, said: bool) -> None:
         assert f"change is {int(days_ago)} days old (2026-0" in text(found, "evidence_old")
 
 
-def resting(count: int, half: float, hours_before: float) -> list[PastStep]:
-    measured = {SETTLING: near(50.0), ERROR: near(0.0, half)}
-    return [step(hours_before - at, measured) for at in range(count)]
-
-
-@pytest.mark.parametrize(("half", "said"), [(0.25, False), (0.31, True)])
-def test_a_loop_that_does_not_come_to_rest_any_more_is_named(half: float, said: bool) -> None:
-    """Known to +-0.1 at first; three times that and more is named."""
-    steps = resting(20, 0.1, 24.0 * 60) + resting(10, half, 24.0)
-    found = standing(steps, spec(settling_time_s=60.0))
-    assert ("restless" in codes(found)) is said
-    if said:
-        assert "known to ± 0.31 m3/h, at first to ± 0.1 m3/h" in text(found, "restless")
-    assert "restless" not in codes(standing(steps[-15:], spec(settling_time_s=60.0)))
-
-
 def test_an_inner_loop_says_who_moves_its_setpoint() -> None:
     inner = replace(LOOP, cascade_primary="TIC-9")
     moved = set_aside(9, Reason.TOO_SMALL) + set_aside(3, Reason.NEEDS_MODEL, 40.0)

@@ -9,6 +9,8 @@ import pytest
 from audit.records import Measured, Quantity, Response
 from reference import second_order, steps
 
+IN_EU = (Quantity.IAE, Quantity.STEADY_STATE_ERROR, Quantity.UNREST)
+
 
 def value(response: Response, quantity: Quantity) -> float:
     found = response.measured[quantity].value
@@ -227,7 +229,7 @@ def test_level_and_direction_do_not_matter(levels: tuple[float, float], sd: floa
     for quantity, found in first.measured.items():
         same = other.measured[quantity]
         assert (found.why, found.how) == (same.why, same.how), quantity
-        scale = size if quantity in (Quantity.IAE, Quantity.STEADY_STATE_ERROR) else 1.0
+        scale = size if quantity in IN_EU else 1.0
         there = [v if v is None else v / scale for v in pairs(same)]
         if quantity is Quantity.STEADY_STATE_ERROR and sign < 0:
             flip = [same.value, same.high, same.low]

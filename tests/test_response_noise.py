@@ -181,3 +181,26 @@ def test_the_mean_of_the_noise_is_taken_off_the_iae() -> None:
         assert found is not None
         off.append(found / (5.0 * second_order.absolute_error(0.5)) - 1.0)
     assert abs(np.median(off)) < 0.03
+
+
+@pytest.mark.parametrize("rho", [0.0, 0.5])
+def test_unrest_is_the_standard_deviation_at_rest(rho: float) -> None:
+    """2 % noise of a change of 5 eu is 0.1 eu, and no more than noise before the change.
+
+    The correlation is estimated too, so that at 0.5 somewhat less than 95 in 100 is asked for: the
+    0.1 % point of a binomial of 40 with a coverage of 85 %.
+    """
+    found = [made.measure().measured[Quantity.UNREST] for made in draws(0.7, 0.02, rho)]
+    truth = 0.02 * 5.0
+    assert sum(holds(one, truth) for one in found) >= binom.ppf(0.001, CASES, 0.85)
+    values = [one.value for one in found if one.value is not None]
+    assert np.median(values) == pytest.approx(truth, rel=0.1)
+
+
+def test_a_limit_cycle_is_unrest_of_its_root_mean_square() -> None:
+    """A sine of amplitude A has A / sqrt(2) about its mean (closed form)."""
+    t = steps.stamps(0.1, 60.0, before_s=20.0)
+    y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.7), 0.0)
+    y = y + 0.1 * np.sin(2 * np.pi * t / 5.0)
+    unrest = steps.make(t, y, 60.0, before_s=20.0).measure().measured[Quantity.UNREST]
+    assert unrest.value == pytest.approx(0.1 * 5.0 / np.sqrt(2.0), rel=0.1)

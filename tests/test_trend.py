@@ -484,3 +484,20 @@ def test_two_thousand_steps_are_quick() -> None:
         assess(steps, LOOP, LIMITED)
         took.append(time.perf_counter() - begun)
     assert min(took) < 0.5
+
+
+@pytest.mark.parametrize(("times_larger", "flagged"), [(1.5, False), (2.5, False), (4.0, True)])
+def test_unrest_is_flagged_from_three_times_on(times_larger: float, flagged: bool) -> None:
+    """Three times: common practice, no source."""
+    rng = np.random.default_rng(4)
+    usual = 0.3 * np.exp(0.1 * rng.standard_normal(60))
+    usual[40:] *= times_larger
+    steps = [past(at, unrest_eu=float(one)) for at, one in enumerate(usual)]
+    found = assess(steps, LOOP, ()).quantities[Quantity.UNREST]
+    assert found.changed is flagged
+
+
+def test_unrest_far_inside_the_range_is_calm() -> None:
+    """Ten times as restless, and still under 0.1 % of the range of 100: nothing to anybody."""
+    steps = [past(at, unrest_eu=0.005 if at < 40 else 0.05) for at in range(60)]
+    assert not assess(steps, LOOP, ()).degraded

@@ -104,7 +104,7 @@ def floor_of(quantity: Quantity, loop: Loop, steps: Sequence[PastStep]) -> float
         return OVERSHOOT_FLOOR_PCT
     if quantity is Quantity.DECAY_RATIO:
         return DECAY_FLOOR
-    if quantity not in SIGNED:
+    if quantity not in (*SIGNED, Quantity.UNREST):
         return TIME_FLOOR_S
     if loop.span_eu:
         return ERROR_FLOOR_OF_RANGE * abs(loop.span_eu)

@@ -10,7 +10,6 @@ from audit.evidence import FEWEST_FOR_ORDER, SIGNED, decide
 from audit.ranking.distance import from_baseline, from_limits
 from audit.ranking.limits import Evidence, does_not_answer, measured_in
 from audit.ranking.loop_days import day_reasons, is_parked
-from audit.ranking.rest import restless
 from audit.ranking.seen import none_usable, old_evidence, seen_reasons, unanswered_sentence
 from audit.ranking.sentences import (
     REMEDY,
@@ -73,7 +72,7 @@ def reasons_of(case: Case) -> tuple[ListReason, ...]:
     first = changed + out if case.group is Group.DEGRADING else out + changed
     parked = day_reasons(case.days)
     old = old_evidence(case.evidence, case.cutoff_us, case.zone)
-    sides = restless(case.evidence, case.loop) + seen_reasons(case.evidence, case.loop)
+    sides = seen_reasons(case.evidence, case.loop)
     sides = old + sides + _baseline(case)
     if not case.in_register:
         sides.insert(0, ListReason("not_in_register", "Not in the loop register any more."))

@@ -24,8 +24,10 @@ STEM = {
     Quantity.OVERSHOOT: "overshoot",
     Quantity.DECAY_RATIO: "decay_ratio",
     Quantity.STEADY_STATE_ERROR: "steady_state_error",
+    Quantity.UNREST: "unrest",
 }
 """What the codes of reasons about a quantity begin with."""
+KEEPS_UP = "More noise, or an oscillation such as a sticking valve keeps up."
 SEEN_AS = {
     Reason.TOO_SMALL: "too small",
     Reason.NOT_FOLLOWING: "not in automatic",
@@ -133,10 +135,12 @@ def change_sentence(
         f"{name_of(one.quantity, band_pct)} got worse{_since(one, zone)}: from {was} to {now}"
         f"{_by_how_much(one, unit)}, beyond chance"
     )
-    notes = [note for note in (one.note, "" if limited else "no limit is set on it") if note]
+    unlimited = "" if limited or one.quantity is Quantity.UNREST else "no limit is set on it"
+    notes = [note for note in (one.note, unlimited) if note]
     if one.provisional:
         notes.append(f"baseline provisional, {one.baseline_steps} changes")
-    return f"{text} ({'; '.join(notes)})." if notes else f"{text}."
+    why = f" {KEEPS_UP}" if one.quantity is Quantity.UNREST else ""
+    return f"{text} ({'; '.join(notes)}).{why}" if notes else f"{text}.{why}"
 
 
 def _by_how_much(one: QuantityTrend, unit: str) -> str:
@@ -147,6 +151,8 @@ def _by_how_much(one: QuantityTrend, unit: str) -> str:
     least = "at least " if one.recent is None or one.baseline is None else ""
     if one.quantity in TIMES:
         return f", {least}{_times(now / was)} as long" if was > 0.0 else ""
+    if one.quantity is Quantity.UNREST:
+        return f", {least}{_times(now / was)} as large" if was > 0.0 else ""
     more = "points" if one.quantity is Quantity.OVERSHOOT else unit
     return f", {least}{figures.with_unit(figures.lone(now - was), more)} more"
 
@@ -196,6 +202,6 @@ def unit_of(quantity: Quantity, loop: Loop) -> str:
         return "s"
     if quantity is Quantity.OVERSHOOT:
         return "%"
-    if quantity is Quantity.STEADY_STATE_ERROR:
+    if quantity in (Quantity.STEADY_STATE_ERROR, Quantity.UNREST):
         return loop.eu or "engineering units"
     return ""

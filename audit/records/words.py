@@ -59,6 +59,7 @@ class Quantity(StrEnum):
     NATURAL_FREQUENCY = "natural_frequency_rad_s"
     DAMPED_PERIOD = "damped_period_s"
     IAE = "iae_eu_s"
+    UNREST = "unrest_eu"
     OUTPUT_TRAVEL = "output_travel"
     OUTPUT_OVERSHOOT = "output_overshoot_pct"
     OUTPUT_REVERSALS = "output_reversals"

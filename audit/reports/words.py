@@ -34,6 +34,7 @@ QUANTITY: Mapping[Quantity, Term] = {
     Quantity.NATURAL_FREQUENCY: Term("undamped natural frequency", "rad/s"),
     Quantity.DAMPED_PERIOD: Term("damped period", "s"),
     Quantity.IAE: Term("integral of absolute error", "EU·s"),
+    Quantity.UNREST: Term("unrest", "EU"),
     Quantity.OUTPUT_TRAVEL: Term("controller output travel", "% of output"),
     Quantity.OUTPUT_OVERSHOOT: Term("controller output overshoot", "%"),
     Quantity.OUTPUT_REVERSALS: Term("controller output reversals", ""),
@@ -102,7 +103,7 @@ MANY_MOVES: Mapping[ChangeKind, str] = {
 
 REMARKS = frozenset(
     {
-        *("parked_manual", "pv_bad_often", "output_saturated_often", "evidence_old", "restless"),
+        *("parked_manual", "pv_bad_often", "output_saturated_often", "evidence_old"),
         *("no_response_seen", "oscillating_often", "few_usable", "not_in_register"),
     }
 )

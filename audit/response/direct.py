@@ -99,6 +99,7 @@ def _quantities(
         measured |= _shape(record, curve, noise, ends, change, settings)
     measured[Quantity.STEADY_STATE_ERROR] = _error(ends, change)
     measured[Quantity.IAE] = _iae(curve, noise, ends, change, settings)
+    measured[Quantity.UNREST] = _unrest(curve, noise, change)
     output = output_of.read(record, change, settings)
     measured |= output_of.measure(output, curve.window_s)
     _screen(measured, record, curve, noise, ends, change, settings)
@@ -160,6 +161,14 @@ def _error(ends: Ends, change: SetpointChange) -> Measured:
         return Measured.missing(change.cut or Reason.CUT_SHORT)
     size = change.size_eu
     return interval((1.0 - ends.y_end) * size, ends.u_end * abs(size), ends.how)
+
+
+def _unrest(curve: Curve, noise: Noise, change: SetpointChange) -> Measured:
+    """Standard deviation about the level at rest, engineering units; its interval is log-normal."""
+    sd, doubt = noise_of.unrest(curve, noise)
+    value = sd * abs(change.size_eu)
+    reach = float(np.exp(CONSTANTS.cover_z * doubt))
+    return Measured(value, value / reach, value * reach, "direct")
 
 
 def _iae(

@@ -79,6 +79,17 @@ def estimate(curve: Curve) -> Noise:
     return Noise(own, rho, quantum, deadband)
 
 
+def unrest(curve: Curve, noise: Noise) -> tuple[float, float]:
+    """Standard deviation of the process variable at rest, and its relative standard uncertainty.
+
+    Noise and any oscillation that keeps up, with what the recording hides (deadband, quantum), in
+    parts of the change; from about as many independent samples as the last half of the window has.
+    """
+    half = int(((curve.t >= 0.5 * curve.window_s) & (curve.t <= curve.window_s)).sum())
+    independent = max(half / noise.inflation, 2.0)
+    return float(np.hypot(noise.sd, noise.coarse)), 1.0 / float(np.sqrt(2.0 * independent))
+
+
 def _residual(curve: Curve, lo: float, hi: float) -> Array:
     """Samples of a stretch less their straight line."""
     inside = (curve.t >= lo) & (curve.t <= hi)

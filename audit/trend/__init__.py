@@ -17,7 +17,7 @@ from audit.records import Loop, PastStep, Quantity, QuantityTrend, Reason, Trend
 from audit.trend.baseline import EACH_WAY, PROVISIONAL, first_baseline
 from audit.trend.cusum import RECENT, Watch, watch
 from audit.trend.date import change_point
-from audit.trend.series import LOOKED_AT, Series, scale_of, series_of
+from audit.trend.series import LOOKED_AT, Series, least_of, scale_of, series_of
 
 GROSS = 2.0
 """Against a provisional baseline a worsening must be so many times what else matters."""
@@ -43,8 +43,9 @@ def assess(steps: Sequence[PastStep], loop: Loop, limited: Collection[Quantity])
     under 0.1 a loop and year over all seven quantities. Steps are taken as independent.
 
     "Large enough" is a median of the last 10 steps (of those since the change, if fewer) that is
-    worse by 20 % of a time, 5 points of overshoot, 0.15 of decay ratio, or 0.5 % of range of error
-    (5 % of the size of the changes without a range); twice that while provisional.
+    worse by 20 % of a time, 5 points of overshoot, 0.15 of decay ratio, 0.5 % of range of error
+    (5 % of the size of the changes without a range), or three times the unrest (common practice,
+    no source); twice that while provisional.
 
     Quantities without a limit are looked at too; those in ``limited`` come first. Of an averaging
     level only the error is looked at.
@@ -52,7 +53,7 @@ def assess(steps: Sequence[PastStep], loop: Loop, limited: Collection[Quantity])
     usable = sorted((step for step in steps if step.usable), key=lambda step: step.at_us)
     found = {}
     for quantity in sorted(_looked_at(loop, usable), key=lambda one: one not in limited):
-        series = series_of(usable, quantity)
+        series = series_of(usable, quantity, least_of(quantity, loop))
         if len(series):
             found[quantity] = _trend(quantity, series, usable, loop)
     return Trend(found)

@@ -1,7 +1,7 @@
 """A loop's past steps in; per quantity a series on the scale its worsening is looked for on, out.
 
-Times go by their logarithm, the decay ratio and the overshoot as they are, the steady-state error
-by its size. On each scale larger is worse.
+Times and unrest go by their logarithm, the decay ratio and the overshoot as they are, the
+steady-state error by its size. On each scale larger is worse.
 """
 
 from __future__ import annotations
@@ -22,6 +22,7 @@ TIMES = (
     Quantity.PEAK_TIME,
     Quantity.SETTLING_TIME_5PCT,
 )
+BY_LOGARITHM = (*TIMES, Quantity.UNREST)
 LOOKED_AT = (
     Quantity.RISE_TIME,
     Quantity.SETTLING_TIME,
@@ -30,10 +31,13 @@ LOOKED_AT = (
     Quantity.DECAY_RATIO,
     Quantity.STEADY_STATE_ERROR,
     Quantity.SETTLING_TIME_5PCT,
+    Quantity.UNREST,
 )
 """The quantities a loop is compared with its own past in."""
 
 SHORTEST_S = 1e-3
+CALM_OF_RANGE = 1e-3
+"""Unrest under this share of the range is calm, and none calmer than another."""
 TWO_SIDED_95 = 1.959964
 AT_MOST, VALUE, AT_LEAST = -1, 0, 1
 
@@ -72,8 +76,10 @@ class Series:
         return len(self.x)
 
 
-def series_of(steps: Sequence[PastStep], quantity: Quantity) -> Series:
+def series_of(steps: Sequence[PastStep], quantity: Quantity, least: float = SHORTEST_S) -> Series:
     """The series of a quantity from usable steps in time order.
+
+    What goes by its logarithm is not told apart below ``least``, in the quantity's unit.
 
     Settling times in another band than the newest step's are left out: another band is another
     quantity.
@@ -90,8 +96,8 @@ def series_of(steps: Sequence[PastStep], quantity: Quantity) -> Series:
             sizes.append(size_of(measured) if signed else measured)
     places = np.array([_place(measured) for measured in sizes], np.float64).reshape(-1, 4)
     x, low, high = places[:, 0], places[:, 1], places[:, 2]
-    if quantity in TIMES:
-        x, low, high = (np.log(np.maximum(part, SHORTEST_S)) for part in (x, low, high))
+    if quantity in BY_LOGARITHM:
+        x, low, high = (np.log(np.maximum(part, least)) for part in (x, low, high))
     return Series(
         known,
         sizes,
@@ -102,10 +108,19 @@ def series_of(steps: Sequence[PastStep], quantity: Quantity) -> Series:
     )
 
 
+def least_of(quantity: Quantity, loop: Loop) -> float:
+    """Below which value a quantity that goes by its logarithm is not told apart, in its unit."""
+    if quantity is Quantity.UNREST and loop.span_eu:
+        return CALM_OF_RANGE * abs(loop.span_eu)
+    return SHORTEST_S
+
+
 def scale_of(quantity: Quantity, loop: Loop, steps: Sequence[PastStep]) -> Scale:
     """The scale of a quantity on a loop; without a range the error's rests on its changes' size."""
     if quantity in TIMES:
         return Scale(log=True, typical=0.10, smallest=0.05, matters=math.log(1.2))
+    if quantity is Quantity.UNREST:
+        return Scale(log=True, typical=0.25, smallest=0.10, matters=math.log(3.0))
     if quantity is Quantity.OVERSHOOT:
         return Scale(log=False, typical=2.0, smallest=1.0, matters=5.0)
     if quantity is Quantity.DECAY_RATIO:
