@@ -12,12 +12,17 @@ from numpy.typing import NDArray
 
 from audit.days.coding import encode
 from audit.days.runs import LoopRuns, Runs, Span, State, join
-from audit.records import DAY_US, EPOCH, DayRecord, KeptDay, Loop, Reading, Role, instant, to_us
-
-
-def local_day(at_us: int, zone: ZoneInfo) -> date:
-    """The site's calendar day of an instant."""
-    return instant(at_us).astimezone(zone).date()
+from audit.records import (
+    DAY_US,
+    EPOCH,
+    DayRecord,
+    KeptDay,
+    Loop,
+    Reading,
+    Role,
+    local_day,
+    to_us,
+)
 
 
 def split_days(runs: LoopRuns, zone: ZoneInfo) -> dict[date, LoopRuns]:

@@ -15,11 +15,10 @@ from zoneinfo import ZoneInfo
 import numpy as np
 from numpy.typing import NDArray
 
-from audit.records import SECOND_US
+from audit.records import EPOCH, SECOND_US
 
 _PROBE_S = 6 * 3600
 _YEAR_US = 366 * 86_400 * SECOND_US
-_EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 
 Whole = NDArray[np.int64]
 Flag = NDArray[np.bool_]
@@ -81,7 +80,7 @@ def _table(wall_us: Whole, zone: ZoneInfo) -> tuple[Whole, Whole]:
     if len(wall_us) == 0:
         return np.empty(0, np.int64), np.zeros(1, np.int64)
     years = [
-        (_EPOCH + timedelta(microseconds=int(edge))).year
+        (EPOCH + timedelta(microseconds=int(edge))).year
         for edge in (wall_us.min() - _YEAR_US // 300, wall_us.max() + _YEAR_US // 300)
     ]
     found = [change for year in range(years[0], years[1] + 1) for change in _changes(zone, year)]
@@ -117,10 +116,10 @@ def _narrowed(zone: ZoneInfo, low: int, high: int, before: int) -> int:
 
 
 def _year_s(year: int) -> int:
-    return int((datetime(year, 1, 1, tzinfo=UTC) - _EPOCH).total_seconds())
+    return int((datetime(year, 1, 1, tzinfo=UTC) - EPOCH).total_seconds())
 
 
 def _offset_s(zone: ZoneInfo, instant_s: int) -> int:
-    local = (_EPOCH + timedelta(seconds=instant_s)).astimezone(zone)
+    local = (EPOCH + timedelta(seconds=instant_s)).astimezone(zone)
     offset = local.utcoffset()
     return 0 if offset is None else int(offset.total_seconds())

@@ -13,7 +13,6 @@ from datetime import date, tzinfo
 from audit.ranking.distance import distance_of, group_of, place
 from audit.ranking.limits import evidence_of, limit_standings, standing_word
 from audit.ranking.reasons import Case, reasons_of
-from audit.ranking.sentences import local_date
 from audit.records import (
     DayRecord,
     Loop,
@@ -22,6 +21,7 @@ from audit.records import (
     Standing,
     StandingRule,
     Trend,
+    local_day,
 )
 
 __all__ = ["order", "stand"]
@@ -71,7 +71,7 @@ def stand(
         group=group,
         standing=word,
         degraded=trend.degraded,
-        since=None if since is None else local_date(since, zone),
+        since=None if since is None else local_day(since, zone),
         usable_steps=len(evidence.usable),
         reasons=reasons_of(case),
         limits=limits,

@@ -15,7 +15,6 @@ from audit.ranking.sentences import (
     REMEDY,
     SEEN_AS,
     STEM,
-    TIMES,
     change_sentence,
     last_steps,
     limit_sentence,
@@ -25,6 +24,7 @@ from audit.ranking.sentences import (
     times_the_limit,
 )
 from audit.records import (
+    TIMES,
     DayRecord,
     Group,
     LimitStanding,

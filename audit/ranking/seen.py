@@ -7,8 +7,8 @@ from collections.abc import Sequence
 from datetime import tzinfo
 
 from audit.ranking.limits import UNANSWERED, UNANSWERED_OF, Evidence, has, unanswered
-from audit.ranking.sentences import counted, local_date, plural, share
-from audit.records import DAY_US, ListReason, Loop, PastStep, Reason
+from audit.ranking.sentences import counted, plural, share
+from audit.records import DAY_US, ListReason, Loop, PastStep, Reason, local_day
 
 OFTEN = 3
 OFTEN_SHARE = 1 / 3
@@ -49,7 +49,7 @@ def old_evidence(evidence: Evidence, cutoff_us: int, zone: tzinfo) -> list[ListR
     if age <= FRESH_DAYS:
         return []
     text = (
-        f"The newest usable setpoint change is {age} days old ({local_date(newest_us, zone)}): "
+        f"The newest usable setpoint change is {age} days old ({local_day(newest_us, zone)}): "
         "how the loop has done since is not known."
     )
     return [ListReason("evidence_old", text)]

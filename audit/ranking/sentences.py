@@ -3,19 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from datetime import UTC, date, datetime, timedelta, tzinfo
+from datetime import tzinfo
 
 from audit import figures
 from audit.evidence import FEWEST_FOR_ORDER, SIGNED
-from audit.records import LimitStanding, Loop, Quantity, QuantityTrend, Reason
+from audit.records import TIMES, LimitStanding, Loop, Quantity, QuantityTrend, Reason, local_day
 
-EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
-TIMES = (
-    Quantity.RISE_TIME,
-    Quantity.PEAK_TIME,
-    Quantity.SETTLING_TIME,
-    Quantity.SETTLING_TIME_5PCT,
-)
 STEM = {
     Quantity.RISE_TIME: "rise_time",
     Quantity.PEAK_TIME: "peak_time",
@@ -64,11 +57,6 @@ REMEDY = {
     Reason.NOISY: "noise too large for it: larger changes would decide",
     Reason.TOO_SMALL: "larger changes would decide",
 }
-
-
-def local_date(at_us: int, zone: tzinfo) -> date:
-    """The date of an instant at the site."""
-    return (EPOCH + timedelta(microseconds=at_us)).astimezone(zone).date()
 
 
 def name_of(quantity: Quantity, band_pct: float | None) -> str:
@@ -189,10 +177,10 @@ def share(part: float, whole: float) -> str:
 def _since(one: QuantityTrend, zone: tzinfo) -> str:
     if one.since_us is None:
         return ""
-    text = f" about {local_date(one.since_us, zone)}"
+    text = f" about {local_day(one.since_us, zone)}"
     if one.since_low_us is None or one.since_high_us is None:
         return text
-    first, last = local_date(one.since_low_us, zone), local_date(one.since_high_us, zone)
+    first, last = local_day(one.since_low_us, zone), local_day(one.since_high_us, zone)
     return text if first == last else f"{text} (between {first} and {last})"
 
 

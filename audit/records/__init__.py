@@ -6,7 +6,7 @@ Units are in the names: ``_us`` integer microseconds (an instant ``*_at_us``/``t
 sample that is not good: what was not measured is ``None`` with a ``Reason``.
 """
 
-from audit.records.instants import DAY_US, EPOCH, SECOND_US, instant, to_us
+from audit.records.instants import DAY_US, EPOCH, SECOND_US, instant, local_day, to_us
 from audit.records.kept import Edge, KeptDay, LoopResult, MeasuredStep
 from audit.records.plant import (
     ExportSource,
@@ -38,6 +38,7 @@ from audit.records.standing import (
 from audit.records.steps import Measured, PastStep, Response, SetpointChange, Step, Verdict
 from audit.records.words import (
     LIMITED,
+    TIMES,
     Between,
     ChangeKind,
     Group,
@@ -54,6 +55,7 @@ __all__ = [
     "EPOCH",
     "LIMITED",
     "SECOND_US",
+    "TIMES",
     "Between",
     "CellAccount",
     "ChangeKind",
@@ -94,6 +96,7 @@ __all__ = [
     "Verdict",
     "Windows",
     "instant",
+    "local_day",
     "spec_in_force",
     "to_us",
 ]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, date, datetime, timedelta, tzinfo
 
 SECOND_US = 1_000_000
 
@@ -16,6 +16,11 @@ EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 def instant(at_us: int) -> datetime:
     """Microseconds since 1970-01-01T00:00Z as an aware UTC time."""
     return EPOCH + timedelta(microseconds=at_us)
+
+
+def local_day(at_us: int, zone: tzinfo) -> date:
+    """The site's calendar day of an instant."""
+    return instant(at_us).astimezone(zone).date()
 
 
 def to_us(at: datetime) -> int:

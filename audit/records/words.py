@@ -76,6 +76,14 @@ LIMITED = (
 )
 """The quantities a spec can limit, in the order of the columns of specs.csv."""
 
+TIMES = (
+    Quantity.RISE_TIME,
+    Quantity.SETTLING_TIME,
+    Quantity.PEAK_TIME,
+    Quantity.SETTLING_TIME_5PCT,
+)
+"""The times a loop is compared with its own past in."""
+
 
 class Reason(StrEnum):
     """Why a change, or one quantity of it, was not measured, not counted or not judged."""

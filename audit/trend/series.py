@@ -14,14 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from audit.records import Loop, Measured, PastStep, Quantity
+from audit.records import TIMES, Loop, Measured, PastStep, Quantity
 
-TIMES = (
-    Quantity.RISE_TIME,
-    Quantity.SETTLING_TIME,
-    Quantity.PEAK_TIME,
-    Quantity.SETTLING_TIME_5PCT,
-)
 BY_LOGARITHM = (*TIMES, Quantity.UNREST)
 LOOKED_AT = (
     Quantity.RISE_TIME,
