@@ -418,3 +418,17 @@ def test_a_terminal_without_the_letters_fails_on_none(folder: Path) -> None:
     done = subprocess.run(command, capture_output=True, env=env, check=False)
     assert (done.returncode, done.stderr) == (0, b"")
     assert b"50 ? 55" in done.stdout
+
+
+@pytest.mark.parametrize(("on_path", "named"), [(True, "loopassay"), (False, "bin/loopassay")])
+def test_what_to_open_next_can_be_copied_where_no_environment_is_active(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, on_path: bool, named: str
+) -> None:
+    program = tmp_path / "bin" / "loopassay"
+    program.parent.mkdir()
+    program.write_text("")
+    program.chmod(0o755)
+    monkeypatch.chdir(tmp_path)
+    monkeypatch.setattr(sys, "argv", [str(program), "demo"])
+    monkeypatch.setenv("PATH", str(program.parent) if on_path else "")
+    assert demo_command.called_as() == named

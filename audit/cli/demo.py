@@ -8,7 +8,10 @@ from __future__ import annotations
 
 import argparse
 import json
+import os
 import shlex
+import shutil
+import sys
 from datetime import UTC, date, datetime, time, timedelta
 from importlib import import_module
 from pathlib import Path
@@ -27,6 +30,7 @@ from audit.store import open_store
 
 NIGHTS = 8
 TRUTH = "truth.json"
+NAME = "loopassay"
 
 
 class DemoRefused(AuditError):
@@ -125,17 +129,25 @@ def _audit(
         return report, reports.ranking(store, site)
 
 
+def called_as() -> str:
+    """The command's own name where a shell would find it, else the path it was called by."""
+    called = sys.argv[0]
+    if Path(called).name != NAME or shutil.which(NAME):
+        return NAME
+    return os.path.relpath(called)
+
+
 def _print_next(console: Console, folder: Path, found: Json) -> None:
-    """What to open next."""
-    place = shlex.quote(str(folder))
+    """What to open next, in commands that can be copied."""
+    place, program = shlex.quote(str(folder)), shlex.quote(called_as())
     worst = found["loops"][0]["tag"]
     console.print()
     console.print("This plant is invented. What to open next:")
     for command, what in (
-        (f"loopassay history {worst} --config {place}", "why the first loop is the first"),
-        (f"loopassay rank --all --config {place}", "every loop with every reason"),
-        (f"loopassay store status --config {place}", "what became of every cell of the exports"),
-        (f"loopassay check --config {place}", "whether the site's files are right"),
+        (f"{program} history {worst} --config {place}", "why the first loop is the first"),
+        (f"{program} rank --all --config {place}", "every loop with every reason"),
+        (f"{program} store status --config {place}", "what became of every cell of the exports"),
+        (f"{program} check --config {place}", "whether the site's files are right"),
         (str(folder / TRUTH), "what was really done to each loop, and when"),
         (str(folder / "site.toml"), "the settings; loops.csv and specs.csv lie beside it"),
     ):
