@@ -207,8 +207,8 @@ def test_robust_scatter_of_a_normal_sample() -> None:
 def test_false_alarms(sd: float, heavy: bool) -> None:
     """A loop that stays as it is: at most 0.1 false alarms a loop and year of 4 steps a day.
 
-    Seven quantities share that, so one may raise 0.0143 a year; of 150 years, seed 5, that is 2.1
-    on average, and more than 7 would come with a chance of 0.2 % (Poisson). A larger run of 1000
+    Eight quantities share that, so one may raise 0.0125 a year; of 150 years, seed 5, that is 1.9
+    on average, and more than 7 would come with a chance of 0.1 % (Poisson). A larger run of 1000
     years each gave 0 to 8. ``heavy``: Student's t with 5 degrees of freedom, of the same spread.
     """
     rng = np.random.default_rng(5)

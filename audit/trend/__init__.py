@@ -40,7 +40,8 @@ def assess(steps: Sequence[PastStep], loop: Loop, limited: Collection[Quantity])
     k = 0.5 plus 1.645 standard errors of the baseline's median, h = 10 (15 while provisional).
     In 1000 simulated years of one quantity that does not change, with 4 steps a day, the baseline
     estimated and a scatter of 5 to 30 %, there were 0 to 14 false alarms, at most 8 years with one:
-    under 0.1 a loop and year over all seven quantities. Steps are taken as independent.
+    about 0.1 a loop and year at worst over all eight quantities, before "large enough" is asked.
+    Steps are taken as independent.
 
     "Large enough" is a median of the last 10 steps (of those since the change, if fewer) that is
     worse by 20 % of a time, 5 points of overshoot, 0.15 of decay ratio, 0.5 % of range of error
