@@ -350,7 +350,7 @@ def site(tmp_path: Path, zone: str, at: str = "02:15") -> Config:
 
 
 def test_local_times_of_the_clock_changes_against_check_values_a17(tmp_path: Path) -> None:
-    """check-values A17 (IANA time zone data; RFC 3339, PEP 495), Europe/Paris in 2024.
+    """IANA time zone data (RFC 3339, PEP 495), Europe/Paris in 2024.
 
     27 October 02:30 comes twice, first at 00:30Z; that local day is 25 h long; 31 March 02:30 does
     not exist, the round trip gives 03:30+02:00.

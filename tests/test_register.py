@@ -96,7 +96,7 @@ VALID_FROM = [
     ("2024-07-01T06:00:00.25Z", datetime(2024, 7, 1, 6, 0, 0, 250_000, tzinfo=UTC)),
     ("2024-07-01t06:00:00z", datetime(2024, 7, 1, 6, tzinfo=UTC)),
     ("2024-07-01T06:00:00-03:30", datetime(2024, 7, 1, 9, 30, tzinfo=UTC)),
-    # check-values A17 (IANA time zone data): the hour that comes twice, and the one that does not
+    # IANA time zone data: the hour that comes twice, and the one that does not
     # exist; the offsets of Oslo are those of Paris there
     ("2024-10-27T02:30:00", datetime(2024, 10, 27, 0, 30, tzinfo=UTC)),
     ("2024-03-31T02:30:00", datetime(2024, 3, 31, 1, 30, tzinfo=UTC)),
