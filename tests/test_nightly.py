@@ -210,6 +210,29 @@ def test_new_content_of_a_path_replaces_the_old(
     assert content(folder) == reference
 
 
+def test_a_replacement_that_was_cut_off_still_clears_what_only_the_old_content_covered(
+    record: sites.Plant, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def cut_off(work: loopwork.LoopWork) -> None:
+        raise KeyboardInterrupt
+
+    whole, part = sites.wide_csv(record), sites.wide_csv(record.rows(2000, 3500))
+    contents = []
+    for name in ("cut_off", "undisturbed"):
+        folder = lay(tmp_path / name)
+        sites.write_csv(folder / "exports" / "all.csv", whole)
+        audit(folder)
+        sites.write_csv(folder / "exports" / "all.csv", part)
+        if name == "cut_off":
+            with monkeypatch.context() as patch:
+                patch.setattr(nightly, "audit_loop", cut_off)
+                with pytest.raises(KeyboardInterrupt):
+                    audit(folder)
+        audit(folder)
+        contents.append(content(folder))
+    assert contents[0] == contents[1]
+
+
 def test_nights_asked_for_are_published_each_as_of_its_day(tmp_path: Path) -> None:
     folder = lay(tmp_path)
     sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(plant(hours=3)))

@@ -63,10 +63,16 @@ def test_new_content_of_a_path_replaces_the_old(store: Store) -> None:
         )
         (current,) = queries.exports(session)
         assert (current.id, current.content_hash) == (second, "h2")
+        old = [covered(PV), covered(SP)]
+        known = queries.coverage(session)
+        assert [one for one in known if one in old] == old
+        assert [one for one in known if one not in old] == [covered(PV, span=shorter)]
+        writes.finish_exports(session, [second], some.LATER)
         assert queries.coverage(session) == [covered(PV, span=shorter)]
         again = writes.begin_export(session, some.file(stamp="3"), some.read(), some.LATER)
         (current,) = queries.exports(session)
         assert (again, current.id, current.stamp) == (first, first, "3")
+        writes.finish_exports(session, [again], some.LATER)
         assert queries.coverage(session) == [covered(PV), covered(SP)]
         assert session.execute(text("SELECT count(*) FROM export")).scalar_one() == 2
 
@@ -82,9 +88,10 @@ def test_a_refused_file_keeps_what_its_path_covered(store: Store) -> None:
         assert current.account == CellAccount()
         assert queries.coverage(session) == [covered(PV), covered(SP)]
         assert queries.newest_stamp(session, SPAN[1]) == SPAN[1]
-        writes.begin_export(session, some.file(), some.read("h2", None), some.LATER)
+        empty = writes.begin_export(session, some.file(), some.read("h2", None), some.LATER)
         (current,) = queries.exports(session)
         assert (current.state, current.reason) == ("reading", None)
+        writes.finish_exports(session, [empty], some.LATER)
         assert queries.coverage(session) == []
 
 

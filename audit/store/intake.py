@@ -19,8 +19,9 @@ from audit.store.tables import ExportRow, TagOfSetRow, TagSetRow
 def begin_export(s: Session, file: ExportFile, read: ExportRead, now: datetime) -> int:
     """Enters a file that was read, as "reading", with the time it covers; returns its id.
 
-    The content replaces the older one of the same path, and so does its coverage. A content that
-    was at this path before is the same row again.
+    The content replaces the older one of the same path. What the older one covered stays known
+    until ``finish_exports``: an audit that is cut off in between must still find what to replace.
+    A content that was at this path before is the same row again.
     """
     newest, future = _newest_good(read, to_us(now))
     values = _file_values(file, now) | {
@@ -35,7 +36,6 @@ def begin_export(s: Session, file: ExportFile, read: ExportRead, now: datetime) 
         "superseded_at": None,
         **_account_values(read.account),
     }
-    s.execute(update(ExportRow).where(ExportRow.path == file.path).values(tag_set_id=None))
     _supersede(s, file.path, now)
     same = s.execute(
         select(ExportRow.id).where(
@@ -81,8 +81,14 @@ def refuse_export(s: Session, file: ExportFile, reason: str, now: datetime) -> N
 
 
 def finish_exports(s: Session, ids: Iterable[int], now: datetime) -> None:
-    """Marks exports as taken: all their loops are saved."""
+    """Marks exports as taken: all their loops are saved. Older contents cover nothing any more."""
     for some in portions(list(ids)):
+        paths = select(ExportRow.path).where(ExportRow.id.in_(some))
+        s.execute(
+            update(ExportRow)
+            .where(ExportRow.path.in_(paths), ExportRow.superseded_at.is_not(None))
+            .values(tag_set_id=None)
+        )
         s.execute(
             update(ExportRow).where(ExportRow.id.in_(some)).values(state="taken", read_at=now)
         )
