@@ -18,7 +18,7 @@ from sqlalchemy import Connection, Table, inspect, text
 from sqlalchemy.exc import DBAPIError
 
 from audit.errors import StoreUnready
-from audit.records import LoopResult
+from audit.records import LoopResult, Role, TagState
 from audit.store import Store, open_store, writes
 from audit.store.dump import dump
 from audit.store.engine import Purpose
@@ -75,6 +75,7 @@ def fill(store: Store) -> None:
             (some.measured_step(),),
             edges=(some.edge(some.T0),),
             days=(some.day(1),),
+            tag_states={Role.PV: TagState(some.T0, 50.0, some.T0)},
         )
         writes.save_loop(session, steps, some.NOW)
         writes.save_night(

@@ -7,7 +7,7 @@ sample that is not good: what was not measured is ``None`` with a ``Reason``.
 """
 
 from audit.records.instants import DAY_US, EPOCH, SECOND_US, instant, local_day, to_us
-from audit.records.kept import Edge, KeptDay, LoopResult, MeasuredStep
+from audit.records.kept import Edge, KeptDay, LoopResult, MeasuredStep, TagState
 from audit.records.plant import (
     ExportSource,
     Loop,
@@ -93,6 +93,7 @@ __all__ = [
     "StandingWord",
     "Step",
     "Trend",
+    "TagState",
     "Verdict",
     "Windows",
     "instant",

@@ -19,7 +19,9 @@ from audit.records import (
     Reason,
     Record,
     Response,
+    Role,
     Step,
+    TagState,
     Verdict,
 )
 from audit.store.bulk import portions
@@ -33,6 +35,7 @@ from audit.store.tables import (
     LoopRow,
     MeasurementRow,
     SpecVersionRow,
+    TagStateRow,
     VerdictRow,
 )
 
@@ -301,6 +304,21 @@ def _days_query(from_day: date, to_day: date) -> Any:
 def _day_of(row: Sequence[Any]) -> DayRecord:
     _, day, span_us, auto_us, mode_us, saturated_us, output_us, pv_bad_us, *_ = row
     return DayRecord(day, span_us, auto_us, mode_us, saturated_us, output_us, pv_bad_us)
+
+
+def tag_states(s: Session) -> dict[str, dict[Role, TagState]]:
+    """What the tags of each loop last said, by the loop's tag and the tag's role."""
+    query = select(
+        LoopRow.tag,
+        TagStateRow.role,
+        TagStateRow.newest_us,
+        TagStateRow.value,
+        TagStateRow.held_since_us,
+    ).join_from(TagStateRow, LoopRow, LoopRow.id == TagStateRow.loop_id)
+    found: dict[str, dict[Role, TagState]] = {}
+    for tag, role, *state in sorted(tuple(row) for row in s.execute(query)):
+        found.setdefault(tag, {})[Role(role)] = TagState(*state)
+    return found
 
 
 def _loop_id(tag: str) -> Any:

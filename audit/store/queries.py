@@ -32,6 +32,7 @@ from audit.store.past import (
     past_steps,
     past_steps_many,
     step_counts,
+    tag_states,
     touched,
 )
 from audit.store.payload import detail_of, loop_of
@@ -71,6 +72,7 @@ __all__ = [
     "standings",
     "step_counts",
     "tag_sources",
+    "tag_states",
     "touched",
 ]
 

@@ -25,6 +25,7 @@ from audit.store.tables import (
     EdgeRow,
     LoopRow,
     MeasurementRow,
+    TagStateRow,
     VerdictRow,
 )
 
@@ -57,6 +58,7 @@ def save_loop(s: Session, result: LoopResult, now: datetime) -> SavedLoop:
     fresh.insert(s)
     _replace_edges(s, loop_id, result)
     _replace_days(s, loop_id, result)
+    _replace_tag_states(s, loop_id, result)
     return SavedLoop(len(fresh.measurements) - len(changed), len(changed), len(withdrawn))
 
 
@@ -228,3 +230,23 @@ def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
     for some in portions(days):
         s.execute(delete(DayRow).where(DayRow.loop_id == loop_id, DayRow.day.in_(some)))
     add(s, DayRow, rows)
+
+
+def _replace_tag_states(s: Session, loop_id: int, result: LoopResult) -> None:
+    roles = [role.value for role in result.tag_states]
+    if not roles:
+        return
+    s.execute(
+        delete(TagStateRow).where(TagStateRow.loop_id == loop_id, TagStateRow.role.in_(roles))
+    )
+    rows = [
+        {
+            "loop_id": loop_id,
+            "role": role.value,
+            "newest_us": state.newest_us,
+            "value": state.value,
+            "held_since_us": state.held_since_us,
+        }
+        for role, state in result.tag_states.items()
+    ]
+    add(s, TagStateRow, rows)

@@ -162,7 +162,8 @@ class ExportRow(Base):
     """One content of one export path, and what became of its cells.
 
     With a ``tag_set_id`` it covers those tags from its first to its last stamp; without one (no
-    stamps, refused, or replaced by other content of its path) it covers nothing.
+    stamps, refused, or replaced by other content of its path) it covers nothing. ``asked_set_id``:
+    the tags the register named when it was read.
     """
 
     __tablename__ = "export"
@@ -184,6 +185,7 @@ class ExportRow(Base):
     first_us: Mapped[Micros | None]
     last_us: Mapped[Micros | None]
     tag_set_id: Mapped[int | None] = mapped_column(ForeignKey("tag_set.id"))
+    asked_set_id: Mapped[int | None] = mapped_column(ForeignKey("tag_set.id"))
     newest_good_us: Mapped[Micros | None]
     future_stamps: Mapped[Micros]
     file_rows: Mapped[Micros]
@@ -307,6 +309,17 @@ class DayRow(Base):
     output_us: Mapped[Micros]
     pv_bad_us: Mapped[Micros]
     runs: Mapped[bytes]
+
+
+class TagStateRow(Base):
+    """What one tag of a loop last said: its newest good sample, and since when it holds."""
+
+    __tablename__ = "tag_state"
+    loop_id: Mapped[OfLoop]
+    role: Mapped[KeyText]
+    newest_us: Mapped[Micros]
+    value: Mapped[float]
+    held_since_us: Mapped[Micros]
 
 
 class NightListRow(Base):

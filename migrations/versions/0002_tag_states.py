@@ -1,0 +1,37 @@
+"""What a loop's tags last said, and which tags an export was asked for.
+
+Revision: 0002, after 0001.
+"""
+
+import sqlalchemy as sa
+from alembic import op
+
+revision = "0002"
+down_revision = "0001"
+branch_labels = None
+depends_on = None
+
+
+def upgrade() -> None:
+    op.create_table(
+        "tag_state",
+        sa.Column("loop_id", sa.Integer(), nullable=False),
+        sa.Column("role", sa.Text(), nullable=False),
+        sa.Column("newest_us", sa.BigInteger(), nullable=False),
+        sa.Column("value", sa.Double(), nullable=False),
+        sa.Column("held_since_us", sa.BigInteger(), nullable=False),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_tag_state_loop_id_loop")),
+        sa.PrimaryKeyConstraint("loop_id", "role", name=op.f("pk_tag_state")),
+    )
+    with op.batch_alter_table("export") as batch:
+        batch.add_column(sa.Column("asked_set_id", sa.Integer()))
+        batch.create_foreign_key(
+            op.f("fk_export_asked_set_id_tag_set"), "tag_set", ["asked_set_id"], ["id"]
+        )
+
+
+def downgrade() -> None:
+    with op.batch_alter_table("export") as batch:
+        batch.drop_constraint(op.f("fk_export_asked_set_id_tag_set"), type_="foreignkey")
+        batch.drop_column("asked_set_id")
+    op.drop_table("tag_state")
