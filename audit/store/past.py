@@ -316,8 +316,8 @@ def tag_states(s: Session) -> dict[str, dict[Role, TagState]]:
         TagStateRow.held_since_us,
     ).join_from(TagStateRow, LoopRow, LoopRow.id == TagStateRow.loop_id)
     found: dict[str, dict[Role, TagState]] = {}
-    for tag, role, *state in sorted(tuple(row) for row in s.execute(query)):
-        found.setdefault(tag, {})[Role(role)] = TagState(*state)
+    for tag, role, newest_us, value, since_us in sorted(map(tuple, s.execute(query))):
+        found.setdefault(tag, {})[Role(role)] = TagState(newest_us, value, since_us)
     return found
 
 
