@@ -316,8 +316,9 @@ def tag_states(s: Session) -> dict[str, dict[Role, TagState]]:
         TagStateRow.held_since_us,
     ).join_from(TagStateRow, LoopRow, LoopRow.id == TagStateRow.loop_id)
     found: dict[str, dict[Role, TagState]] = {}
-    for tag, role, newest_us, value, since_us in sorted(map(tuple, s.execute(query))):
-        found.setdefault(tag, {})[Role(role)] = TagState(newest_us, value, since_us)
+    for row in s.execute(query.order_by(LoopRow.id)).mappings():
+        state = TagState(row["newest_us"], row["value"], row["held_since_us"])
+        found.setdefault(row["tag"], {})[Role(row["role"])] = state
     return found
 
 
