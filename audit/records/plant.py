@@ -113,8 +113,42 @@ def spec_in_force(specs: Sequence[Spec], at: datetime) -> Spec | None:
 
 
 @dataclass(frozen=True)
+class FileLimits:
+    """What one export file may hold at most; beyond it the file, row or text is refused.
+
+    ``largest_file_bytes``: as stored. ``largest_unpacked_bytes``: after decompression, and
+    ``largest_ratio`` times the stored bytes, looked at from 64 MB on. ``longest_text``: characters
+    of one cell kept as text. ``most_texts``: different texts of one mode tag. MB are decimal.
+    """
+
+    largest_file_bytes: int = 20_000_000_000
+    largest_unpacked_bytes: int = 200_000_000_000
+    largest_ratio: int = 1000
+    most_columns: int = 100_000
+    longest_row_bytes: int = 8_192_000
+    longest_text: int = 200
+    most_texts: int = 10_000
+
+
+@dataclass(frozen=True)
+class IntakeRule:
+    """``[intake]``: how a run reads. ``cores`` None: all that this process may use.
+
+    ``scratch``: absolute path of the folder for a run's scratch files; "" is the system's own.
+    """
+
+    cores: int | None = None
+    scratch: str = ""
+    limits: FileLimits = FileLimits()
+
+
+@dataclass(frozen=True)
 class ExportSource:
-    """One ``[[exports]]`` table of site.toml, checked; ``files`` is relative to ``folder``."""
+    """One ``[[exports]]`` table of site.toml, checked; ``files`` is relative to ``folder``.
+
+    ``thousands``: the mark between groups of three digits, "" for none. ``true_words`` and
+    ``false_words`` read as 1 and 0 where a number is asked for.
+    """
 
     name: str
     files: str
@@ -134,6 +168,10 @@ class ExportSource:
     revision: str = ""
     delimiter: str = ","
     decimal: str = "."
+    thousands: str = ""
+    true_words: tuple[str, ...] = ("true",)
+    false_words: tuple[str, ...] = ("false",)
+    limits: FileLimits = FileLimits()
 
 
 @dataclass(frozen=True)
