@@ -10,6 +10,8 @@ from audit.records.instants import DAY_US, EPOCH, SECOND_US, instant, local_day,
 from audit.records.kept import Edge, KeptDay, LoopResult, MeasuredStep, TagState
 from audit.records.plant import (
     ExportSource,
+    FileLimits,
+    IntakeRule,
     Loop,
     MeasureSettings,
     Reading,
@@ -65,7 +67,9 @@ __all__ = [
     "ExportFile",
     "ExportRead",
     "ExportSource",
+    "FileLimits",
     "Group",
+    "IntakeRule",
     "KeptDay",
     "LimitStanding",
     "ListReason",
