@@ -188,7 +188,8 @@ class MeasureSettings:
     """What a measurement rests on beside the samples; all of it enters ``method_version``'s hash.
 
     ``band_pct``: the spec's settling band, percent of the change. ``min_step_eu``: smaller changes
-    are set aside. ``span_eu``: width of the loop's range. ``error_u_eu``: standard uncertainty of
+    are set aside. ``span_eu``: width of the loop's range, ``range_low`` and ``range_high`` its ends;
+    None where they are unknown. ``error_u_eu``: standard uncertainty of
     "ends at its setpoint" for a response that was cut; None: 0.5 % of the range, or without a
     range no number of that kind.
     """
@@ -202,3 +203,5 @@ class MeasureSettings:
     reading: Reading = field(default_factory=Reading)
     before_us: int = 120 * SECOND_US
     after_us: int = 3600 * SECOND_US
+    range_low: float | None = None
+    range_high: float | None = None

@@ -64,6 +64,7 @@ class Quantity(StrEnum):
     OUTPUT_OVERSHOOT = "output_overshoot_pct"
     OUTPUT_REVERSALS = "output_reversals"
     OUTPUT_SATURATED = "output_saturated_pct"
+    OUTPUT_REACTION = "output_reaction_s"
 
 
 LIMITED = (
@@ -101,6 +102,8 @@ class Reason(StrEnum):
     COMPRESSED = "compressed"
     WINDOW_INCOMPLETE = "window_incomplete"
     NO_RESPONSE = "no_response"
+    STUCK = "stuck"
+    OUT_OF_RANGE = "out_of_range"
     NO_PEAK = "no_peak"
     NO_RANGE = "no_range"
     NO_OUTPUT = "no_output"

@@ -39,6 +39,7 @@ QUANTITY: Mapping[Quantity, Term] = {
     Quantity.OUTPUT_OVERSHOOT: Term("controller output overshoot", "%"),
     Quantity.OUTPUT_REVERSALS: Term("controller output reversals", ""),
     Quantity.OUTPUT_SATURATED: Term("controller output saturated", "%"),
+    Quantity.OUTPUT_REACTION: Term("controller output reaction", "s"),
 }
 
 STANDING: Mapping[StandingWord, str] = {
@@ -86,6 +87,8 @@ REASON: Mapping[Reason, str] = {
     Reason.COMPRESSED: "the historian's deadband is too large for the change",
     Reason.WINDOW_INCOMPLETE: "the record ends inside the window",
     Reason.NO_RESPONSE: "the process variable did not answer",
+    Reason.STUCK: "the process variable kept one value to the last digit: a stuck sensor",
+    Reason.OUT_OF_RANGE: "the process variable was at or beyond its range",
     Reason.NO_PEAK: "there is no peak beyond the noise",
     Reason.NO_RANGE: "the loop's range is not in the register",
     Reason.NO_OUTPUT: "the loop has no controller output tag",
