@@ -16,7 +16,15 @@ from urllib.parse import urlsplit
 from zoneinfo import ZoneInfo
 
 from audit.errors import Fault, FilesWrong
-from audit.records import SECOND_US, ExportSource, StandingRule, Windows
+from audit.records import (
+    SECOND_US,
+    ExportSource,
+    IntakeRule,
+    StandingRule,
+    Windows,
+)
+from audit.sitefiles.intake import KEYS as INTAKE_KEYS
+from audit.sitefiles.intake import read_intake
 from audit.sitefiles.localtime import instant, zone_meant, zone_named
 from audit.sitefiles.settings import Section, Sheet, note_unknown
 from audit.sitefiles.sources import KEYS as EXPORT_KEYS
@@ -31,11 +39,15 @@ KNOWN: Mapping[str, tuple[str, ...]] = {
     "store": ("url",),
     "register": ("loops", "specs"),
     "exports": EXPORT_KEYS,
+    "intake": INTAKE_KEYS,
     "windows": ("before_s", "after_s", "join_s"),
     "standing": ("steps", "days", "error_u_eu"),
     "nightly": ("at",),
 }
 """Every table of site.toml and the settings in it."""
+
+_OF_THE_MACHINE = {"store": ("url",), "intake": ("cores", "scratch")}
+"""Settings in which two machines of one site may differ; they alter no result."""
 
 _ABSENT = (
     "--config names the site's folder or its site.toml; `loopassay demo` lays down a site to try"
@@ -48,7 +60,8 @@ class Config:
     """One site's settings, checked.
 
     ``folder`` and all paths are absolute; ``store_url`` may hold a password and is left out of the
-    repr; ``settings_hash`` is the SHA-256 of the settings without the store's URL.
+    repr; ``settings_hash`` is the SHA-256 of the settings without those that are the machine's own
+    (the store's URL, cores and scratch folder).
     """
 
     folder: Path
@@ -58,6 +71,7 @@ class Config:
     loops_path: Path
     specs_path: Path
     exports: tuple[ExportSource, ...]
+    intake: IntakeRule
     windows: Windows
     standing: StandingRule
     nightly_at: time
@@ -120,6 +134,7 @@ def examine(path: Path, env: Mapping[str, str]) -> Examined:
     tables = {name: _table(sheet, name) for name in KNOWN if name != "exports"}
     name, zone = _site(tables["site"], sheet.readable)
     register = tables["register"]
+    intake = read_intake(tables["intake"], sheet, folder)
     config = Config(
         folder=folder,
         name=name,
@@ -127,7 +142,8 @@ def examine(path: Path, env: Mapping[str, str]) -> Examined:
         store_url=_store_url(sheet, tables["store"], folder, env),
         loops_path=folder / register.text("loops", "loops.csv"),
         specs_path=folder / register.text("specs", "specs.csv"),
-        exports=read_sources(sheet, folder) if sheet.readable else (),
+        exports=read_sources(sheet, folder, intake.limits) if sheet.readable else (),
+        intake=intake,
         windows=_windows(tables["windows"]),
         standing=_standing(tables["standing"]),
         nightly_at=_nightly_at(tables["nightly"]),
@@ -228,8 +244,9 @@ def _nightly_at(section: Section) -> time:
 
 
 def _settings_hash(data: Mapping[str, object]) -> str:
-    store = data.get("store")
-    kept = {key: value for key, value in data.items() if key != "store"}
-    if isinstance(store, Mapping):
-        kept["store"] = {key: value for key, value in store.items() if key != "url"}
+    kept = dict(data)
+    for table, keys in _OF_THE_MACHINE.items():
+        held = data.get(table)
+        if isinstance(held, Mapping):
+            kept[table] = {key: value for key, value in held.items() if key not in keys}
     return fingerprint({key: value for key, value in kept.items() if value != {}})

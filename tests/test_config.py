@@ -13,7 +13,16 @@ from hypothesis import strategies as st
 
 from audit.config import STORE_VARIABLE, Config, examine, load
 from audit.errors import Fault, FilesWrong
-from audit.records import SECOND_US, Between, Reading, Role, StandingRule, Windows
+from audit.records import (
+    SECOND_US,
+    Between,
+    FileLimits,
+    IntakeRule,
+    Reading,
+    Role,
+    StandingRule,
+    Windows,
+)
 from audit.sitefiles.localtime import instant
 from audit.sitefiles.settings import Lines
 
@@ -52,7 +61,13 @@ def test_defaults_are_those_of_the_contract(tmp_path: Path) -> None:
     assert config.windows == Windows(120 * SECOND_US, 3600 * SECOND_US, 60 * SECOND_US)
     assert config.standing == StandingRule(10, 30, None)
     assert config.nightly_at == time(2, 15)
+    assert config.intake == IntakeRule(None, "", FileLimits())
+    assert config.intake.limits == FileLimits(
+        20_000_000_000, 200_000_000_000, 1000, 100_000, 8_192_000, 200, 10_000
+    )
     (source,) = config.exports
+    assert source.limits == FileLimits()
+    assert (source.thousands, source.true_words, source.false_words) == ("", ("true",), ("false",))
     assert (source.format, source.layout, source.time, source.time_format) == (
         "csv",
         "wide",
@@ -80,8 +95,19 @@ exports = [
     quality_scheme = "opc_ua", uncertain = "good", pv_between = "hold",
     output_between = "linear", silence_s = { pv = 0.5 }, revision = 'r(\d+)' },
   { name = "b", files = "b/*.csv", time_format = "%d.%m.%Y %H:%M", timezone = "America/New_York",
-    good = ["OK", ""], delimiter = ";", decimal = "," },
+    good = ["OK", ""], delimiter = ";", decimal = ",", thousands = "\u00a0",
+    booleans = { true = ["on", " open "], false = ["off"] } },
 ]
+[intake]
+cores = 3
+scratch = "run/scratch"
+largest_file_mb = 5
+largest_unpacked_mb = 70
+largest_ratio = 40
+most_columns = 12
+longest_row_kb = 9
+longest_text = 30
+most_texts = 4
 [site]
 name = " Gannet Works "
 timezone = "UTC"
@@ -117,6 +143,11 @@ at = "23:59"
     assert (first.time_format, first.revision) == ("epoch_ns", r"r(\d+)")
     assert (second.time_format, second.timezone) == ("%d.%m.%Y %H:%M", "America/New_York")
     assert (second.good, second.delimiter, second.decimal) == (("OK", ""), ";", ",")
+    assert second.thousands == "\u00a0"
+    assert (second.true_words, second.false_words) == (("on", "open"), ("off",))
+    limits = FileLimits(5_000_000, 70_000_000, 40, 12, 9_000, 30, 4)
+    assert config.intake == IntakeRule(3, f"{tmp_path}/run/scratch", limits)
+    assert first.limits == second.limits == limits
 
 
 SITE = '[site]\nname = "x"\ntimezone = "UTC"\n'
@@ -182,6 +213,40 @@ WRONG: list[tuple[str, int | None, str | None, str]] = [
     (within("exports", 'delimiter = "\\""'), 8, "exports.delimiter", "cannot part cells"),
     (within("exports", 'decimal = ","'), 8, "exports.decimal", "both delimiter and decimal"),
     (within("exports", 'decimal = "x"'), 8, "exports.decimal", "allowed: ., ,"),
+    (within("exports", 'thousands = ".."'), 8, "exports.thousands", "'..' cannot part thousands"),
+    (within("exports", 'thousands = "0"'), 8, "exports.thousands", "'0' cannot part thousands"),
+    (within("exports", 'thousands = "-"'), 8, "exports.thousands", "'-' cannot part thousands"),
+    (within("exports", 'thousands = "\\t"'), 8, "exports.thousands", "cannot part thousands"),
+    (within("exports", 'thousands = "."'), 8, "exports.thousands", 'both thousands|may be ","'),
+    (within("exports", "thousands = 1"), 8, "exports.thousands", "1 is not a text"),
+    (
+        within("exports", 'delimiter=";"\ndecimal=","\nthousands=","'),
+        10,
+        "exports.thousands",
+        'both thousands|may be "."',
+    ),
+    (within("exports", "booleans = true"), 8, "exports.booleans", "true is not a table"),
+    (within("exports", "booleans = { yes = [] }"), 8, "exports.booleans.yes", "unknown setting"),
+    (within("exports", "booleans = { true = [] }"), 8, "exports.booleans.true", "list of texts"),
+    (within("exports", "booleans = { true = [true] }"), 8, "exports.booleans.true", "[True] is"),
+    (
+        within("exports", '[exports.booleans]\nfalse = ["off", "TRUE"]'),
+        9,
+        "exports.booleans.false",
+        "'TRUE' is also among the words for true|keep one",
+    ),
+    (
+        within("exports", 'booleans = { false = ["0"] }'),
+        8,
+        "exports.booleans.false",
+        "'0' is read as a number|leave it out",
+    ),
+    (
+        within("exports", 'booleans = { false = [" "] }'),
+        8,
+        "exports.booleans.false",
+        "cell without a value|leave it out",
+    ),
     (within("exports", 'qality = "q"'), 8, "exports.qality", "mean 'quality'"),
     (
         within("store", 'url = "mysql://me:secret@h/d"'),
@@ -198,6 +263,20 @@ WRONG: list[tuple[str, int | None, str | None, str]] = [
     (within("store", 'url = "sqlite:///:memory:"'), 8, "store.url", "names no file"),
     (within("store", 'url = "sqlite:///a.db?mode=ro"'), 8, "store.url", "takes no options"),
     (within("register", 'loops = ""'), 8, "register.loops", "'loops' is empty"),
+    (within("intake", "cores = -1"), 8, "intake.cores", "-1 is not a whole number from 1"),
+    (within("intake", "cores = false"), 8, "intake.cores", "false is not a whole number"),
+    (within("intake", 'cores = "all"'), 8, "intake.cores", "'all' is not a whole number"),
+    (within("intake", "cores = 0.0"), 8, "intake.cores", "0.0 is not a whole number"),
+    (within("intake", "scratch = 7"), 8, "intake.scratch", "7 is not a text"),
+    (within("intake", "largest_file_mb = 0"), 8, "intake.largest_file_mb", "whole number from 1"),
+    (within("intake", "largest_unpacked_mb = 1e3"), 8, "intake.largest_unpacked_mb", "1000.0 is"),
+    (within("intake", "largest_ratio = 0"), 8, "intake.largest_ratio", "whole number from 1"),
+    (within("intake", "most_columns = -4"), 8, "intake.most_columns", "whole number from 1"),
+    (within("intake", "longest_row_kb = 9999999"), 8, "intake.longest_row_kb", "1 to 1000000"),
+    (within("intake", "longest_text = true"), 8, "intake.longest_text", "true is not a whole"),
+    (within("intake", 'most_texts = "9"'), 8, "intake.most_texts", "'9' is not a whole number"),
+    (within("intake", "core = 2"), 8, "intake.core", "unknown setting|mean 'cores'"),
+    ("cores = 2\n" + SITE + EXPORT, 1, "cores", "unknown|it belongs below [intake]"),
     (within("windows", "before_s = 0"), 8, "windows.before_s", "0 is out of range|over 0"),
     (within("windows", "after_s = -5.5"), 8, "windows.after_s", "-5.5 is out of range"),
     (within("windows", "after_s = 1e9"), 8, "windows.after_s", "out of range|at most"),
@@ -267,6 +346,20 @@ def test_a_setting_that_has_no_use_in_the_layout_is_no_fault(tmp_path: Path) -> 
     assert load(write(tmp_path, text), {}).exports[0].format == "parquet"
 
 
+def test_all_cores_are_meant_by_nought_as_by_nothing(tmp_path: Path) -> None:
+    config = load(write(tmp_path, BARE + '[intake]\ncores = 0\nscratch = ""\n'), {})
+    assert config.intake == IntakeRule()
+    text = BARE + '[intake]\nscratch = "/fast/disk"\n'
+    assert load(write(tmp_path, text), {}).intake.scratch == "/fast/disk"
+
+
+@pytest.mark.parametrize("mark", [",", " ", "'", "\u00a0", "\u202f", "’", "_"])
+def test_marks_of_thousands_that_are_in_use(tmp_path: Path, mark: str) -> None:
+    """SI Brochure 5.4.4 has a space; the others are usual in one country or another, no source."""
+    (source,) = load(write(tmp_path, BARE + f'thousands = "{mark}"\n'), {}).exports
+    assert source.thousands == mark
+
+
 def test_the_environment_names_the_store(tmp_path: Path) -> None:
     path = write(tmp_path, BARE)
     postgres = "postgresql+psycopg://me@/loops?host=/run/sockets"
@@ -289,6 +382,8 @@ def test_the_settings_hash_follows_content_only(tmp_path: Path) -> None:
     assert hashed(b"\xef\xbb\xbf" + BARE.encode()) == plain
     assert hashed(BARE + '[store]\nurl = "sqlite:///elsewhere.db"\n') == plain
     assert hashed(BARE + "# a remark\n") == plain
+    assert hashed(BARE + '[intake]\ncores = 3\nscratch = "there"\n') == plain
+    assert hashed(BARE + "[intake]\nmost_columns = 3\n") != plain
     assert hashed(BARE.replace("Gannet", "Tern")) != plain
     assert hashed(BARE + "[windows]\nafter_s = 3601\n") != plain
 

@@ -12,8 +12,9 @@ from collections.abc import Mapping, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 
-from audit.records import SECOND_US, Between, ExportSource, Reading, Role
+from audit.records import SECOND_US, Between, ExportSource, FileLimits, Reading, Role
 from audit.sitefiles.localtime import zone_meant, zone_named
+from audit.sitefiles.marks import read_marks
 from audit.sitefiles.settings import Section, Sheet, shown
 from audit.sitefiles.text import meant
 
@@ -37,6 +38,8 @@ KEYS = (
     "revision",
     "delimiter",
     "decimal",
+    "thousands",
+    "booleans",
 )
 TIME_WORDS = ("iso8601", "epoch_s", "epoch_ms", "epoch_us", "epoch_ns")
 LONGEST_SILENCE_S = 366 * 86_400.0
@@ -45,8 +48,8 @@ _PROBE = datetime(2024, 7, 25, 21, 43, 56, tzinfo=UTC)
 _YEAR = re.compile(r"(?<!%)(?:%%)*%[YyGcx]")
 
 
-def read_sources(sheet: Sheet, folder: Path) -> tuple[ExportSource, ...]:
-    """Every ``[[exports]]`` table, checked; faults are noted in the sheet."""
+def read_sources(sheet: Sheet, folder: Path, limits: FileLimits) -> tuple[ExportSource, ...]:
+    """Every ``[[exports]]`` table, checked; faults are noted in the sheet. All share the limits."""
     tables = sheet.data.get("exports")
     if tables is None or tables == []:
         sheet.wrong(("exports",), "no exports are named", "add a table [[exports]] with its files")
@@ -55,7 +58,7 @@ def read_sources(sheet: Sheet, folder: Path) -> tuple[ExportSource, ...]:
         sheet.wrong(("exports",), "exports is not a list of tables", "write it as [[exports]]")
         return ()
     sections = [sheet.section(("exports", at), table, KEYS) for at, table in enumerate(tables)]
-    sources = [_source(section, folder) for section in sections]
+    sources = [_source(section, folder, limits) for section in sections]
     for what in ("name", "files"):
         _note_repeated(sections, [getattr(source, what) for source in sources], what)
     return tuple(sources)
@@ -68,10 +71,10 @@ def _note_repeated(sections: Sequence[Section], values: Sequence[str], what: str
             sections[at].wrong(what, problem, f"give each [[exports]] {what} of its own")
 
 
-def _source(section: Section, folder: Path) -> ExportSource:
+def _source(section: Section, folder: Path, limits: FileLimits) -> ExportSource:
     layout = section.word("layout", ("wide", "narrow"), "wide")
-    decimal = section.word("decimal", (".", ","), ".")
     kind = section.word("format", ("csv", "parquet"), "csv")
+    marks = read_marks(section, kind)
     time = section.text("time", "timestamp")
     tag, value = section.text("tag", "tag"), section.text("value", "value")
     quality = section.text("quality", "", blank=True) or None
@@ -94,8 +97,12 @@ def _source(section: Section, folder: Path) -> ExportSource:
         uncertain_is_good=section.word("uncertain", ("bad", "good"), "bad") == "good",
         reading=_reading(section),
         revision=_revision(section),
-        delimiter=_delimiter(section, decimal if kind == "csv" else ""),
-        decimal=decimal,
+        delimiter=marks.delimiter,
+        decimal=marks.decimal,
+        thousands=marks.thousands,
+        true_words=marks.true_words,
+        false_words=marks.false_words,
+        limits=limits,
     )
 
 
@@ -183,17 +190,3 @@ def _revision(section: Section) -> str:
         problem = f"{shown(text)} has {groups} groups"
         section.wrong("revision", problem, "leave at most one (group); (?:...) does not count")
     return text
-
-
-def _delimiter(section: Section, decimal: str) -> str:
-    text = section.text("delimiter", ",", blank=True)
-    if len(text) != 1 or text.isalnum() or text in '"\r\n\0+-':
-        remedy = 'one character that no number holds: "," ";" or "\\t"'
-        section.wrong("delimiter", f"{shown(text)} cannot part cells", remedy)
-    elif text == decimal:
-        remedy = 'name the delimiter the file has, such as delimiter = ";"'
-        key = "delimiter" if "delimiter" in section else "decimal"
-        section.wrong(key, f"{shown(text)} is both delimiter and decimal mark", remedy)
-    else:
-        return text
-    return ","
