@@ -19,7 +19,8 @@ from sqlalchemy.exc import DBAPIError
 
 from audit.errors import StoreUnready
 from audit.records import LoopResult, Role, TagState
-from audit.store import Store, open_store, writes
+from audit.store import Store, open_store, queries, writes
+from audit.store.closed import close
 from audit.store.dump import dump
 from audit.store.engine import Purpose
 from audit.store.schema import alembic_config
@@ -82,6 +83,8 @@ def fill(store: Store) -> None:
             session, some.NOW.date(), some.NOW, [some.standing(night=some.NOW.date())], some.NOW
         )
         writes.start_run(session, some.NOW, "nightly")
+        (stored,) = queries.loops(session)
+        close(session, {stored.id: some.T0 - some.HOUR_US})
 
 
 def content(store: Store) -> list[str]:

@@ -42,11 +42,15 @@ class RegisterChanges:
 
 @dataclass(frozen=True)
 class SavedLoop:
-    """How many steps one audit of a loop added, measured anew, or withdrew."""
+    """How many steps one audit of a loop added, measured anew, or withdrew.
+
+    ``closed``: found in time of which something was pruned, so that what is stored there stays.
+    """
 
     new: int = 0
     changed: int = 0
     withdrawn: int = 0
+    closed: int = 0
 
 
 @dataclass(frozen=True)
@@ -79,6 +83,7 @@ class SeenExport:
     future_stamps: int
     account: CellAccount
     read_at: datetime
+    asked_set_id: int | None = None
 
 
 @dataclass(frozen=True)

@@ -25,6 +25,7 @@ from audit.records import (
     Verdict,
 )
 from audit.store.bulk import portions
+from audit.store.closed import NEVER_US, closed_time, end_of_closed
 from audit.store.codec import decode
 from audit.store.entries import StoredStep
 from audit.store.payload import StoredMeasured, change_of, measured_of, reasons_of
@@ -50,19 +51,28 @@ _CURRENT = MeasurementRow.superseded_at.is_(None)
 
 
 def kept(s: Session, tag: str, from_us: int, to_us: int) -> list[Record]:
-    """The current curves and the edges of a loop whose stamps overlap a span, by first stamp."""
+    """The current curves and the edges of a loop whose stamps overlap a span, by first stamp.
+
+    None that end in the loop's closed time.
+    """
+    closed_us = end_of_closed(_loop_id(tag))
     curves = (
         select(CurveRow.from_us, CurveRow.data)
         .join_from(CurveRow, MeasurementRow, _SAME_CURVE)
         .where(
             CurveRow.loop_id == _loop_id(tag),
             CurveRow.to_us >= from_us,
+            CurveRow.to_us > closed_us,
             CurveRow.from_us <= to_us,
+            func.length(CurveRow.data) > 0,
             _CURRENT,
         )
     )
     slices = select(EdgeRow.from_us, EdgeRow.data).where(
-        EdgeRow.loop_id == _loop_id(tag), EdgeRow.to_us >= from_us, EdgeRow.from_us <= to_us
+        EdgeRow.loop_id == _loop_id(tag),
+        EdgeRow.to_us >= from_us,
+        EdgeRow.to_us > closed_us,
+        EdgeRow.from_us <= to_us,
     )
     found = [*s.execute(curves), *s.execute(slices)]
     return [decode(data) for _, data in sorted(found, key=lambda row: row[0])]
@@ -79,15 +89,26 @@ def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record
 
     Edges: the last before, two after it, because the first setpoint sample of a covered span can
     have one of its own. Steps: the last before and the first after it, because a span may begin or
-    end in the middle of what was taken, where the last step knows what the setpoint holds.
+    end in the middle of what was taken, where the last step knows what the setpoint holds. None in
+    the loop's closed time, nor across its end: what they say may have changed in between.
     """
-    of_loop = select(EdgeRow.data).where(EdgeRow.loop_id == _loop_id(tag))
+    closed = closed_time(s, tag)
+    closed_us = NEVER_US if closed is None else closed.until_us
+    if to_us <= closed_us:
+        return []
+    of_loop = select(EdgeRow.data).where(
+        EdgeRow.loop_id == _loop_id(tag), EdgeRow.border_us > closed_us
+    )
     before = of_loop.where(EdgeRow.side == "to", EdgeRow.border_us < from_us)
     after = of_loop.where(EdgeRow.side == "from", EdgeRow.border_us > to_us)
     steps = (
         select(CurveRow.data)
         .join_from(CurveRow, MeasurementRow, _SAME_CURVE)
-        .where(MeasurementRow.loop_id == _loop_id(tag), _CURRENT)
+        .where(
+            MeasurementRow.loop_id == _loop_id(tag),
+            MeasurementRow.at_us > closed_us,
+            _CURRENT,
+        )
     )
     at_us = MeasurementRow.at_us
     found = [
@@ -100,7 +121,11 @@ def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record
 
 
 def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
-    """The current steps of a loop that rest on samples in a span, by time."""
+    """The current steps of a loop that rest on samples in a span and may change, by time.
+
+    Those in the loop's closed time, or within a change's reach of it, stay as they are.
+    """
+    closed = closed_time(s, tag)
     resting = (
         select(
             MeasurementRow.at_us,
@@ -113,6 +138,8 @@ def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
             or_(MeasurementRow.depends_from_us.is_(None), MeasurementRow.depends_from_us <= to_us)
         )
     )
+    if closed is not None:
+        resting = resting.where(MeasurementRow.at_us > closed.fixed_us)
     # Two ranges of one index; as one condition, or put in order here, all steps would be gone over.
     reaching = resting.where(MeasurementRow.depends_to_us >= from_us)
     still_open = resting.where(MeasurementRow.depends_to_us.is_(None))
@@ -121,13 +148,14 @@ def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
 
 
 def curve(s: Session, tag: str, at_us: int) -> Record | None:
-    """The samples a current step was measured from; None where there is no such step."""
+    """The samples a current step was measured from; None where there is no such step, or no more
+    samples of it."""
     data = s.execute(
         select(CurveRow.data)
         .join_from(CurveRow, MeasurementRow, _SAME_CURVE)
         .where(MeasurementRow.loop_id == _loop_id(tag), MeasurementRow.at_us == at_us, _CURRENT)
     ).scalar()
-    return None if data is None else decode(data)
+    return decode(data) if data else None
 
 
 def past_steps(s: Session, tag: str, until_us: int | None = None) -> list[PastStep]:

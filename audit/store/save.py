@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections import defaultdict
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 from typing import Any
 
@@ -15,6 +15,7 @@ from sqlalchemy.orm import Session
 from audit.errors import UnknownLoop
 from audit.records import LoopResult, MeasuredStep, Record
 from audit.store.bulk import add, portions
+from audit.store.closed import Closed, loop_and_closed
 from audit.store.codec import Packed, pack
 from audit.store.engine import compact_json
 from audit.store.entries import SavedLoop
@@ -23,7 +24,6 @@ from audit.store.tables import (
     CurveRow,
     DayRow,
     EdgeRow,
-    LoopRow,
     MeasurementRow,
     TagStateRow,
     VerdictRow,
@@ -44,22 +44,39 @@ class _Past:
 def save_loop(s: Session, result: LoopResult, now: datetime) -> SavedLoop:
     """Writes a loop's result. A step that equals the stored one, its curve included, is left alone;
     one that differs gets a new measurement, the old one a ``superseded_at``; a withdrawn one only
-    that. Verdicts rest on a stored version of the loop's spec. Raises UnknownLoop.
+    that. In the loop's closed time, and within a change's reach of it, all stays as it is. Verdicts
+    rest on a stored version of the loop's spec. Raises UnknownLoop.
     """
-    loop_id = s.execute(select(LoopRow.id).where(LoopRow.tag == result.tag)).scalar()
+    loop_id, closed = loop_and_closed(s, result.tag)
     if loop_id is None:
         raise UnknownLoop(f"{result.tag} is no loop of the register")
-    stamps = [one.step.change.at_us for one in result.steps]
-    past = _past(s, loop_id, [*stamps, *result.withdrawn])
-    withdrawn = [at for at in result.withdrawn if past[at].current is not None]
-    fresh = _fresh(loop_id, result.steps, past, now)
+    open_ = result if closed is None else _open_part(result, closed)
+    stamps = [one.step.change.at_us for one in open_.steps]
+    past = _past(s, loop_id, [*stamps, *open_.withdrawn])
+    withdrawn = [at for at in open_.withdrawn if past[at].current is not None]
+    fresh = _fresh(loop_id, open_.steps, past, now)
     changed = [row["at_us"] for row in fresh.measurements if past[row["at_us"]].current is not None]
     _supersede(s, loop_id, [*withdrawn, *changed], now)
     fresh.insert(s)
-    _replace_edges(s, loop_id, result)
+    _replace_edges(s, loop_id, open_)
     _replace_days(s, loop_id, result)
     _replace_tag_states(s, loop_id, result)
-    return SavedLoop(len(fresh.measurements) - len(changed), len(changed), len(withdrawn))
+    return SavedLoop(
+        new=len(fresh.measurements) - len(changed),
+        changed=len(changed),
+        withdrawn=len(withdrawn),
+        closed=len(result.steps) - len(open_.steps),
+    )
+
+
+def _open_part(result: LoopResult, closed: Closed) -> LoopResult:
+    """The result without what lies in the loop's closed time."""
+    return replace(
+        result,
+        steps=tuple(one for one in result.steps if one.step.change.at_us > closed.fixed_us),
+        withdrawn=tuple(at_us for at_us in result.withdrawn if at_us > closed.fixed_us),
+        edges=tuple(edge for edge in result.edges if edge.border_us > closed.until_us),
+    )
 
 
 @dataclass

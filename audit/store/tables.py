@@ -202,7 +202,10 @@ class ExportRow(Base):
 
 
 class CurveRow(Base):
-    """The samples a step was measured from, encoded; several measurements can rest on one."""
+    """The samples a step was measured from, encoded; several measurements can rest on one.
+
+    ``data`` is empty where they were pruned.
+    """
 
     __tablename__ = "curve"
     __table_args__ = (Index(None, "loop_id", "to_us"),)
@@ -230,6 +233,12 @@ class MeasurementRow(Base):
             "depends_to_us",
             sqlite_where=text("superseded_at IS NULL"),
             postgresql_where=text("superseded_at IS NULL"),
+        ),
+        Index(
+            None,
+            "superseded_at",
+            sqlite_where=text("superseded_at IS NOT NULL"),
+            postgresql_where=text("superseded_at IS NOT NULL"),
         ),
     )
     loop_id: Mapped[OfLoop]
@@ -294,6 +303,17 @@ class EdgeRow(Base):
     from_us: Mapped[Micros]
     to_us: Mapped[Micros]
     data: Mapped[bytes]
+
+
+class ClosedRow(Base):
+    """Until when a loop's past is closed: something was pruned there, and late data change nothing.
+
+    The newest instant of which samples, an edge or a step was pruned.
+    """
+
+    __tablename__ = "closed"
+    loop_id: Mapped[OfLoop]
+    until_us: Mapped[Micros]
 
 
 class DayRow(Base):

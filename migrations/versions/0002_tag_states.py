@@ -1,4 +1,4 @@
-"""What a loop's tags last said, and which tags an export was asked for.
+"""What a loop's tags last said, which tags an export was asked for, and what pruning needs.
 
 Revision: 0002, after 0001.
 """
@@ -10,6 +10,8 @@ revision = "0002"
 down_revision = "0001"
 branch_labels = None
 depends_on = None
+
+REPLACED = sa.text("superseded_at IS NOT NULL")
 
 
 def upgrade() -> None:
@@ -23,6 +25,20 @@ def upgrade() -> None:
         sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_tag_state_loop_id_loop")),
         sa.PrimaryKeyConstraint("loop_id", "role", name=op.f("pk_tag_state")),
     )
+    op.create_table(
+        "closed",
+        sa.Column("loop_id", sa.Integer(), nullable=False),
+        sa.Column("until_us", sa.BigInteger(), nullable=False),
+        sa.ForeignKeyConstraint(["loop_id"], ["loop.id"], name=op.f("fk_closed_loop_id_loop")),
+        sa.PrimaryKeyConstraint("loop_id", name=op.f("pk_closed")),
+    )
+    op.create_index(
+        op.f("ix_measurement_superseded_at"),
+        "measurement",
+        ["superseded_at"],
+        sqlite_where=REPLACED,
+        postgresql_where=REPLACED,
+    )
     with op.batch_alter_table("export") as batch:
         batch.add_column(sa.Column("asked_set_id", sa.Integer()))
         batch.create_foreign_key(
@@ -34,4 +50,6 @@ def downgrade() -> None:
     with op.batch_alter_table("export") as batch:
         batch.drop_constraint(op.f("fk_export_asked_set_id_tag_set"), type_="foreignkey")
         batch.drop_column("asked_set_id")
+    op.drop_index(op.f("ix_measurement_superseded_at"), "measurement")
+    op.drop_table("closed")
     op.drop_table("tag_state")
