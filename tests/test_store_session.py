@@ -17,6 +17,7 @@ from sqlalchemy.exc import DBAPIError
 from audit.errors import StoreUnready
 from audit.store import Lease, Store, backup, lease, open_store, queries, take_lease, writes
 from audit.store.entries import Schema
+from audit.store.holder import Holder, here
 from audit.store.schema import require
 from audit.store.tables import SiteRow
 
@@ -27,9 +28,11 @@ def name_in(store: Store) -> str | None:
 
 
 def stalled(store: Store, ttl_s: float, holder: str = "a stalled run") -> Lease:
-    """A lease whose holder gives no sign of life."""
+    """A lease whose holder, this process, does not renew it."""
     with store._writing() as connection:
-        return lease.claim(connection, holder, ttl_s)
+        claimed = lease.claim(connection, Holder(holder, here()), ttl_s)
+    assert isinstance(claimed, Lease)
+    return claimed
 
 
 # --- opening and schema ---------------------------------------------------------------------

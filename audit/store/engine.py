@@ -2,7 +2,8 @@
 
 SQLite: write-ahead log, so that readers go on while one process writes; a writer takes its lock
 when its transaction starts (BEGIN IMMEDIATE) and waits for it; readers cannot write.
-PostgreSQL: psycopg 3; a reader sees one snapshot and cannot write.
+PostgreSQL: psycopg 3; a reader sees one snapshot and cannot write; a writer that falls silent in
+the middle of a transaction is cut off by the server, so that it shuts nobody out for long.
 """
 
 from __future__ import annotations
@@ -11,20 +12,30 @@ import json
 from collections.abc import Iterator
 from contextlib import contextmanager
 from enum import Enum
-from pathlib import Path
 from typing import Any
 
-from sqlalchemy import URL, Connection, Engine, create_engine, event, make_url
+from sqlalchemy import URL, Connection, Engine, create_engine, event
 from sqlalchemy.engine.interfaces import DBAPIConnection
-from sqlalchemy.exc import ArgumentError, DatabaseError, DBAPIError, OperationalError
+from sqlalchemy.exc import DBAPIError
 from sqlalchemy.pool import ConnectionPoolEntry
 
-from audit.errors import StoreUnready
+from audit.store.failures import failure, not_opened
 
 BUSY_S = 30.0
+SILENT_S = 60.0
 _JSON = json.JSONEncoder(ensure_ascii=False, allow_nan=False, separators=(",", ":"))
 _PURPOSE = "audit_purpose"
-_KINDS = "sqlite:///FILE or postgresql+psycopg://USER@HOST/DATABASE"
+_WAL = "audit_wal"
+
+_REACHING = {
+    "connect_timeout": 10,
+    "keepalives_idle": 30,
+    "keepalives_interval": 10,
+    "keepalives_count": 3,
+    "tcp_user_timeout": 60_000,
+}
+"""After what time a server that is silent counts as gone (s; the last in ms): without these, waits
+for hours, as the operating system has it. libpq's names; the URL's own values win."""
 
 
 class Purpose(Enum):
@@ -32,6 +43,8 @@ class Purpose(Enum):
 
     READ = "read"
     WRITE = "write"
+    SEAL = "seal"
+    """The last write of a run: with it all before it survives a power cut."""
     RESHAPE = "reshape"
     """A migration: SQLite rebuilds tables, which foreign keys would answer by deleting rows."""
 
@@ -41,48 +54,32 @@ def compact_json(value: object) -> str:
     return _JSON.encode(value)
 
 
-def checked_url(url: str) -> URL:
-    """The URL with its driver named. Raises StoreUnready for what no store can be."""
-    try:
-        parsed = make_url(url)
-    except ArgumentError as error:
-        raise StoreUnready("the store's URL cannot be read", f"give {_KINDS}") from error
-    if parsed.drivername in ("postgresql", "postgres"):
-        parsed = parsed.set(drivername="postgresql+psycopg")
-    if parsed.drivername not in ("sqlite", "sqlite+pysqlite", "postgresql+psycopg"):
-        raise StoreUnready(f"no store can be kept in {parsed.drivername!r}", f"give {_KINDS}")
-    if sqlite_file(parsed) is None and parsed.get_backend_name() == "sqlite":
-        raise StoreUnready("a store in memory would be lost at the end", f"give {_KINDS}")
-    return parsed
-
-
-def sqlite_file(url: URL) -> Path | None:
-    """The file of an SQLite store; None for one in memory or on another database."""
-    if url.get_backend_name() != "sqlite" or url.database in (None, "", ":memory:"):
-        return None
-    return Path(str(url.database))
-
-
 def make_engine(url: URL) -> Engine:
     """The engine of a store; opens nothing yet."""
     if url.get_backend_name() != "sqlite":
-        return create_engine(url, json_serializer=compact_json, pool_pre_ping=True)
+        reaching = {name: value for name, value in _REACHING.items() if name not in url.query}
+        engine = create_engine(
+            url, json_serializer=compact_json, pool_pre_ping=True, connect_args=reaching
+        )
+        event.listen(engine, "begin", _begin_postgresql)
+        return engine
     engine = create_engine(url, json_serializer=compact_json, connect_args={"timeout": BUSY_S})
     event.listen(engine, "connect", _set_up_sqlite)
     event.listen(engine, "begin", _begin_sqlite)
     return engine
 
 
-def _set_up_sqlite(dbapi: DBAPIConnection, _entry: ConnectionPoolEntry) -> None:
+def _set_up_sqlite(dbapi: DBAPIConnection, entry: ConnectionPoolEntry) -> None:
     dbapi.isolation_level = None  # transactions are begun by _begin_sqlite, not by the driver
     cursor = dbapi.cursor()
     cursor.execute("PRAGMA journal_mode")
-    if cursor.fetchone() != ("wal",):
+    mode = cursor.fetchone()
+    if mode != ("wal",):
         cursor.execute("PRAGMA journal_mode = WAL")
-        cursor.fetchone()
-    # In WAL mode NORMAL can lose the last commits with the power, but never their order: what is
-    # missing is done again by the next run.
-    cursor.execute("PRAGMA synchronous = NORMAL")
+        mode = cursor.fetchone()
+    entry.info[_WAL] = mode == ("wal",)
+    # Only macOS has it: there a plain fsync leaves the data in the drive's cache.
+    cursor.execute("PRAGMA fullfsync = ON")
     cursor.close()
 
 
@@ -91,66 +88,53 @@ def _begin_sqlite(connection: Connection) -> None:
     reads = purpose is Purpose.READ
     connection.exec_driver_sql(f"PRAGMA query_only = {int(reads)}")
     connection.exec_driver_sql(f"PRAGMA foreign_keys = {int(purpose is not Purpose.RESHAPE)}")
+    connection.exec_driver_sql(f"PRAGMA synchronous = {_synchronous(connection, purpose)}")
     connection.exec_driver_sql("BEGIN" if reads else "BEGIN IMMEDIATE")
 
 
-def shown(url: URL) -> str:
-    """The URL as it may be printed: without password, and without options, which can hold one."""
-    return url.set(query={}).render_as_string()
+def _synchronous(connection: Connection, purpose: Purpose) -> str:
+    """How hard SQLite waits for the disk (sqlite.org/pragma.html#pragma_synchronous).
+
+    A killed process loses no commit whatever this is. In WAL mode NORMAL stays whole at a power cut
+    too, but may lose the last commits; the next run does them again. Once the log is synced all
+    commits in it are safe, so FULL in the last transaction of a run makes safe what people have
+    been shown. Where no log can be had (a network drive), only FULL is safe.
+    """
+    waits = purpose in (Purpose.SEAL, Purpose.RESHAPE) or not connection.info[_WAL]
+    return "FULL" if waits else "NORMAL"
+
+
+def _begin_postgresql(connection: Connection) -> None:
+    purpose = connection.get_execution_options().get(_PURPOSE, Purpose.READ)
+    if purpose is not Purpose.READ:
+        connection.exec_driver_sql(
+            f"SELECT set_config('lock_timeout', '{BUSY_S:.0f}s', true), "
+            f"set_config('idle_in_transaction_session_timeout', '{SILENT_S:.0f}s', true)"
+        )
 
 
 @contextmanager
-def connected(engine: Engine, purpose: Purpose) -> Iterator[Connection]:
+def connected(
+    engine: Engine, purpose: Purpose, reached_before: bool = False
+) -> Iterator[Connection]:
     """A connection for one transaction.
 
-    Raises StoreUnready when the database is not reached, and when it fails on the way: a full disk,
-    a file that may not be written, a server that goes away.
+    Raises StoreUnready when the database is not reached; StoreFailed when it could be before, and
+    when it fails on the way: a full disk, a lock nobody lets go of, a server that goes away.
     """
     try:
         connection = engine.connect()
     except DBAPIError as error:
-        raise StoreUnready(
-            f"the store {shown(engine.url)} cannot be opened: {_reason(error)}",
-            _remedy(error, engine.url),
-        ) from error
+        raise not_opened(error, engine.url, reached_before) from error
+    reading = purpose is Purpose.READ
     try:
         with connection:
             options: dict[str, Any] = {_PURPOSE: purpose}
-            if engine.dialect.name == "postgresql" and purpose is Purpose.READ:
+            if engine.dialect.name == "postgresql" and reading:
                 options |= {"isolation_level": "REPEATABLE READ", "postgresql_readonly": True}
             yield connection.execution_options(**options)
-    except DatabaseError as error:
-        if type(error) not in (OperationalError, DatabaseError):
-            raise  # a statement of ours is wrong
-        raise StoreUnready(
-            f"the store {shown(engine.url)} failed: {_reason(error)}",
-            f"what was not finished was not kept; {_remedy(error, engine.url)}",
-        ) from error
-
-
-def _reason(error: DBAPIError) -> str:
-    """What the database says, on one line and without the statement."""
-    return " ".join(str(error.orig).split())
-
-
-_REMEDIES = {
-    "not a database": "the file is none that SQLite made: name another one",
-    "malformed": "the file is damaged: put the last copy of it in its place",
-    "full": "make room on the disk, then start again",
-    "I/O error": "see that there is room on the disk and that it is sound, then start again",
-    "readonly": "SQLite keeps a log beside the file: reading too needs the right to write in its "
-    "folder, and an audit the right to write the file",
-    "unable to open": "see that it is a file, and that this user may read and write it and its "
-    "folder",
-}
-"""What helps, by a word of SQLite's message (its result codes, sqlite.org/rescode.html)."""
-
-
-def _remedy(error: DBAPIError, url: URL) -> str:
-    file = sqlite_file(url)
-    if file is None:
-        return "see that the database is there, running, and open to this user"
-    if not file.parent.is_dir():
-        return f"there is no folder {file.parent}"
-    fitting = (remedy for word, remedy in _REMEDIES.items() if word in str(error.orig))
-    return next(fitting, "start again; if it stays so, report it with this message")
+    except DBAPIError as error:
+        found = failure(error, engine.url, reading)
+        if found is None:
+            raise
+        raise found from error

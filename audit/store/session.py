@@ -6,20 +6,26 @@ Opening a store changes nothing in it; only ``Store.upgrade`` touches the schema
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterator
-from contextlib import closing, contextmanager
+import time
+from collections.abc import Callable, Iterator
+from contextlib import closing, contextmanager, suppress
 from pathlib import Path
 from threading import Event, Thread
 
 from sqlalchemy import Connection
-from sqlalchemy.exc import OperationalError
 from sqlalchemy.orm import Session
 
 from audit.errors import StoreUnready
+from audit.store import holder as holder_of
 from audit.store import lease as lease_row
 from audit.store import schema as schema_of
-from audit.store.engine import Purpose, checked_url, connected, make_engine, shown, sqlite_file
+from audit.store.engine import Purpose, connected, make_engine
 from audit.store.entries import Lease, Schema
+from audit.store.holder import Holder
+from audit.store.urls import checked_url, shown, sqlite_file
+
+Told = Callable[[str, int, int], None]
+"""Called while waiting with what for, seconds waited, and seconds it may take at most."""
 
 __all__ = ["Lease", "Schema", "Store", "backup", "open_store", "take_lease"]
 
@@ -30,6 +36,7 @@ class Store:
     def __init__(self, url: str) -> None:
         self._url = checked_url(url)
         self._engine = make_engine(self._url)
+        self._reached = False
 
     @property
     def url(self) -> str:
@@ -51,7 +58,7 @@ class Store:
         file = sqlite_file(self._url)
         if file is not None and not file.exists():
             return Schema(None, schema_of.head())
-        with connected(self._engine, Purpose.READ) as connection:
+        with self._connected(Purpose.READ) as connection:
             return schema_of.read_schema(connection)
 
     def require_current(self) -> None:
@@ -70,7 +77,7 @@ class Store:
     def read(self) -> Iterator[Session]:
         """One consistent snapshot; writing in it fails."""
         with (
-            connected(self._engine, Purpose.READ) as connection,
+            self._connected(Purpose.READ) as connection,
             Session(connection, autoflush=False) as session,
         ):
             yield session
@@ -86,16 +93,15 @@ class Store:
             yield session
 
     @contextmanager
+    def _connected(self, purpose: Purpose) -> Iterator[Connection]:
+        with connected(self._engine, purpose, self._reached) as connection:
+            self._reached = True
+            yield connection
+
+    @contextmanager
     def _writing(self, purpose: Purpose = Purpose.WRITE) -> Iterator[Connection]:
-        with connected(self._engine, purpose) as connection:
-            try:
-                transaction = connection.begin()
-            except OperationalError as error:
-                raise StoreUnready(
-                    f"the store {self.url} is busy: {error.orig}", "try again when it is free"
-                ) from error
-            with transaction:
-                yield connection
+        with self._connected(purpose) as connection, connection.begin():
+            yield connection
 
     def _renew(self, lease: Lease) -> bool:
         with self._writing() as connection:
@@ -108,15 +114,17 @@ def open_store(url: str) -> Store:
 
 
 @contextmanager
-def take_lease(store: Store, holder: str, ttl_s: float = 90.0) -> Iterator[Lease]:
+def take_lease(
+    store: Store, holder: str, ttl_s: float = 90.0, told: Told | None = None
+) -> Iterator[Lease]:
     """Holds the right to write while the block runs.
 
     ``holder`` is what others are told (who, where). A thread puts off the end of the lease every
-    third of ``ttl_s`` seconds; a holder that dies is replaced after ``ttl_s``. Raises StoreUnready,
-    naming the holder, if another run holds it.
+    third of ``ttl_s`` seconds. A holder that was a process of this machine and is no more is
+    replaced at once; one that is not seen from here, when its lease has run out, which is waited
+    for. Raises StoreUnready, naming the holder, if another run holds the store and shows life.
     """
-    with store._writing() as connection:
-        lease = lease_row.claim(connection, holder, ttl_s)
+    lease = _claim(store, Holder(holder, holder_of.here()), ttl_s, told)
     ended = Event()
     beat = Thread(target=_beat, args=(store, lease, ended), name="store-lease", daemon=True)
     beat.start()
@@ -125,18 +133,44 @@ def take_lease(store: Store, holder: str, ttl_s: float = 90.0) -> Iterator[Lease
     finally:
         ended.set()
         beat.join()
-        with store._writing() as connection:
+        # A store that has gone away takes no lease back: it runs out by itself.
+        with suppress(StoreUnready), store._writing(Purpose.SEAL) as connection:
             lease_row.release(connection, lease)
 
 
+def _claim(store: Store, holder: Holder, ttl_s: float, told: Told | None) -> Lease:
+    """The lease; waits for one to run out unless its holder is seen alive, or renews it."""
+    begun = time.monotonic()
+    first: lease_row.Held | None = None
+    while True:
+        with store._writing() as connection:
+            got = lease_row.claim(connection, holder, ttl_s)
+        if isinstance(got, Lease):
+            return got
+        first = first or got
+        waited_s = time.monotonic() - begun
+        if got.refuses(first, waited_s):
+            raise got.refusal()
+        if told is not None:
+            told(f"waiting for {got.name}", round(waited_s), round(first.left_s))
+        time.sleep(min(1.0, got.left_s))
+
+
 def _beat(store: Store, lease: Lease, ended: Event) -> None:
-    while not ended.wait(lease.ttl_s / 3):
+    """Puts off the end of the lease until told to stop, or until it is lost.
+
+    Where the store is away, goes on trying, more often; each write proves the lease for itself.
+    """
+    pause_s = lease.ttl_s / 3
+    while not ended.wait(pause_s):
         try:
             held = store._renew(lease)
-        except (StoreUnready, OperationalError):
-            continue  # the next beat tries again; each write proves the lease for itself
+        except StoreUnready:
+            pause_s = lease.ttl_s / 18
+            continue
         if not held:
             return
+        pause_s = lease.ttl_s / 3
 
 
 def backup(store: Store, path: Path) -> None:
