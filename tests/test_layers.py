@@ -45,7 +45,8 @@ MAY_KNOW: dict[str, set[str]] = {
     # one loop's way through the rooms, still without file, clock or database
     "loopwork": {*VOCABULARY, "days", "quality", "response", "setpoints", "verdict", "weaving"},
     "standings": {*VOCABULARY, "loopwork", "ranking", "response", "trend"},
-    "feed": VOCABULARY,
+    "feed": {*VOCABULARY, "figures"},
+    "tag_states": VOCABULARY,
     # transactions and reads
     "intake": {*VOCABULARY, "exports", "workers"},
     "gather": {*VOCABULARY, "config", "loopwork", "standings", "store", "weaving"},
@@ -55,7 +56,8 @@ MAY_KNOW: dict[str, set[str]] = {
         *("feed", "gather", "intake", "loopwork", "ranking", "run_report", "site", "standings"),
         *("store", "weaving", "workers"),
     },
-    "reports": {*VOCABULARY, "feed", "figures", "run_report", "site", "store"},
+    "feed_facts": {*VOCABULARY, "feed", "store"},
+    "reports": {*VOCABULARY, "feed", "feed_facts", "figures", "run_report", "site", "store"},
     "check": {*VOCABULARY, "config", "exports", "site"},
     # the edge
     "cli": {

@@ -188,7 +188,7 @@ class MeasureSettings:
     """What a measurement rests on beside the samples; all of it enters ``method_version``'s hash.
 
     ``band_pct``: the spec's settling band, percent of the change. ``min_step_eu``: smaller changes
-    are set aside. ``span_eu``: width of the loop's range, ``range_low`` and ``range_high`` its ends;
+    are set aside. ``span_eu``: width of the loop's range, ``range_low``, ``range_high``: its ends;
     None where they are unknown. ``error_u_eu``: standard uncertainty of
     "ends at its setpoint" for a response that was cut; None: 0.5 % of the range, or without a
     range no number of that kind.

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from datetime import date, timedelta
+from datetime import date
 
 from audit import feed
 from audit.errors import AuditError
-from audit.records import Loop, Standing, instant, to_us
+from audit.feed_facts import feed_facts
+from audit.records import Loop, Standing, to_us
 from audit.reports import contract, words
 from audit.reports.contract import Json
 from audit.site import Site
@@ -30,18 +31,12 @@ def ranking(
             known = [info.night for info in queries.nights(session)]
             raise _no_list(night, known)
         info, standings = found
-        night_before = info.night - timedelta(days=2)
         loops = {row.loop.tag: row.loop for row in queries.loops(session, include_retired=True)}
         refused = [seen for seen in queries.exports(session) if seen.state == "refused"]
         asked = min(info.computed_at, info.cutoff)
         newest_us = queries.newest_stamp(session, to_us(asked))
-        quiet = feed.quiet(
-            [loops[row.tag] for row in standings if row.tag in loops],
-            queries.tag_sources(session).keys(),
-            None if newest_us is None else instant(newest_us),
-            asked,
-            queries.day_records_many(session, list(loops), night_before, info.night),
-        )
+    listed = [loops[row.tag] for row in standings if row.tag in loops]
+    quiet = feed.sentences(feed_facts(store, listed, site.config.exports, asked, info.night))
     return {
         "night": info.night.isoformat(),
         "site": site.config.name,

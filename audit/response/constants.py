@@ -108,6 +108,28 @@ class Constants:
     oscillation_crossings: int = 8
     oscillation_regularity: float = 1.0
     oscillation_ratio: float = 2.0
+    range_margin: float = 0.001
+    """Within this share of the range of an end of it the process variable is at its end …"""
+    clipped_share: float = 0.1
+    """… and a level of which more than this share of the samples is there is clipped, …"""
+    clipped_run: int = 2
+    """… an extremum of which so many points in a row are (common practice, no source)."""
+    stuck_samples: int = 30
+    stuck_noisy_samples: int = 20
+    stuck_quanta: float = 1.0
+    """Stuck: so many equal samples after so many that scatter by at least one step of the scale
+    (sd), of which none comes more often than in 38 of 100 by chance (normal distribution)."""
+    reaction_quiet: float = 0.5
+    """The first half of the time before the change tells what the output does by itself; …"""
+    reaction_samples: int = 8
+    reaction_sd: float = 10.0
+    reaction_most: float = 3.0
+    reaction_most_few: float = 10.0
+    """… from so many samples; a reaction's largest movement stands out by so many rms and by so
+    much over the largest of these (where they are few, as of an output that tells its changes
+    only, by more), …"""
+    reaction_share: float = 0.5
+    """… and begins with the first of at least half its size (common practice, no source)."""
 
 
 CONSTANTS = Constants()
@@ -118,7 +140,7 @@ def _digest(text: str) -> str:
     return hashlib.sha256(text.encode()).hexdigest()[:8]
 
 
-METHOD_VERSION = f"direct-1-{_digest(repr(CONSTANTS))}"
+METHOD_VERSION = f"direct-2-{_digest(repr(CONSTANTS))}"
 
 
 def method_version(settings: MeasureSettings) -> str:

@@ -20,15 +20,18 @@ from audit.records import (
     Role,
     SetpointChange,
 )
+from audit.response import clipped as clipped_of
 from audit.response import ends as levels_of
 from audit.response import noise as noise_of
 from audit.response import output as output_of
-from audit.response import screening, transient
+from audit.response import reaction, screening, stuck, transient
+from audit.response.clipped import Clipped
 from audit.response.constants import CONSTANTS, method_version
 from audit.response.curve import Curve, build
 from audit.response.ends import Ends
 from audit.response.integral import absolute_error
 from audit.response.noise import Noise
+from audit.response.output import Output
 from audit.response.uncertainty import interval, seed
 from audit.response.view import View
 
@@ -55,11 +58,16 @@ def measure(curve: Record, change: SetpointChange, settings: MeasureSettings) ->
         return Response(_all_missing(_silent(record, change, settings)), version, settings.band_pct)
     if len(made.t) < LEAST_SAMPLES:
         return Response(_all_missing(_silent(record, change, settings)), version, settings.band_pct)
-    noise = noise_of.estimate(made)
+    clipped = clipped_of.look(made, change, settings)
+    free = clipped is None or max(clipped.tail) == 0.0
+    if free and stuck.is_stuck(made, -change.sp_from / change.size_eu):
+        measured = _all_missing(Reason.STUCK) | _output(record, made, change, settings)[1]
+        return Response(measured, version, settings.band_pct)
+    noise = noise_of.estimate(clipped_of.for_noise(made, clipped))
     ends = levels_of.find(made, noise, change, settings)
     if ends is None:
         return Response(_all_missing(Reason.GAP), version, settings.band_pct)
-    measured = _quantities(record, made, noise, ends, change, settings)
+    measured = _quantities(record, made, noise, ends, clipped, change, settings)
     y_end = ends.y_end if ends.has_level else None
     return Response(
         measured,
@@ -90,6 +98,7 @@ def _quantities(
     curve: Curve,
     noise: Noise,
     ends: Ends,
+    clipped: Clipped | None,
     change: SetpointChange,
     settings: MeasureSettings,
 ) -> dict[Quantity, Measured]:
@@ -100,15 +109,30 @@ def _quantities(
     measured[Quantity.STEADY_STATE_ERROR] = _error(ends, change)
     measured[Quantity.IAE] = _iae(curve, noise, ends, change, settings)
     measured[Quantity.UNREST] = _unrest(curve, noise, change)
-    output = output_of.read(record, change, settings)
-    measured |= output_of.measure(output, curve.window_s)
+    output, paid = _output(record, curve, change, settings)
+    measured |= paid
     _screen(measured, record, curve, noise, ends, change, settings)
     if output is not None and ends.answers:
         until = min(ends.settled.entry_s or curve.window_s, curve.window_s)
-        stuck = output_of.at_limit_s(output, 0.0, until)
-        if until > 0 and stuck > CONSTANTS.saturated_share * until:
+        at_limit = output_of.at_limit_s(output, 0.0, until)
+        if until > 0 and at_limit > CONSTANTS.saturated_share * until:
             screening.spoil(measured, screening.SHAPE, Reason.OUTPUT_SATURATED)
+    if clipped is not None:
+        clipped_of.put(measured, clipped, curve, ends, change, settings.band_pct)
     return measured
+
+
+def _output(
+    record: Record, curve: Curve, change: SetpointChange, settings: MeasureSettings
+) -> tuple[Output | None, dict[Quantity, Measured]]:
+    """The output around a change, and the quantities of it."""
+    output = output_of.read(record, change, settings)
+    measured = output_of.measure(output, curve.window_s)
+    if change.kind is ChangeKind.STEP:
+        measured[Quantity.OUTPUT_REACTION] = reaction.measure(
+            output, record, change, settings, curve.step_s
+        )
+    return output, measured
 
 
 def _shape(

@@ -49,7 +49,13 @@ SHAPE = (
 FROM_MODEL = (Quantity.DEAD_TIME, Quantity.DAMPING_RATIO, Quantity.NATURAL_FREQUENCY)
 SPARE_LONGER = (Reason.UNSETTLED_BEFORE, Reason.OUTPUT_SATURATED)
 """A "longer than" stands in spite of these."""
-CAUSES = (Reason.GAP, Reason.BAD_QUALITY, Reason.OSCILLATING, Reason.UNSETTLED_BEFORE)
+CAUSES = (
+    Reason.GAP,
+    Reason.BAD_QUALITY,
+    Reason.OSCILLATING,
+    Reason.UNSETTLED_BEFORE,
+    Reason.OUT_OF_RANGE,
+)
 FOLLOW = (Reason.NOISY, Reason.NO_PEAK, Reason.TOO_SPARSE)
 
 

@@ -94,6 +94,11 @@ def measured_of(stored: Mapping[str, Any]) -> dict[Quantity, Measured]:
     return {_QUANTITY[name]: _measured_of(one) for name, one in stored.items()}
 
 
+def measured_one(stored: str | list[Any] | None) -> Measured | None:
+    """One quantity from its JSON; None where it was not looked for yet."""
+    return None if stored is None else _measured_of(stored)
+
+
 def _measured_of(one: str | list[Any]) -> Measured:
     if isinstance(one, str):
         return _MISSING[one]

@@ -133,7 +133,10 @@ def error_that_matters(loop: Loop, steps: Sequence[PastStep]) -> float:
 def size_of(error: Measured) -> Measured:
     """The size of a signed quantity with the interval of the size."""
     if error.low is None or error.high is None:
-        return error if error.value is None else Measured(abs(error.value), how=error.how)
+        if error.value is not None:
+            return Measured(abs(error.value), how=error.how)
+        least = max(error.low or 0.0, -(error.high or 0.0), 0.0)
+        return Measured(low=least, how=error.how, why=error.why)
     ends = (abs(error.low), abs(error.high))
     low = 0.0 if error.low <= 0.0 <= error.high else min(ends)
     value = None if error.value is None else abs(error.value)
