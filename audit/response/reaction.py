@@ -22,6 +22,9 @@ from audit.response.localfit import Array
 from audit.response.order import differences, median
 from audit.response.output import Output, at_limit_s
 
+NEAR = 32
+"""Samples to either side that tell whether a record is sampled regularly."""
+
 
 def measure(
     output: Output | None,
@@ -44,11 +47,12 @@ def measure(
     if output.silent:
         return Measured.missing(Reason.GAP)
     before_s = settings.before_us / SECOND_US
-    sp = record.of(Role.SP).only_good()
+    until = min(before_s, (change.window_end_us - change.at_us) / SECOND_US)
+    near_us = change.at_us + round(until * SECOND_US)
+    sp = record.of(Role.SP).around(change.at_us - settings.before_us, near_us).only_good()
     sp_t = (sp.t_us - change.at_us) / SECOND_US
     if _moved_before(sp_t, sp.value, change, before_s):
         return Measured.missing(Reason.UNSETTLED_BEFORE)
-    until = min(before_s, (change.window_end_us - change.at_us) / SECOND_US)
     found = _kick(output, before_s, until)
     if isinstance(found, Reason):
         return Measured.missing(found)
@@ -97,7 +101,9 @@ def _late_s(t: Array, at: int, step_s: float) -> float:
     if at <= 0 or at >= len(t):
         return step_s
     interval = float(t[at] - t[at - 1])
-    return interval if _regular(t) else min(interval, step_s)
+    if interval <= step_s or _regular(t[max(at - NEAR, 0) : at + NEAR]):
+        return interval
+    return step_s
 
 
 def _regular(t: Array) -> bool:
