@@ -5,8 +5,9 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import date, datetime
+from typing import NamedTuple
 
-from audit.records import CellAccount, Loop
+from audit.records import CellAccount, ChangeKind, Loop
 
 
 @dataclass(frozen=True)
@@ -94,6 +95,14 @@ class StoredStep:
     depends_from_us: int | None
     depends_to_us: int | None
     window_end_us: int
+
+
+class NewestStep(NamedTuple):
+    """The newest current step of a loop: when, whether usable, what kind of change."""
+
+    at_us: int
+    usable: bool
+    kind: ChangeKind
 
 
 @dataclass(frozen=True)

@@ -6,7 +6,7 @@ from collections.abc import Callable, Collection, Sequence
 from datetime import date
 from typing import Any, TypeVar
 
-from sqlalchemy import RowMapping, Text, and_, cast, func, or_, select, union_all
+from sqlalchemy import RowMapping, Text, and_, case, cast, func, or_, select, union_all
 from sqlalchemy.orm import Session
 
 from audit.records import (
@@ -27,7 +27,7 @@ from audit.records import (
 from audit.store.bulk import portions
 from audit.store.closed import NEVER_US, closed_time, end_of_closed
 from audit.store.codec import decode
-from audit.store.entries import StoredStep
+from audit.store.entries import NewestStep, StoredStep
 from audit.store.payload import StoredMeasured, change_of, measured_of, reasons_of
 from audit.store.tables import (
     CurveRow,
@@ -282,16 +282,37 @@ def _step_of(row: RowMapping, verdicts: dict[Quantity, Verdict]) -> Step:
     )
 
 
+def newest_steps(s: Session) -> dict[str, NewestStep]:
+    """The newest current step of each loop that has one, by tag: an index is asked once a loop."""
+    newest = (
+        select(func.max(MeasurementRow.at_us))
+        .where(MeasurementRow.loop_id == LoopRow.id, _CURRENT)
+        .correlate(LoopRow)
+        .scalar_subquery()
+    )
+    # An outer join, so that SQLite begins with the loops, not with all their steps.
+    query = select(
+        LoopRow.tag, MeasurementRow.at_us, MeasurementRow.usable, MeasurementRow.kind
+    ).join_from(
+        LoopRow,
+        MeasurementRow,
+        and_(MeasurementRow.loop_id == LoopRow.id, MeasurementRow.at_us == newest, _CURRENT),
+        isouter=True,
+    )
+    kinds = {kind.value: kind for kind in ChangeKind}
+    return {
+        tag: NewestStep(at_us, usable, kinds[kind])
+        for tag, at_us, usable, kind in s.execute(query)
+        if at_us is not None
+    }
+
+
 def step_counts(s: Session) -> dict[str, int]:
     """How many steps are current, how many of them usable, and how often steps were measured."""
     every = s.execute(select(func.count()).select_from(MeasurementRow)).scalar_one()
-    query = select(MeasurementRow.usable, func.count()).where(_CURRENT)
-    current = {row[0]: row[1] for row in s.execute(query.group_by(MeasurementRow.usable))}
-    return {
-        "current": sum(current.values()),
-        "usable": current.get(True, 0),
-        "measurements": every,
-    }
+    usable = func.sum(case((MeasurementRow.usable, 1), else_=0))
+    current, of_them = s.execute(select(func.count(), usable).where(_CURRENT)).one()
+    return {"current": current, "usable": of_them or 0, "measurements": every}
 
 
 def day_records(s: Session, tag: str, from_day: date, to_day: date) -> list[DayRecord]:

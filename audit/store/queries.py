@@ -29,6 +29,7 @@ from audit.store.past import (
     history,
     kept,
     kept_days,
+    newest_steps,
     past_steps,
     past_steps_many,
     step_counts,
@@ -63,6 +64,7 @@ __all__ = [
     "loop",
     "loops",
     "newest_stamp",
+    "newest_steps",
     "nights",
     "past_steps",
     "past_steps_many",
@@ -71,6 +73,7 @@ __all__ = [
     "specs",
     "standings",
     "step_counts",
+    "tag_sets",
     "tag_sources",
     "tag_states",
     "touched",
@@ -166,6 +169,7 @@ def _export_of(row: RowMapping) -> SeenExport:
         "newest_good_us",
         "future_stamps",
         "read_at",
+        "asked_set_id",
     )
     return SeenExport(account=_account_of(row), **{name: row[name] for name in plain})
 
@@ -227,6 +231,16 @@ def _coverage_query() -> Any:
         ExportRow.path,
         ExportRow.revision,
     ).join_from(ExportRow, TagOfSetRow, ExportRow.tag_set_id == TagOfSetRow.tag_set_id)
+
+
+def tag_sets(s: Session, ids: Collection[int | None]) -> dict[int | None, frozenset[str]]:
+    """The tags of some sets by the set's id."""
+    found: dict[int | None, set[str]] = {number: set() for number in ids if number is not None}
+    query = select(TagOfSetRow.tag_set_id, TagOfSetRow.tag)
+    for some in portions(list(found)):
+        for number, tag in s.execute(query.where(TagOfSetRow.tag_set_id.in_(some))):
+            found[number].add(tag)
+    return {number: frozenset(tags) for number, tags in found.items()}
 
 
 def tag_sources(s: Session) -> dict[str, str]:

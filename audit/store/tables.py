@@ -234,6 +234,17 @@ class MeasurementRow(Base):
             sqlite_where=text("superseded_at IS NULL"),
             postgresql_where=text("superseded_at IS NULL"),
         ),
+        # All that is asked of the newest step of each loop: none of their rows has to be fetched.
+        Index(
+            None,
+            "loop_id",
+            "at_us",
+            "superseded_at",
+            "usable",
+            "kind",
+            sqlite_where=text("superseded_at IS NULL"),
+            postgresql_where=text("superseded_at IS NULL"),
+        ),
         Index(
             None,
             "superseded_at",

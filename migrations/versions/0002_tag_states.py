@@ -11,6 +11,7 @@ down_revision = "0001"
 branch_labels = None
 depends_on = None
 
+CURRENT = sa.text("superseded_at IS NULL")
 REPLACED = sa.text("superseded_at IS NOT NULL")
 
 
@@ -33,6 +34,13 @@ def upgrade() -> None:
         sa.PrimaryKeyConstraint("loop_id", name=op.f("pk_closed")),
     )
     op.create_index(
+        op.f("ix_measurement_loop_id_at_us_superseded_at_usable_kind"),
+        "measurement",
+        ["loop_id", "at_us", "superseded_at", "usable", "kind"],
+        sqlite_where=CURRENT,
+        postgresql_where=CURRENT,
+    )
+    op.create_index(
         op.f("ix_measurement_superseded_at"),
         "measurement",
         ["superseded_at"],
@@ -51,5 +59,6 @@ def downgrade() -> None:
         batch.drop_constraint(op.f("fk_export_asked_set_id_tag_set"), type_="foreignkey")
         batch.drop_column("asked_set_id")
     op.drop_index(op.f("ix_measurement_superseded_at"), "measurement")
+    op.drop_index(op.f("ix_measurement_loop_id_at_us_superseded_at_usable_kind"), "measurement")
     op.drop_table("closed")
     op.drop_table("tag_state")
