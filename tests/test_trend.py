@@ -392,6 +392,17 @@ def test_interval_of_a_size(given: tuple[float, float, float], low: float, high:
     assert (size.value, size.low, size.high) == (abs(given[0]), low, high)
 
 
+@pytest.mark.parametrize(
+    ("given", "least"),
+    [((None, None, -0.4), 0.4), ((None, 0.3, None), 0.3), ((None, None, 0.4), 0.0)],
+)
+def test_a_size_of_which_one_side_is_known_is_at_least_so_much(
+    given: tuple[None, float | None, float | None], least: float
+) -> None:
+    size = size_of(Measured(*given))
+    assert (size.value, size.low, size.high) == (None, least, None)
+
+
 def test_directions_are_compared_apart() -> None:
     """Up 10 s, down 20 s: a run of downward steps is no change, 20 s upwards is one."""
     rng = np.random.default_rng(13)
