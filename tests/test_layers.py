@@ -57,13 +57,14 @@ MAY_KNOW: dict[str, set[str]] = {
         *("store", "weaving", "workers"),
     },
     "feed_facts": {*VOCABULARY, "feed", "store"},
+    "retention": {*VOCABULARY, "run_report", "site", "store", "trend"},
     "reports": {*VOCABULARY, "feed", "feed_facts", "figures", "run_report", "site", "store"},
     "check": {*VOCABULARY, "config", "exports", "site"},
     # the edge
     "cli": {
         *VOCABULARY,
         *("check", "config", "demo_site", "figures", "nightly", "register", "reports"),
-        *("run_report", "site", "store"),
+        *("retention", "run_report", "site", "store"),
     },
     "__init__": set(),
     "__main__": {"cli"},
