@@ -309,3 +309,10 @@ def test_clocks_differ_only_where_enough_changes_agree(
     reactions: Sequence[Measured], told: bool
 ) -> None:
     assert ("clocks" in clocks(reactions)) is told
+
+
+def test_an_inner_loop_s_setpoint_moves_too_often_to_tell() -> None:
+    found = replace(facts(), reactions={"FIC-1": [reaction(-12.0)] * 10})
+    inner = replace(found.loops[0], cascade_primary="TIC-2")
+    assert "clocks" in said(found)
+    assert feed.sentences(replace(found, loops=[inner, *found.loops[1:]])) == ()

@@ -116,10 +116,22 @@ def test_between_samples_that_are_few_a_line_tells_nothing() -> None:
     assert found == Measured.missing(Reason.TOO_SPARSE)
 
 
-def test_a_setpoint_that_moved_just_before_hides_the_reaction() -> None:
-    sp = steps.samples(np.array([-20.0, -15.0, -12.0, 0.0]), np.array([50.0, 53.0, 50.0, 55.0]))
-    output = steps.samples(T, controller(0.0, 5.0))
-    assert reaction(made(output, sp)) == Measured.missing(Reason.UNSETTLED_BEFORE)
+@pytest.mark.parametrize(
+    ("t", "held"),
+    [([-20.0, -15.0, -12.0, 0.0], [50.0, 53.0, 50.0, 55.0]), ([-300.0, -6.0, 0.0], [45, 50, 55])],
+)
+def test_a_setpoint_that_moved_just_before_hides_the_reaction(
+    t: list[float], held: list[float]
+) -> None:
+    """Also where all that is told of it is the value it came to."""
+    output = steps.samples(T, controller(0.0, 5.0) + controller(-6.0, 5.0))
+    found = reaction(made(output, steps.samples(np.array(t), np.array(held))))
+    assert found == Measured.missing(Reason.UNSETTLED_BEFORE)
+
+
+def test_a_setpoint_that_moved_long_before_hides_nothing() -> None:
+    sp = steps.samples(np.array([-90.0, -21.0, 0.0]), np.array([45.0, 50.0, 55.0]))
+    assert reaction(made(steps.samples(T, controller(0.0, 5.0)), sp)).value == pytest.approx(0.0)
 
 
 @pytest.mark.parametrize(
@@ -135,3 +147,12 @@ def test_without_an_output_and_on_other_kinds_there_are_reasons() -> None:
     output = steps.samples(T, controller(0.0, 5.0))
     ramp = reaction(made(output, kind=ChangeKind.RAMP))
     assert ramp == Measured.missing(Reason.NEEDS_MODEL)
+
+
+def test_without_a_process_variable_the_sampling_is_not_known() -> None:
+    """Held from long before, one sample in the window: no interval to go by."""
+    output = steps.samples(T, controller(-4.0, 5.0))
+    one = steps.make(np.array([-90.0, 30.0]), np.array([0.0, 1.0]), 60.0, output=output)
+    settings = replace(one.settings, reading=Reading(pv_between=Between.HOLD))
+    found = reaction(steps.Made(one.record, one.change, settings))
+    assert found == Measured.missing(Reason.TOO_SPARSE)

@@ -17,13 +17,20 @@ CHANGES = 10
 """A loop's newest changes that are looked at …"""
 LEAST_EARLY = 5
 """… and how many of them must have come early by the same time …"""
-ALIKE = 0.2
+ALIKE = 0.1
 """… to within this share of it beyond their own intervals (common practice, no source)."""
 
 
 def differing(facts: Facts) -> list[str]:
-    """A sentence on the loops whose output is stamped before the setpoint it answers."""
-    found = {loop.tag: _early(facts.reactions.get(loop.tag, ())) for loop in facts.loops}
+    """A sentence on the loops whose output is stamped before the setpoint it answers.
+
+    Not on inner loops: their setpoints move all the time, and no movement answers just one.
+    """
+    found = {
+        loop.tag: _early(facts.reactions.get(loop.tag, ()))
+        for loop in facts.loops
+        if loop.cascade_primary is None
+    }
     texts = [f"{tag} by {_amount(early)}" for tag, early in found.items() if early]
     if not texts:
         return []

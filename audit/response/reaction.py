@@ -46,12 +46,14 @@ def measure(
         return Measured.missing(Reason.NO_OUTPUT)
     if output.silent:
         return Measured.missing(Reason.GAP)
+    if step_s <= 0.0:
+        return Measured.missing(Reason.TOO_SPARSE)
     before_s = settings.before_us / SECOND_US
     until = min(before_s, (change.window_end_us - change.at_us) / SECOND_US)
     near_us = change.at_us + round(until * SECOND_US)
     sp = record.of(Role.SP).around(change.at_us - settings.before_us, near_us).only_good()
     sp_t = (sp.t_us - change.at_us) / SECOND_US
-    if _moved_before(sp_t, sp.value, change, before_s):
+    if _moved_before(sp.value[sp_t < 0.0], change):
         return Measured.missing(Reason.UNSETTLED_BEFORE)
     found = _kick(output, before_s, until)
     if isinstance(found, Reason):
@@ -86,11 +88,13 @@ def _kick(output: Output, before_s: float, until_s: float) -> int | Reason:
     return max(near - 1, 0) + at + 1
 
 
-def _moved_before(t: Array, value: Array, change: SetpointChange, before_s: float) -> bool:
-    """Whether the setpoint moved in the time looked at before the change."""
+def _moved_before(value: Array, change: SetpointChange) -> bool:
+    """Whether the setpoint held anything else in the time looked at before the change.
+
+    ``value``: its samples there, and the last one before them, which it held until the first.
+    """
     least = max(3.0 * change.sp_noise_eu, CONSTANTS.least_away * abs(change.size_eu))
-    held = value[(t >= -before_s) & (t < 0.0)]
-    return bool((np.abs(held - change.sp_from) > least).any())
+    return bool((np.abs(value - change.sp_from) > least).any())
 
 
 def _late_s(t: Array, at: int, step_s: float) -> float:
