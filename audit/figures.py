@@ -140,7 +140,9 @@ def percent(fraction: float | None) -> str:
 
 
 def size(count: int) -> str:
-    """A number of bytes in kB or MB (powers of ten)."""
+    """A number of bytes in kB, MB or GB (powers of ten)."""
     if count < 1_000_000:
         return f"{count / 1000.0:.1f} kB"
-    return f"{count / 1_000_000.0:.1f} MB"
+    if count < 1_000_000_000:
+        return f"{count / 1_000_000.0:.1f} MB"
+    return f"{count / 1_000_000_000.0:.1f} GB"

@@ -12,11 +12,15 @@ from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn
 
 from audit import __version__
+from audit.cli.ages import Age, age
 from audit.errors import AuditError
 
 DEMO_FOLDER = Path("loopassay-demo")
 DEMO_LOOPS = 60
 DEMO_DAYS = 90
+
+PRUNED = ("superseded", "steps", "samples", "edges", "revisions", "lists", "exports", "runs")
+"""What can be pruned, as the store calls it."""
 
 YEARS = range(1970, 2200)
 """Years a date may be in: those of the stamps an export may hold."""
@@ -183,6 +187,29 @@ def _add_store(commands: Commands) -> None:
     status = _command(actions, "status", "Say what the store holds, and where every cell went.")
     status.add_argument("--all", action="store_true", help="show every export file")
     _command(actions, "dump", "Print the canonical content as JSON lines.", json=False)
+    _add_prune(actions)
+
+
+def _add_prune(actions: Commands) -> None:
+    prune = _command(actions, "prune", "Take out of the store what is old, by age and kind.")
+    prune.add_argument(
+        "kinds", nargs="+", choices=PRUNED, metavar="KIND", help=f"what: {', '.join(PRUNED)}"
+    )
+    prune.add_argument(
+        "--older-than",
+        required=True,
+        type=_age,
+        metavar="AGE",
+        help="how old it has to be: days, months or years such as 90d, 18m, 2y, or a date",
+    )
+    prune.add_argument(
+        "--dry-run", action="store_true", help="only say what would go, and how large it is"
+    )
+    prune.add_argument(
+        "--vacuum",
+        action="store_true",
+        help="make the file of an SQLite store smaller afterwards (needs twice its size free)",
+    )
 
 
 def _day(text: str) -> date:
@@ -197,6 +224,18 @@ def _day(text: str) -> date:
             f"'{text}' lies outside the years {YEARS[0]} to {YEARS[-1]}"
         )
     return day
+
+
+def _age(text: str) -> Age | date:
+    found = age(text)
+    if found is not None:
+        return found
+    try:
+        return _day(text)
+    except argparse.ArgumentTypeError:
+        raise argparse.ArgumentTypeError(
+            f"'{text}' is no age; write 90d, 18m or 2y, or a date as 2026-03-14"
+        ) from None
 
 
 def _whole(what: str, least: int, most: int) -> Callable[[str], int]:

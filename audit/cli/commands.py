@@ -13,6 +13,7 @@ from audit.cli import screen
 from audit.cli.arguments import CommandWrong
 from audit.cli.print_check import findings_json, print_findings
 from audit.cli.print_history import print_history
+from audit.cli.print_pruning import print_pruning, pruning_json
 from audit.cli.print_ranking import print_ranking
 from audit.cli.print_run import exit_code, print_report, report_json
 from audit.cli.print_store import print_status
@@ -154,6 +155,35 @@ def _store_dump(words: argparse.Namespace) -> int:
     return 0
 
 
+def _store_prune(words: argparse.Namespace) -> int:
+    from audit import retention
+
+    if words.dry_run and words.vacuum:
+        raise CommandWrong(
+            "loopassay store prune: --dry-run and --vacuum do not go together", "give one of them"
+        )
+    site = _reading(words)
+    now = datetime.now(UTC)
+    today = now.astimezone(site.config.timezone).date()
+    asked = words.older_than
+    with open_store(site.config.store_url) as store, screen.progress() as progress:
+        done = retention.prune(
+            site,
+            store,
+            [retention.Kind(kind) for kind in words.kinds],
+            asked if isinstance(asked, date) else asked.before(today),
+            now=now,
+            dry_run=words.dry_run,
+            make_smaller=words.vacuum,
+            progress=progress,
+        )
+    if words.json:
+        screen.print_json(pruning_json(done))
+    else:
+        print_pruning(screen.results(), done)
+    return 0
+
+
 def _reading(words: argparse.Namespace) -> Site:
     """The site for commands that only read the store: a register that is just being edited, and
     may be wrong, does not keep anybody from reading the list."""
@@ -169,4 +199,5 @@ COMMANDS: Mapping[str, Callable[[argparse.Namespace], int]] = {
     "store upgrade": _store_upgrade,
     "store status": _store_status,
     "store dump": _store_dump,
+    "store prune": _store_prune,
 }

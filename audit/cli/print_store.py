@@ -48,8 +48,47 @@ def print_status(console: Console, found: Json, everything: bool = False) -> Non
         f"Nights ranked: {nights['count']}"
         + (f", {nights['first']} to {nights['last']}." if nights["count"] else ".")
     )
+    _print_newest(console, found["newest_steps"])
+    _print_size(console, found)
     _print_runs(console, found["runs"])
     _print_files(console, found, everything)
+
+
+def _print_newest(console: Console, newest: Json) -> None:
+    if not newest["loops"]:
+        return
+    text = (
+        f"Loops with a setpoint change in the last 7 days: {newest['last_7_days']} of "
+        f"{newest['loops']}, in the last 30 days: {newest['last_30_days']}, ever: "
+        f"{newest['with_steps']}."
+    )
+    if newest["longest_without"]:
+        oldest = ", ".join(f"{one['tag']} ({one['at'][:10]})" for one in newest["longest_without"])
+        text += f" Longest without one since the last: {oldest}."
+    console.print(text)
+
+
+def _print_size(console: Console, found: Json) -> None:
+    size, growth = found["size"], found["growth"]
+    about = "about " if size["estimated"] else ""
+    parts = ", ".join(
+        f"{one['kind']} {figures.size(one['bytes'])}" for one in size["contents"] if one["bytes"]
+    )
+    free = f", and {figures.size(size['free_bytes'])} free in it" if size["free_bytes"] else ""
+    console.print(f"Size: {figures.size(size['bytes'])}{free}. Of this {about}{parts}.")
+    days = figures.plain(growth["days"])
+    if growth["bytes_a_year"] is None:
+        console.print(f"Growth a year: not enough history yet ({days} days of record, 7 needed).")
+        return
+    how = {
+        "measured": f"measured over {days} days of runs",
+        "estimated": f"estimated from the last {days} days of record",
+    }[growth["how"]]
+    sign = "-" if growth["bytes_a_year"] < 0 else ""
+    grown = figures.size(abs(growth["bytes_a_year"]))
+    console.print(
+        f"Growth a year: {sign}{grown}, {how}. `loopassay store prune` takes out the old."
+    )
 
 
 def _print_runs(console: Console, runs: list[Json]) -> None:

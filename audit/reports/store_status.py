@@ -7,15 +7,19 @@ from collections.abc import Mapping, Sequence
 from functools import reduce
 
 from audit.records import CellAccount, Spec
-from audit.reports import contract
+from audit.reports import contract, store_size
 from audit.reports.contract import Json
 from audit.run_report import add
 from audit.store import Store, queries
 from audit.store.entries import NightInfo, RunInfo, SeenExport, StoredLoop
 
+RUNS_SHOWN = 20
+RUNS_LOOKED_AT = 200
+"""Newest runs the growth is measured from: more than there are nights in 90 days."""
+
 
 def status(store: Store) -> Json:
-    """Schema, site, counts, nights, the last runs, and the account of cells of every export file.
+    """Schema, site, size, counts, nights, the last runs, the account of cells of every export file.
 
     Where the store has no schema of this program yet, only ``url`` and ``schema`` are there.
     """
@@ -29,14 +33,29 @@ def status(store: Store) -> Json:
     with store.read() as session:
         exports = queries.exports(session)
         cells = reduce(add, (seen.account for seen in exports), CellAccount())
+        loops = queries.loops(session, include_retired=True)
+        steps, newest = queries.step_counts(session), queries.newest_steps(session)
+        nights, runs = queries.nights(session), queries.runs(session, RUNS_LOOKED_AT)
+        size = queries.size(
+            session,
+            steps["measurements"],
+            max((step.at_us for step in newest.values()), default=None),
+        )
         return head | {
             "site": queries.site_name(session),
-            "loops": _loops(queries.loops(session, include_retired=True)),
+            "size": store_size.size(size),
+            "growth": store_size.growth(size, runs),
+            "loops": _loops(loops),
             "specs": _specs(queries.specs(session)),
-            "steps": queries.step_counts(session),
-            "nights": _nights(queries.nights(session)),
+            "steps": steps,
+            "newest_steps": store_size.newest_steps(
+                newest,
+                [row.loop.tag for row in loops if row.retired_at is None],
+                nights[-1].cutoff if nights else None,
+            ),
+            "nights": _nights(nights),
             "exports": dict(Counter(seen.state for seen in exports)),
-            "runs": [_run(run) for run in queries.runs(session)],
+            "runs": [_run(run) for run in runs[:RUNS_SHOWN]],
             "files": [_file(seen) for seen in exports],
             "cells": contract.account(cells),
         }

@@ -37,6 +37,7 @@ from audit.store.past import (
     touched,
 )
 from audit.store.payload import detail_of, loop_of
+from audit.store.size import size, size_bytes
 from audit.store.tables import (
     ExportRow,
     LoopRow,
@@ -70,6 +71,8 @@ __all__ = [
     "past_steps_many",
     "runs",
     "site_name",
+    "size",
+    "size_bytes",
     "specs",
     "standings",
     "step_counts",
