@@ -60,6 +60,7 @@ class Quantity(StrEnum):
     DAMPED_PERIOD = "damped_period_s"
     IAE = "iae_eu_s"
     UNREST = "unrest_eu"
+    ARCHIVE_DEADBAND = "archive_deadband_eu"
     OUTPUT_TRAVEL = "output_travel"
     OUTPUT_OVERSHOOT = "output_overshoot_pct"
     OUTPUT_REVERSALS = "output_reversals"

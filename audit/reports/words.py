@@ -35,6 +35,7 @@ QUANTITY: Mapping[Quantity, Term] = {
     Quantity.DAMPED_PERIOD: Term("damped period", "s"),
     Quantity.IAE: Term("integral of absolute error", "EU·s"),
     Quantity.UNREST: Term("unrest", "EU"),
+    Quantity.ARCHIVE_DEADBAND: Term("archive deadband", "EU"),
     Quantity.OUTPUT_TRAVEL: Term("controller output travel", "% of output"),
     Quantity.OUTPUT_OVERSHOOT: Term("controller output overshoot", "%"),
     Quantity.OUTPUT_REVERSALS: Term("controller output reversals", ""),

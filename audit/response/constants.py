@@ -82,10 +82,37 @@ class Constants:
     sparse_peak_u: float = 0.003
     sparse_when_u: float = 0.4
     """standard uncertainties at that many, in parts of the change and of an interval."""
-    compressed_share: float = 0.05
+    compressed_share: float = 0.055
     compressed_band: float = 2.3
     """Deadband beyond 5 % of the change, or beyond the band / 2.5 for settling, a little
     slack given because the deadband is seen a little too large."""
+    regular_share: float = 0.95
+    """With so many intervals alike (within 5 %) nothing was thinned out."""
+    edge_chance: float = 1e-3
+    """A trace of an archive counts if chance leaves it in fewer than so many records."""
+    edge_chance_least: float = 0.03
+    """… of which the trace alone must have this."""
+    edge_strays: float = 0.03
+    edge_sharp: float = 0.75
+    edge_sharp_few: float = 0.55
+    """Least reported change over the 20 % point of all: at least so much (fewer than 50: less)."""
+    scan_share: float = 0.02
+    """A scan is one if so many intervals are a single scan long."""
+    thinned_least: float = 0.01
+    thinned_share: float = 0.12
+    thinned_spread: float = 8.0
+    """Thinned out: so many of the scans kept, the 90 % point of the intervals beyond so many
+    times their 10 % point."""
+    few_kept: int = 80
+    few_uneven: int = 16
+    away_share: float = 0.1
+    cluster_ratio: float = 3.0
+    cluster_chance: float = 0.02
+    """So few samples are judged by where they lie: so many times denser in the transient, which
+    lasts while the value is this far from its last."""
+    door_doubt: float = 1.5
+    door_doubt_few: float = 2.5
+    """A door's reach is known within this factor (own simulations)."""
     saturated_share: float = 0.1
     saturated_tolerance: float = 0.0005
     """Saturated: within 0.05 % of the output's range of its limit; material from 10 % of the
@@ -98,6 +125,8 @@ class Constants:
     """The highest of a smoothed level lies about so many sd above it by chance alone."""
     second_peak_u: float = 4.0
     """… and a second one beyond so many: it is the highest of several places."""
+    period_doubt: float = 1.2
+    """The time between peaks is so much less sure: the second one was taken for being high."""
     oscillation_from: float = 0.3
     """Looked for from this share of the window on."""
     oscillation_share: float = 0.02

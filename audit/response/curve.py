@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from audit.records import SECOND_US, Between, MeasureSettings, Record, Role, SetpointChange
+from audit.response.archive import EVERY, Archive, Kept, recognise
 from audit.response.constants import CONSTANTS
 from audit.response.localfit import Array
 from audit.response.order import differences, lower_quartile, median
@@ -21,10 +22,11 @@ from audit.response.order import differences, lower_quartile, median
 class Curve:
     """Good samples of the process variable.
 
-    ``t`` [n] s from t0, ``v`` [n] (y - r0) / (r1 - r0), the bounding samples included. ``ft``,
-    ``fv`` [m]: the same with long silences drawn as the signal runs between; ``a``, ``b``, ``wb``:
-    point m is (1 - wb) v[a] + wb v[b]. ``step_s``: typical interval. ``before_s``: the record
-    looked at begins at -before_s; ``window_s``: it ends there.
+    ``t`` [n] s from t0, ``v`` [n] (y - r0) / (r1 - r0), the bounding samples included. ``hold``:
+    the value holds between two of them. ``ft``, ``fv`` [m]: the same with long silences drawn as
+    the signal runs between; ``a``, ``b``, ``wb``: point m is (1 - wb) v[a] + wb v[b]. ``step_s``:
+    typical interval. ``before_s``: the record looked at begins at -before_s; ``window_s``: it ends
+    there. ``archive``: how these samples came to be kept.
     """
 
     t: Array
@@ -38,22 +40,29 @@ class Curve:
     a: NDArray[np.int64]
     b: NDArray[np.int64]
     wb: Array
+    archive: Archive = EVERY
 
 
 def build(record: Record, change: SetpointChange, settings: MeasureSettings) -> Curve:
-    """The curve of a change; one-sample spikes are left out."""
+    """The curve of a change; one-sample spikes are left out.
+
+    How it runs between two samples is as the archive that is seen in them has it, else as declared.
+    """
     pv = record.of(Role.PV).around(change.at_us - settings.before_us, change.window_end_us)
     pv = pv.only_good()
     t = (pv.t_us - change.at_us) / SECOND_US
     v = (pv.value - change.sp_from) / change.size_eu
     keep = ~spikes(t, v)
     t, v = t[keep], v[keep]
+    archive = recognise(t, v, change.window_s)
     hold = settings.reading.pv_between is Between.HOLD
+    if archive.recognised:
+        hold = archive.kept is Kept.EXCEPTION
     before_s = settings.before_us / SECOND_US
     step_s = typical_interval(t, -before_s, change.window_s)
     ft, a, b, wb = _fill(t, step_s, hold, change.window_s)
     fv = (1.0 - wb) * v[a] + wb * v[b]
-    return Curve(t, v, hold, step_s, before_s, change.window_s, ft, fv, a, b, wb)
+    return Curve(t, v, hold, step_s, before_s, change.window_s, ft, fv, a, b, wb, archive)
 
 
 def typical_interval(t: Array, from_s: float, to_s: float) -> float:

@@ -25,6 +25,7 @@ from audit.response import ends as levels_of
 from audit.response import noise as noise_of
 from audit.response import output as output_of
 from audit.response import reaction, screening, stuck, transient
+from audit.response.archive import Kept
 from audit.response.clipped import Clipped
 from audit.response.constants import CONSTANTS, method_version
 from audit.response.curve import Curve, build
@@ -56,6 +57,11 @@ def measure(curve: Record, change: SetpointChange, settings: MeasureSettings) ->
     made = build(record, change, settings)
     if int(((made.t > 0) & (made.t <= made.window_s)).sum()) < LEAST_SAMPLES and not made.hold:
         return Response(_all_missing(_silent(record, change, settings)), version, settings.band_pct)
+    if made.archive.kept is Kept.FEW and made.archive.hidden > CONSTANTS.compressed_share:
+        why = Reason.COMPRESSED if made.hold else Reason.TOO_SPARSE
+        measured = _all_missing(why)
+        measured[Quantity.ARCHIVE_DEADBAND] = _archive(made, change)
+        return Response(measured, version, settings.band_pct)
     if len(made.t) < LEAST_SAMPLES:
         return Response(_all_missing(_silent(record, change, settings)), version, settings.band_pct)
     clipped = clipped_of.look(made, change, settings)
@@ -109,6 +115,7 @@ def _quantities(
     measured[Quantity.STEADY_STATE_ERROR] = _error(ends, change)
     measured[Quantity.IAE] = _iae(curve, noise, ends, change, settings)
     measured[Quantity.UNREST] = _unrest(curve, noise, change)
+    measured[Quantity.ARCHIVE_DEADBAND] = _archive(curve, change)
     output, paid = _output(record, curve, change, settings)
     measured |= paid
     _screen(measured, record, curve, noise, ends, change, settings)
@@ -193,6 +200,15 @@ def _unrest(curve: Curve, noise: Noise, change: SetpointChange) -> Measured:
     value = sd * abs(change.size_eu)
     reach = float(np.exp(CONSTANTS.cover_z * doubt))
     return Measured(value, value / reach, value * reach, "direct")
+
+
+def _archive(curve: Curve, change: SetpointChange) -> Measured:
+    """The archive's deadband, engineering units: 0 where none is seen, of few samples a bound."""
+    size, found = abs(change.size_eu), curve.archive
+    low, high = found.low * size, found.high * size
+    if found.kept is Kept.FEW:
+        return Measured(low=0.0, high=high, how="direct", why=Reason.TOO_SPARSE)
+    return Measured(found.deadband * size, low, high, "direct")
 
 
 def _iae(

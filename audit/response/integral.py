@@ -41,19 +41,27 @@ def absolute_error(
     plain = float(width @ (0.5 * (np.abs(left) + np.abs(right))))
     excess = _folded(0.5 * (left + right), noise, None if level is None else level - sp)
     value = max(plain - float(width @ excess), 0.0)
-    step = end_s / max(len(inside), 1)
+    count = int(((curve.t > 0) & (curve.t < end_s)).sum())
+    step = end_s / max(count, 1)
     random = noise.sd * np.sqrt(noise.inflation * end_s * step)
     known = min(CONSTANTS.excess_doubt * noise.inflation, CONSTANTS.excess_doubt_cap)
-    unsure = known + np.sqrt(0.5 * noise.inflation / max(len(inside), 1))
+    if noise.deadband > 0:
+        known = CONSTANTS.excess_doubt_cap
+    unsure = known + np.sqrt(0.5 * noise.inflation / max(count, 1))
     doubt = unsure * float(width @ excess) + noise.coarse * np.sqrt(end_s * step)
-    idle = float(width @ (np.abs(left) < 2.0 * noise.deadband))
+    idle = end_s
+    if curve.hold or noise.deadband == 0:
+        idle = float(width @ (np.abs(left) < 2.0 * noise.deadband))
     parts = (random, doubt, 0.5 * noise.coarse * idle, _sampling(curve, grid, left, right))
     return value, float(np.sqrt(sum(part**2 for part in parts)))
 
 
 def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
-    """The process variable at the start and at the end of each interval of the grid."""
-    if curve.hold:
+    """The process variable at the start and at the end of each interval of the grid.
+
+    Of what was reported by exception the points say where it holds and where it runs.
+    """
+    if curve.hold and not curve.archive.recognised:
         place = np.searchsorted(curve.ft, grid[:-1], "right") - 1
         value = curve.fv[np.minimum(np.maximum(place, 0), len(curve.fv) - 1)]
         return value, value
@@ -62,10 +70,16 @@ def _sides(curve: Curve, grid: Array) -> tuple[Array, Array]:
 
 
 def _sampling(curve: Curve, grid: Array, left: Array, right: Array) -> float:
-    """Error of the trapezoid from what half the samples would have given (Richardson)."""
-    if curve.hold or len(grid) < 5:
-        return 0.0
+    """Error of the trapezoid from what half the samples would have given (Richardson).
+
+    Of a value that holds: it moved at any time until the next sample (uniform, of which the value
+    is one end: JCGM 100).
+    """
     size = np.append(np.abs(left), np.abs(right[-1:]))
+    if curve.hold and not curve.archive.recognised:
+        return abs(float(differences(grid) @ differences(size))) / float(np.sqrt(3.0))
+    if len(grid) < 5:
+        return 0.0
     some = np.unique(np.append(np.arange(0, len(grid), 2), len(grid) - 1))
     return abs(_area(size, grid) - _area(size[some], grid[some])) / 3.0
 

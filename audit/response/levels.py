@@ -9,10 +9,11 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from audit.response.archive import ALIKE
 from audit.response.constants import CONSTANTS
 from audit.response.curve import Curve
 from audit.response.localfit import Array
-from audit.response.noise import ALIKE, Noise
+from audit.response.noise import Noise
 from audit.response.order import clamped, differences
 
 TAILS = ((0.5, 0.7), (0.25, 1.4), (0.1, 3.5))

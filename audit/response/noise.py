@@ -9,17 +9,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from audit.response.archive import ALIKE
 from audit.response.curve import Curve
 from audit.response.localfit import Array, Fit
 from audit.response.order import clamped, differences, median, quantile
 
-ALIKE = 1e-9
-"""Values closer than this part of the change are one value."""
 ENOUGH = 80
 """Samples half of the time before the change has to hold to tell the noise: fewer samples of
 correlated noise look calmer than they are."""
-THINNED = 3.0
-"""An archive that keeps fewer than one scan in so many is taken to be compressed."""
 
 
 @dataclass(frozen=True)
@@ -59,7 +56,7 @@ def estimate(curve: Curve) -> Noise:
     that is reported by exception are the deadband's, not noise.
     """
     quantum = _quantum(curve.v)
-    deadband = max(_deadband(curve), _thinning(curve))
+    deadband = curve.archive.hidden
     end = curve.window_s
     stretches = [(-curve.before_s, 0.0), (0.5 * end, end), (0.75 * end, end)]
     found = [_residual(curve, lo, hi) for lo, hi in stretches]
@@ -146,57 +143,6 @@ def _quantum(v: Array) -> float:
     least = float(apart.min())
     parts = apart / least
     return least if float(np.abs(parts - np.round(parts)).max()) < 0.05 else 0.0
-
-
-def _deadband(curve: Curve) -> float:
-    """The least change an irregular record reports, its heartbeats left out; else 0."""
-    inside = (curve.t >= -curve.before_s) & (curve.t <= curve.window_s)
-    t, v = curve.t[inside], curve.v[inside]
-    if len(t) < 8:
-        return 0.0
-    length = differences(t)
-    change = np.abs(differences(v))
-    regular = np.abs(length - median(length)) < 0.05 * median(length)
-    if float(regular.mean()) > 0.9:
-        return 0.0
-    told = change[(length < 0.9 * length.max()) & (change > ALIKE)]
-    if len(told) < 6:
-        return 0.0
-    least = float(quantile(told, 0.05))
-    return least if least > 0.3 * float(median(told)) else 0.0
-
-
-def _thinning(curve: Curve) -> float:
-    """How far an archive that keeps turns of a line (swinging door) may be off; 0 if it is none.
-
-    Median distance of a kept sample from the line between its neighbours: 0.6 to 1 door widths
-    where many samples are kept, more where few are (own simulations), so it errs to the safe side.
-    A few irregular samples are taken to be such an archive's.
-    """
-    t, v = curve.t, curve.v
-    if curve.hold or len(t) < 5:
-        return 0.0
-    scan = scan_s(curve)
-    length = differences(t)
-    few = len(t) < 16 and float(length.max()) > THINNED * median(length)
-    thinned = scan > 0 and float(t[-1] - t[0]) > THINNED * scan * (len(t) - 1)
-    if not (few or thinned):
-        return 0.0
-    share = (t[1:-1] - t[:-2]) / (t[2:] - t[:-2])
-    return median(np.abs(v[1:-1] - (1.0 - share) * v[:-2] - share * v[2:]))
-
-
-def scan_s(curve: Curve) -> float:
-    """The scan a thinned-out record was taken from, s: the interval all others are multiples of.
-
-    0 where there is none to see.
-    """
-    length = differences(curve.t)
-    if len(length) < 8:
-        return 0.0
-    least = float(length.min())
-    parts = length / least
-    return least if float(np.mean(np.abs(parts - np.round(parts)) < 0.05)) > 0.95 else 0.0
 
 
 def value_sd(fit: Fit, noise: Noise, curve: Curve) -> Array:

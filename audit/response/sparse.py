@@ -8,16 +8,16 @@ from __future__ import annotations
 import numpy as np
 
 from audit.records import Measured, Quantity, Reason
+from audit.response.archive import Kept, scan_s
 from audit.response.constants import CONSTANTS
 from audit.response.localfit import Array
-from audit.response.noise import scan_s
 from audit.response.screening import PEAKS, SETTLING, SHAPE
 from audit.response.view import View
 
 
 def why_sparse(view: View, rise_s: float) -> Reason:
     """Thinned out by an archive where its scan would have been enough, else never sampled."""
-    scan = scan_s(view.curve)
+    scan = scan_s(view.curve.t)
     enough = scan > 0 and rise_s >= CONSTANTS.sparse_rise * scan
     return Reason.COMPRESSED if enough else Reason.TOO_SPARSE
 
@@ -27,7 +27,8 @@ def bounded(
 ) -> dict[Quantity, Measured]:
     """Fewer than four samples a rise: the rise time is bounded, the shape between is unknown.
 
-    A peak is broader than the rise: it is still seen with fewer.
+    A peak is broader than the rise: it is still seen with fewer. That it did not settle is not seen
+    in what an archive left, nor in a few uneven samples.
     """
     curve = view.curve
     margin = CONSTANTS.cover_z * float(np.hypot(view.noise.total, view.level_u))
@@ -35,7 +36,8 @@ def bounded(
     low, high = _rise_bounds(curve.ft[real], view.x[real], margin)
     seen = count >= CONSTANTS.sparse_peak and why is Reason.TOO_SPARSE
     kept: tuple[Quantity, ...] = PEAKS if seen else ()
-    kept += tuple(q for q in SETTLING if (found[q].value or np.inf) >= 10.0 * curve.step_s)
+    open_end = np.inf if curve.archive.kept is Kept.EVERY else 0.0
+    kept += tuple(q for q in SETTLING if (found[q].value or open_end) >= 10.0 * curve.step_s)
     lost = {q: Measured.missing(why) for q in SHAPE if q not in kept}
     return lost | {Quantity.RISE_TIME: Measured(low=low, high=high, how=view.how, why=why)}
 

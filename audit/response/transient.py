@@ -48,7 +48,7 @@ def look(view: View, ends: Ends, settings: MeasureSettings) -> dict[Quantity, Me
     found |= _settlings(view, path, settings, until)
     if sparse:
         found |= bounded(view, found, count, why_sparse(view, rise))
-    if view.noise.deadband > 1.1 * CONSTANTS.compressed_share:
+    if view.noise.deadband > CONSTANTS.compressed_share:
         found |= dict.fromkeys(SHAPE, Measured.missing(Reason.COMPRESSED))
     return found
 
@@ -182,6 +182,7 @@ def _two_peaks(view: View, path: Path, first: int, second: int) -> dict[Quantity
     u = float(np.sqrt(sd_two**2 + (ratio * sd_one) ** 2 + ((1.0 - ratio) * view.u1) ** 2)) / one
     apart = float(path.turn_t[second] - path.turn_t[first])
     apart_u = float(np.hypot(path.turn_t_sd[first], path.turn_t_sd[second]))
+    apart_u *= CONSTANTS.period_doubt
     return {
         Quantity.DECAY_RATIO: interval(ratio, u, view.how, 0.0),
         Quantity.DAMPED_PERIOD: interval(apart, apart_u, view.how, 0.0),
