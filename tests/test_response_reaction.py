@@ -147,12 +147,3 @@ def test_without_an_output_and_on_other_kinds_there_are_reasons() -> None:
     output = steps.samples(T, controller(0.0, 5.0))
     ramp = reaction(made(output, kind=ChangeKind.RAMP))
     assert ramp == Measured.missing(Reason.NEEDS_MODEL)
-
-
-def test_without_a_process_variable_the_sampling_is_not_known() -> None:
-    """Held from long before, one sample in the window: no interval to go by."""
-    output = steps.samples(T, controller(-4.0, 5.0))
-    one = steps.make(np.array([-90.0, 30.0]), np.array([0.0, 1.0]), 60.0, output=output)
-    settings = replace(one.settings, reading=Reading(pv_between=Between.HOLD))
-    found = reaction(steps.Made(one.record, one.change, settings))
-    assert found == Measured.missing(Reason.TOO_SPARSE)

@@ -46,8 +46,6 @@ def measure(
         return Measured.missing(Reason.NO_OUTPUT)
     if output.silent:
         return Measured.missing(Reason.GAP)
-    if step_s <= 0.0:
-        return Measured.missing(Reason.TOO_SPARSE)
     before_s = settings.before_us / SECOND_US
     until = min(before_s, (change.window_end_us - change.at_us) / SECOND_US)
     near_us = change.at_us + round(until * SECOND_US)
