@@ -58,13 +58,12 @@ def _print_newest(console: Console, newest: Json) -> None:
     if not newest["loops"]:
         return
     text = (
-        f"Loops with a setpoint change in the last 7 days: {newest['last_7_days']} of "
-        f"{newest['loops']}, in the last 30 days: {newest['last_30_days']}, ever: "
-        f"{newest['with_steps']}."
+        f"Loops with a setpoint change: {newest['with_steps']} of {newest['loops']}, in the last "
+        f"30 days {newest['last_30_days']}, in the last 7 days {newest['last_7_days']}."
     )
     if newest["longest_without"]:
-        oldest = ", ".join(f"{one['tag']} ({one['at'][:10]})" for one in newest["longest_without"])
-        text += f" Longest without one since the last: {oldest}."
+        last = ", ".join(f"{one['tag']} {one['at'][:10]}" for one in newest["longest_without"])
+        text += f" Longest without one, with the day of the last: {last}."
     console.print(text)
 
 

@@ -74,7 +74,7 @@ def summed(s: Session, query: Any) -> Counts:
     """Rows and bytes of a query whose last column is the bytes."""
     part = query.subquery()
     rows, size_bytes = s.execute(
-        select(func.count(), func.coalesce(func.sum(part.c[-1]), 0)).select_from(part)
+        select(func.count(), func.coalesce(func.sum(list(part.c)[-1]), 0)).select_from(part)
     ).one()
     return Counts(rows, int(size_bytes))
 
