@@ -54,6 +54,11 @@ VALID_FROM = datetime(2026, 1, 1, tzinfo=UTC)
 T0 = to_us(datetime(2026, 3, 1, 8, tzinfo=UTC))
 HOUR_US = 3600 * SECOND_US
 WINDOWS = Windows(120 * SECOND_US, HOUR_US, 60 * SECOND_US)
+FIRST_BLOB = (
+    b"OhW;9oMT{Q=3ro8c)`p71}hA%T>t3J#;~r&`^z^yHenGFeqk{Y2BJY&M0S~n6<c0Al+Q@KR)~5=1||@_Wb!pI|IQf}"
+    b"kaJ+hq;R1sXJSHeeaF6=VAp$maQ!VQs~{*OA}lH-M7-^FZ|rAT<R0lD+Ud-USd{_*g7F>?"
+)
+"""``curve(T0, count=8)`` in the first encoding, as the version wrote it that had only that one."""
 HASHES = {"settings": "s1", "loops": "l1", "specs": "p1"}
 
 

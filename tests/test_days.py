@@ -356,6 +356,24 @@ def test_bytes_that_are_not_runs_are_refused(cut: bytes) -> None:
         days.decode(cut)
 
 
+@pytest.mark.parametrize(
+    ("first", "written"), [(0, "00"), (-1, "01"), (1, "02"), (-2, "03"), (2**31, "8080808010")]
+)
+@pytest.mark.parametrize(
+    ("length", "state", "number"),
+    [(0, 2, "02"), (31, 3, "7f"), (32, 0, "8001"), (3214, 1, "b964"), (156121, 1, "e58e26")],
+)
+def test_numbers_are_written_as_open_formats_write_them(
+    first: int, written: str, length: int, state: int, number: str
+) -> None:
+    """Unsigned LEB128: DWARF 5, 7.6 (2, 127, 128, 12857) and the textbook example 624485; zigzag
+    integers: Protocol Buffers, "Signed Integers"."""
+    last = first + length
+    runs = {Role.SP: Runs(np.array([first]), np.array([last]), np.array([state], np.int8))}
+    assert days.encode(runs).hex() == f"01 00 01 {written} {number} 00 00".replace(" ", "")
+    assert days.decode(days.encode(runs)) == runs
+
+
 def test_the_encoding_is_compact() -> None:
     runs = {Role.PV: Runs(
         np.arange(1000) * 60 * SECOND_US, np.arange(1000) * 60 * SECOND_US + 59 * SECOND_US,

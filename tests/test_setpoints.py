@@ -403,6 +403,20 @@ def test_the_slices_at_a_border_are_enough_to_find_every_change_across_it(
     assert near(part) == near(whole)
 
 
+@pytest.mark.parametrize(("at_once", "narrow"), [(1, 8), (7, 0), (16_384, 0), (100, 64)])
+def test_changes_gone_through_in_portions_are_those_of_the_whole(
+    at_once: int, narrow: int, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """However many are looked at together, and however their levels are sorted."""
+    loops = [replace(loop, windows=SMALL) for loop in (LOOP, WITH_MODE)]
+    cases = [(random_record(seed), loop) for seed in range(25) for loop in loops]
+    whole = [find(*case) for case in cases]
+    monkeypatch.setattr("audit.setpoints.moves.AT_ONCE", at_once)
+    monkeypatch.setattr("audit.setpoints.moves.NARROW", narrow)
+    monkeypatch.setattr("audit.setpoints.moves.MANY_ROWS", 1)
+    assert [find(*case) for case in cases] == whole
+
+
 def test_random_records_hold_every_kind_and_reason() -> None:
     """The property tests above would prove nothing on records without changes."""
     loops = [replace(loop, windows=SMALL) for loop in (LOOP, WITH_MODE)]

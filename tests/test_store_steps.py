@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import base64
 import pickle
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -10,15 +11,15 @@ from datetime import date
 
 import pytest
 import store_samples as some
-from sqlalchemy import event, insert, text
+from sqlalchemy import event, insert, text, update
 from sqlalchemy.exc import IntegrityError
-from store_samples import HOUR_US, NOW, T0, measured_step, result, same_record
+from store_samples import FIRST_BLOB, HOUR_US, NOW, T0, measured_step, result, same_record
 
 from audit.errors import UnknownLoop
 from audit.records import LoopResult, MeasuredStep, PastStep, Quantity
 from audit.store import Store, queries, writes
 from audit.store.entries import SavedLoop, StoredStep
-from audit.store.tables import MeasurementRow
+from audit.store.tables import CurveRow, MeasurementRow
 
 TAG = "FIC-101"
 
@@ -96,6 +97,47 @@ def test_saving_the_same_again_changes_nothing(site: Store) -> None:
     save(site, result(measured_step()))
     assert save(site, result(measured_step())) == SavedLoop()
     assert rows(site, "measurement") == 1
+
+
+def first_encoded(store: Store) -> MeasuredStep:
+    """A step as the first version stored it: digest, fingerprint and curve are what it wrote."""
+    kinds = (Quantity.RISE_TIME, Quantity.SETTLING_TIME, Quantity.DECAY_RATIO)
+    one = measured_step()
+    response = replace(one.step.response, measured={q: some.measured()[q] for q in kinds})
+    one = replace(one, step=replace(one.step, response=response), curve=some.curve(T0, count=8))
+    save(store, result(one))
+    with some.writing(store) as session:
+        session.execute(
+            update(CurveRow).values(
+                digest=bytes.fromhex("367b5606eee3987229a29f61c4b434f7"),
+                data=base64.b85decode(FIRST_BLOB),
+            )
+        )
+        fingerprint = bytes.fromhex("c64722ffedd0f618f889477104377991")
+        session.execute(update(MeasurementRow).values(fingerprint=fingerprint))
+    return one
+
+
+def test_a_step_stored_in_the_first_encoding_is_known_again(site: Store) -> None:
+    one = first_encoded(site)
+    assert save(site, result(one)) == SavedLoop()
+    assert (rows(site, "measurement"), rows(site, "curve")) == (1, 1)
+    with site.read() as session:
+        kept = queries.curve(session, TAG, T0)
+    assert kept is not None
+    assert same_record(kept, one.curve)
+
+
+def test_a_step_of_the_first_encoding_that_differs_rests_on_the_same_curve(site: Store) -> None:
+    one = first_encoded(site)
+    other = replace(one, step=replace(one.step, usable=False))
+    assert save(site, result(other)) == SavedLoop(changed=1)
+    assert save(site, result(other)) == SavedLoop()
+    assert (rows(site, "measurement"), rows(site, "curve")) == (2, 1)
+    cut = replace(other, curve=some.curve(T0, count=7))
+    assert save(site, result(cut)) == SavedLoop(changed=1)
+    assert save(site, result(cut)) == SavedLoop()
+    assert (rows(site, "measurement"), rows(site, "curve")) == (3, 2)
 
 
 @pytest.mark.parametrize(

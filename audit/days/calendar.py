@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Collection, Iterable, Mapping
 from dataclasses import dataclass
 from datetime import date, datetime, time, timedelta
+from functools import lru_cache
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -41,8 +42,9 @@ def _days_near(runs: LoopRuns) -> list[date]:
     """The days a run may lie in, whatever the time zone; years between runs are passed over."""
     numbers: set[int] = set()
     for found in runs.values():
-        ends = np.stack((found.first_us // DAY_US, found.last_us // DAY_US))
-        for first, last in np.unique(ends, axis=1).T.tolist():
+        firsts, lasts = found.first_us // DAY_US, found.last_us // DAY_US
+        other = np.append(True, (firsts[1:] != firsts[:-1]) | (lasts[1:] != lasts[:-1]))
+        for first, last in zip(firsts[other].tolist(), lasts[other].tolist(), strict=True):
             numbers.update(range(first - 1, last + 2))
     return [EPOCH.date() + timedelta(days=number) for number in sorted(numbers)]
 
@@ -54,6 +56,7 @@ def join_days(days: Iterable[LoopRuns]) -> LoopRuns:
     return {role: join(found) for role, found in by_role.items() if found}
 
 
+@lru_cache(maxsize=1024)
 def _bounds(day: date, zone: ZoneInfo) -> Span:
     """First microsecond of a local day and of the next: 23, 24 or 25 hours apart as a rule."""
     start, end = (
@@ -86,18 +89,20 @@ class _Known:
     end_us: NDArray[np.int64]
     state: NDArray[np.int8]
 
-    def spent(self, from_us: int, to_us: int, states: Collection[State]) -> int:
-        """Microseconds within from_us..to_us in one of the states."""
-        spent = np.minimum(self.end_us, to_us) - np.maximum(self.start_us, from_us)
-        return int(np.maximum(spent, 0)[np.isin(self.state, list(states))].sum())
+    def between(self, from_us: int, to_us: int) -> _Known:
+        """What is known at from_us <= t < to_us, or holds there."""
+        start = int(self.end_us.searchsorted(from_us, "left"))
+        stop = max(int(self.start_us.searchsorted(to_us, "left")), start)
+        return _Known(
+            np.maximum(self.start_us[start:stop], from_us),
+            np.minimum(self.end_us[start:stop], to_us),
+            self.state[start:stop],
+        )
 
-    def reach(self, from_us: int, to_us: int) -> Span | None:
-        """From and to of what is known at from_us <= t < to_us, or holds there; None: nothing."""
-        inside = np.flatnonzero((self.end_us >= from_us) & (self.start_us < to_us))
-        if len(inside) == 0:
-            return None
-        start, end = self.start_us[inside[0]], self.end_us[inside[-1]]
-        return max(int(start), from_us), min(int(end), to_us)
+    def spent(self, state: State) -> int:
+        """Microseconds in a state."""
+        held = self.state == state
+        return int((self.end_us[held] - self.start_us[held]).sum())
 
 
 def _known(runs: Runs, silence_us: int) -> _Known:
@@ -109,22 +114,25 @@ def _known(runs: Runs, silence_us: int) -> _Known:
 def _day(
     known: Mapping[Role, _Known], loop: Loop, day: date, start_us: int, end_us: int
 ) -> DayRecord:
-    def spent(role: Role, *states: State) -> int:
-        return known[role].spent(start_us, end_us, states) if role in known else 0
+    inside = {role: one.between(start_us, end_us) for role, one in known.items()}
 
-    reaches = [reach for k in known.values() if (reach := k.reach(start_us, end_us)) is not None]
+    def spent(role: Role, state: State) -> int:
+        return inside[role].spent(state) if role in inside else 0
+
+    reaches = [(int(k.start_us[0]), int(k.end_us[-1])) for k in inside.values() if len(k.state)]
     span_us = max(r[1] for r in reaches) - min(r[0] for r in reaches) if reaches else 0
     auto_us = spent(Role.MODE, State.PLAIN)
-    mode_us = spent(Role.MODE, State.PLAIN, State.MARKED)
+    mode_us = auto_us + spent(Role.MODE, State.MARKED)
     if loop.mode is None:
         auto_us = mode_us = span_us
+    saturated_us = spent(Role.OUTPUT, State.MARKED)
     return DayRecord(
         day=day,
         span_us=span_us,
         auto_us=auto_us,
         mode_us=mode_us,
-        saturated_us=spent(Role.OUTPUT, State.MARKED),
-        output_us=spent(Role.OUTPUT, State.PLAIN, State.MARKED),
+        saturated_us=saturated_us,
+        output_us=saturated_us + spent(Role.OUTPUT, State.PLAIN),
         pv_bad_us=span_us - spent(Role.PV, State.PLAIN),
     )
 

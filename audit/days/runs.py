@@ -12,6 +12,8 @@ from numpy.typing import NDArray
 from audit.records import Loop, Reading, Record, Role, Samples
 
 Span = tuple[int, int]
+STRETCH = 64
+"""So many stamps at once are looked at for a silence."""
 
 
 class State(IntEnum):
@@ -91,13 +93,15 @@ def runs_of(
 
 
 def _states(role: Role, samples: Samples, loop: Loop) -> NDArray[np.int8]:
-    state = np.full(len(samples), State.PLAIN, np.int8)
     if role is Role.MODE:
-        state[samples.value < 0.5] = State.MARKED
+        state = (samples.value < 0.5).view(np.int8)
     elif role is Role.OUTPUT:
         low, high = loop.output_limits
-        state[(samples.value <= low) | (samples.value >= high)] = State.MARKED
-    state[~samples.good] = State.BAD
+        state = ((samples.value <= low) | (samples.value >= high)).view(np.int8)
+    else:
+        state = np.zeros(len(samples), np.int8)
+    if not samples.good.all():
+        state[~samples.good] = State.BAD
     return state
 
 
@@ -110,13 +114,27 @@ def _runs(
 ) -> Runs:
     stamps = samples.t_us
     starts, ends = np.array([*spans], np.int64).reshape(-1, 2).T
-    part = np.searchsorted(np.sort(starts), stamps, "right")
-    part += np.searchsorted(np.sort(ends), stamps, "left")
-    breaks = (np.diff(state) != 0) | (np.diff(part) != 0)
-    breaks |= np.diff(stamps) > reading.silence_us[role]
-    first = np.concatenate(([0], np.flatnonzero(breaks) + 1))
-    last = np.concatenate((first[1:], [len(stamps)])) - 1
+    breaks = np.concatenate(
+        (
+            [0],
+            np.flatnonzero(state[1:] != state[:-1]) + 1,
+            _after_silence(stamps, reading.silence_us[role]),
+            np.searchsorted(stamps, starts, "left"),
+            np.searchsorted(stamps, ends, "right"),
+            [len(stamps)],
+        )
+    )
+    borders = np.unique(breaks)
+    first, last = borders[:-1], borders[1:] - 1
     return Runs(stamps[first], stamps[last], state[first])
+
+
+def _after_silence(stamps: NDArray[np.int64], silence_us: int) -> NDArray[np.int64]:
+    """Which stamps [k] come after a silence; where no stretch of some is that long none does."""
+    far = np.append(stamps[::STRETCH], stamps[-1])
+    if (far[1:] - far[:-1] <= silence_us).all():
+        return np.empty(0, np.int64)
+    return np.flatnonzero(stamps[1:] - stamps[:-1] > silence_us) + 1
 
 
 def merge(kept: LoopRuns, new: LoopRuns, replaced: Mapping[Role, Sequence[Span]]) -> LoopRuns:

@@ -55,12 +55,12 @@ def find(record: Record, loop: Loop, reading: Reading) -> list[SetpointChange]:
     pv = record.of(Role.PV).only_good()
     mode = record.of(Role.MODE).only_good() if loop.mode is not None else None
     following = Following(sp, pv, mode, loop.windows)
-    moves = moves_of(sp, loop.windows)
+    moves = moves_of(sp, following.changes, loop.windows)
     automatic = following.at_moves(moves.at)
     if mode is not None and not automatic.all():
         own = automatic | ~following.copies(moves.at)
         moves, automatic = Moves(moves.at[own], moves.noise_eu[own]), automatic[own]
-    newest_us = max(int(s.only_good().t_us[-1]) for s in record.signals.values() if s.good.any())
+    newest_us = max(_newest_us(s) for s in record.signals.values() if s.good.any())
     scene = _Scene(
         sp,
         moves,
@@ -72,6 +72,11 @@ def find(record: Record, loop: Loop, reading: Reading) -> list[SetpointChange]:
     )
     groups = sorted(scene.groups(automatic), key=lambda group: group.at_us)
     return [scene.change(group) for group in groups]
+
+
+def _newest_us(samples: Samples) -> int:
+    """Stamp of the last good sample; there is one."""
+    return int(samples.t_us[len(samples) - 1 - int(samples.good[::-1].argmax())])
 
 
 @dataclass(frozen=True)

@@ -14,7 +14,7 @@ from functools import cached_property
 import numpy as np
 
 from audit.records import Samples, Windows
-from audit.setpoints.moves import Flags, Floats, Indices, changed
+from audit.setpoints.moves import Flags, Floats, Indices, changes, portions
 
 NEAR = 0.75
 """A change that ends within this part of its own size of the process variable may be a copy."""
@@ -22,6 +22,8 @@ MANY = 3
 NEARER = 0.6
 """So many changes that together have at most this part of the distance left that there was: the
 setpoint tracks. Changes of a followed setpoint go away from the process variable."""
+BEHIND = 3
+"""Samples of the process variable that a copy may be made from: the newest and those before."""
 JUMP = 0.1
 """A jump that ends within this part of its size of where the process variable was is a copy."""
 
@@ -46,7 +48,7 @@ class Following:
 
     def copies(self, moves: Indices) -> Flags:
         """Which of the moves [k] only copy the process variable."""
-        return np.isin(moves, self._changes[self._copied])
+        return np.isin(moves, self.changes[self._copied])
 
     def when(self, at_us: int, first: int, moving: bool) -> bool:
         """Whether the setpoint is followed at ``at_us``, from where its sample ``first`` moved.
@@ -73,10 +75,9 @@ class Following:
 
     def _tracks(self, at_us: int, first: int) -> bool:
         """Whether the setpoint copies the process variable from before to after ``at_us``."""
-        own = int(np.searchsorted(self._changes, first))
-        stamps = self.sp.t_us[self._changes]
-        start = int(np.searchsorted(stamps, at_us - self.windows.before_us, "left"))
-        stop = int(np.searchsorted(stamps, at_us + self.windows.after_us, "right"))
+        own = int(np.searchsorted(self.changes, first))
+        start = int(np.searchsorted(self._stamps, at_us - self.windows.before_us, "left"))
+        stop = int(np.searchsorted(self._stamps, at_us + self.windows.after_us, "right"))
         if stop - start < MANY or not self._copied[own]:
             return False
         left, reached = self._distances
@@ -91,36 +92,58 @@ class Following:
         return bool(abs(self.sp.value[first] - self.pv.value[earlier]) <= JUMP * size)
 
     @cached_property
-    def _changes(self) -> Indices:
+    def changes(self) -> Indices:
         """Indices of the setpoint samples whose value differs from the one before."""
-        return np.flatnonzero(changed(self.sp.value))
+        return changes(self.sp.value)
+
+    @cached_property
+    def _stamps(self) -> Indices:
+        """Stamps of the changes, microseconds."""
+        return self.sp.t_us[self.changes]
 
     @cached_property
     def _copied(self) -> Flags:
         """Which of the changes only copy the process variable: they end where it was."""
         left, reached = self._distances
-        size = np.abs(self.sp.value[self._changes] - self.sp.value[self._changes - 1])
-        return (reached <= NEAR * size) & (reached < left)
+        copied = np.empty(len(left), np.bool_)
+        first = 0
+        for at in portions(self.changes):
+            some = slice(first, first + len(at))
+            size = np.abs(self.sp.value[at] - self.sp.value[at - 1])
+            copied[some] = (reached[some] <= NEAR * size) & (reached[some] < left[some])
+            first += len(at)
+        return copied
 
     @cached_property
     def _distances(self) -> tuple[Floats, Floats]:
-        """Distance from the process variable that each change left, and that it reached, in eu.
+        """Distance from the process variable that each change left, and that it reached, in eu."""
+        some = [self._distances_of(at) for at in portions(self.changes)]
+        none = np.empty(0)
+        return (
+            np.concatenate([none, *(left for left, _ in some)]),
+            np.concatenate([none, *(reached for _, reached in some)]),
+        )
+
+    def _distances_of(self, at: Indices) -> tuple[Floats, Floats]:
+        """The same of the changes ``at`` [k].
 
         Of the process variable the last sample up to the change counts, or one of the two before it
         if they are recent and nearer: the setpoint may be a scan or two behind. Without any: 0, 1.
         """
-        at = self._changes
-        newest = np.searchsorted(self.pv.t_us, self.sp.t_us[at], "right") - 1
-        recent_us = self.sp.t_us[at] - min(self.windows.join_us, self.windows.before_us)
+        stamps, now, last = self.sp.t_us[at], self.sp.value[at], self.sp.value[at - 1]
+        low = max(int(self.pv.t_us.searchsorted(stamps[0], "right")) - BEHIND, 0)
+        high = int(self.pv.t_us.searchsorted(stamps[-1], "right"))
+        pv_us, pv = self.pv.t_us[low:high], self.pv.value[low:high]
+        newest = np.searchsorted(pv_us, stamps, "right") - 1
+        recent_us = stamps - min(self.windows.join_us, self.windows.before_us)
         left, reached = np.zeros(len(at)), np.where(newest < 0, 1.0, np.inf)
-        for back in range(3):
+        for back in range(BEHIND):
             known = np.flatnonzero(newest >= back)
-            pv = newest[known] - back
             if back > 0:
-                recent = self.pv.t_us[pv] >= recent_us[known]
-                known, pv = known[recent], pv[recent]
-            now = np.abs(self.sp.value[at[known]] - self.pv.value[pv])
-            before = np.abs(self.sp.value[at[known] - 1] - self.pv.value[pv])
-            nearer = now < reached[known]
-            reached[known[nearer]], left[known[nearer]] = now[nearer], before[nearer]
+                known = known[pv_us[newest[known] - back] >= recent_us[known]]
+            value = pv[newest[known] - back]
+            distance = np.abs(now[known] - value)
+            nearer = distance < reached[known]
+            known = known[nearer]
+            reached[known], left[known] = distance[nearer], np.abs(last[known] - value[nearer])
         return left, reached

@@ -4,19 +4,21 @@ from __future__ import annotations
 
 import hashlib
 from collections import defaultdict
-from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from datetime import datetime
+from functools import cache
 from typing import Any
 
-from sqlalchemy import delete, select, tuple_, update
+from sqlalchemy import bindparam, delete, select, tuple_, update
 from sqlalchemy.orm import Session
 
 from audit.errors import UnknownLoop
 from audit.records import LoopResult, MeasuredStep, Record
-from audit.store.bulk import add, portions
+from audit.store import codec_first
+from audit.store.bulk import JsonText, add, portions, put
 from audit.store.closed import Closed, loop_and_closed
-from audit.store.codec import Packed, pack
+from audit.store.codec import Packed, encode, pack
 from audit.store.engine import compact_json
 from audit.store.entries import SavedLoop
 from audit.store.payload import step_values
@@ -29,6 +31,8 @@ from audit.store.tables import (
     VerdictRow,
 )
 
+_JSON_COLUMNS = ("moves", "change_set_aside", "measured", "set_aside")
+
 
 @dataclass
 class _Past:
@@ -38,7 +42,14 @@ class _Past:
     curve_number: int = 0
     current: int | None = None
     fingerprint: bytes = b""
-    curves: dict[bytes, int] | None = None
+    curves: dict[bytes, int] = field(default_factory=dict)
+
+    def curve_like(self, packed: Packed, curve: Record) -> int | None:
+        """The number of the stored curve with this content, in whichever encoding."""
+        found = self.curves.get(packed.digest)
+        if found is None and self.curves:
+            found = self.curves.get(codec_first.digest(curve))
+        return found
 
 
 def save_loop(s: Session, result: LoopResult, now: datetime) -> SavedLoop:
@@ -104,20 +115,21 @@ def _fresh(
             "depends_to_us": one.depends_to_us,
         }
         verdicts = _verdict_values(one)
-        fingerprint = _fingerprint(values, verdicts, packed)
+        texts = {name: JsonText(compact_json(values[name])) for name in _JSON_COLUMNS}
+        fingerprint = _fingerprint(values, texts, verdicts, packed)
         known = past[values["at_us"]]
-        if known.current is not None and known.fingerprint == fingerprint:
+        if known.current is not None and (
+            known.fingerprint == fingerprint
+            or known.fingerprint == _first_fingerprint(values, verdicts, one.curve)
+        ):
             continue
         key = {"loop_id": loop_id, "at_us": values["at_us"], "number": known.number + 1}
-        curve_number = (known.curves or {}).get(packed.digest)
+        curve_number = known.curve_like(packed, one.curve)
         if curve_number is None:
             curve_number = known.curve_number + 1
             fresh.curves.append(_curve_values(key | {"number": curve_number}, one.curve, packed))
-        fresh.measurements.append(
-            values
-            | key
-            | {"curve_number": curve_number, "fingerprint": fingerprint, "measured_at": now}
-        )
+        own = {"curve_number": curve_number, "fingerprint": fingerprint, "measured_at": now}
+        fresh.measurements.append(values | texts | key | own)
         fresh.verdicts += [verdict | key for verdict in verdicts]
     return fresh
 
@@ -125,36 +137,38 @@ def _fresh(
 def _past(s: Session, loop_id: int, stamps: Sequence[int]) -> dict[int, _Past]:
     past: dict[int, _Past] = defaultdict(_Past)
     for some in portions(stamps):
-        rows = s.execute(
-            select(
-                MeasurementRow.at_us,
-                MeasurementRow.number,
-                MeasurementRow.superseded_at,
-                MeasurementRow.fingerprint,
-                MeasurementRow.curve_number,
-                CurveRow.digest,
-            )
-            .join_from(MeasurementRow, CurveRow, _same_curve())
-            .where(
-                MeasurementRow.loop_id == loop_id,
-                MeasurementRow.at_us.in_(some),
-            )
-        )
-        for row in rows:
+        for row in s.connection().execute(_past_query(), {"loop_id": loop_id, "stamps": some}):
             one = past[row.at_us]
             one.number = max(one.number, row.number)
             one.curve_number = max(one.curve_number, row.curve_number)
-            one.curves = (one.curves or {}) | {row.digest: row.curve_number}
+            one.curves[row.digest] = row.curve_number
             if row.superseded_at is None:
                 one.current, one.fingerprint = row.number, row.fingerprint
     return past
 
 
-def _same_curve() -> Any:
+@cache
+def _past_query() -> Any:
+    measurement, curve = MeasurementRow.__table__.c, CurveRow.__table__.c
+    same_curve = (
+        (measurement.loop_id == curve.loop_id)
+        & (measurement.at_us == curve.at_us)
+        & (measurement.curve_number == curve.number)
+    )
     return (
-        (MeasurementRow.loop_id == CurveRow.loop_id)
-        & (MeasurementRow.at_us == CurveRow.at_us)
-        & (MeasurementRow.curve_number == CurveRow.number)
+        select(
+            measurement.at_us,
+            measurement.number,
+            measurement.superseded_at,
+            measurement.fingerprint,
+            measurement.curve_number,
+            curve.digest,
+        )
+        .join_from(MeasurementRow.__table__, CurveRow.__table__, same_curve)
+        .where(
+            measurement.loop_id == bindparam("loop_id"),
+            measurement.at_us.in_(bindparam("stamps", expanding=True)),
+        )
     )
 
 
@@ -185,8 +199,24 @@ def _verdict_values(one: MeasuredStep) -> list[dict[str, Any]]:
     ]
 
 
-def _fingerprint(values: dict[str, Any], verdicts: list[dict[str, Any]], packed: Packed) -> bytes:
-    content = compact_json([values, verdicts]).encode() + packed.digest
+def _fingerprint(
+    values: Mapping[str, Any],
+    texts: Mapping[str, str],
+    verdicts: Sequence[Mapping[str, Any]],
+    packed: Packed,
+) -> bytes:
+    """What a measurement is told from another by: all that is stored of it, and its curve."""
+    plain = [value for name, value in values.items() if name not in texts]
+    judged = [list(verdict.values()) for verdict in verdicts]
+    content = "\n".join((compact_json([plain, judged]), *texts.values()))
+    return hashlib.blake2b(content.encode() + packed.digest, digest_size=16).digest()
+
+
+def _first_fingerprint(
+    values: Mapping[str, Any], verdicts: Sequence[Mapping[str, Any]], curve: Record
+) -> bytes:
+    """The same as it was made when curves were stored in the first encoding."""
+    content = compact_json([values, verdicts]).encode() + codec_first.digest(curve)
     return hashlib.blake2b(content, digest_size=16).digest()
 
 
@@ -214,18 +244,17 @@ def _replace_edges(s: Session, loop_id: int, result: LoopResult) -> None:
                 "side": edge.side,
                 "from_us": from_us,
                 "to_us": to_us,
-                "data": pack(edge.record).data,
+                "data": encode(edge.record),
             }
         )
-    gone = [(row["border_us"], row["side"]) for row in rows] + list(result.dropped_edges)
-    for some in portions(gone):
+    for some in portions(result.dropped_edges):
         s.execute(
             delete(EdgeRow).where(
                 EdgeRow.loop_id == loop_id,
                 tuple_(EdgeRow.border_us, EdgeRow.side).in_(some),
             )
         )
-    add(s, EdgeRow, rows)
+    put(s, EdgeRow, rows)
 
 
 def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
@@ -243,19 +272,10 @@ def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
         }
         for kept in result.days
     ]
-    days = [row["day"] for row in rows]
-    for some in portions(days):
-        s.execute(delete(DayRow).where(DayRow.loop_id == loop_id, DayRow.day.in_(some)))
-    add(s, DayRow, rows)
+    put(s, DayRow, rows)
 
 
 def _replace_tag_states(s: Session, loop_id: int, result: LoopResult) -> None:
-    roles = [role.value for role in result.tag_states]
-    if not roles:
-        return
-    s.execute(
-        delete(TagStateRow).where(TagStateRow.loop_id == loop_id, TagStateRow.role.in_(roles))
-    )
     rows = [
         {
             "loop_id": loop_id,
@@ -266,4 +286,4 @@ def _replace_tag_states(s: Session, loop_id: int, result: LoopResult) -> None:
         }
         for role, state in result.tag_states.items()
     ]
-    add(s, TagStateRow, rows)
+    put(s, TagStateRow, rows)
