@@ -19,7 +19,7 @@ from audit.records import (
     Samples,
 )
 from audit.response import measure, order
-from reference import second_order, steps
+from reference import archive, second_order, steps
 
 SHAPE = (Quantity.RISE_TIME, Quantity.OVERSHOOT, Quantity.SETTLING_TIME_5PCT)
 
@@ -38,22 +38,13 @@ def holds(found: Measured, truth: float) -> bool:
     return found.low <= truth <= found.high
 
 
-def by_exception(y: steps.Array, t: steps.Array, deadband: float, longest_s: float) -> list[int]:
-    """Which samples an exception-reporting historian keeps (common practice, no source)."""
-    kept = [0]
-    for i in range(1, len(t)):
-        if abs(y[i] - y[kept[-1]]) > deadband or t[i] - t[kept[-1]] >= longest_s:
-            kept.append(i)
-    return kept
-
-
 def reported(deadband: float, seed: int, between: Between = Between.HOLD) -> steps.Made:
     """z = 0.5, w = 1, scanned each 0.1 s, noise 0.5 % of the step, reported by exception."""
     rng = np.random.default_rng(seed)
     t = steps.stamps(0.1, 60.0, before_s=80.0, past_s=10.0)
     y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
     y = y + 0.005 * rng.standard_normal(len(t))
-    kept = by_exception(y, t, deadband, 60.0)
+    kept = archive.by_exception(t, y, deadband, 60.0)
     made = steps.make(t[kept], y[kept], 60.0)
     settings = replace(made.settings, reading=Reading(pv_between=between))
     return steps.Made(made.record, made.change, settings)
@@ -86,29 +77,6 @@ def test_a_large_reporting_deadband_is_refused(deadband: float) -> None:
         assert error.high - error.value > 1.9 * 5.0 * deadband / np.sqrt(3.0)
 
 
-def swinging_door(t: steps.Array, y: steps.Array, reach: float) -> list[int]:
-    """Which samples a swinging-door archive keeps (Bristol, US patent 4669097, 1987)."""
-    kept, origin, steepest, flattest = [0], 0, -np.inf, np.inf
-    i = 1
-    while i < len(t):
-        span = t[i] - t[origin]
-        steepest = max(steepest, (y[i] - reach - y[origin]) / span)
-        flattest = min(flattest, (y[i] + reach - y[origin]) / span)
-        if steepest > flattest:
-            origin = i - 1
-            kept.append(origin)
-            steepest, flattest = -np.inf, np.inf
-        else:
-            i += 1
-    return [*kept, len(t) - 1]
-
-
-def test_the_swinging_door_keeps_what_a_hand_calculation_keeps() -> None:
-    """By hand, for t = 0..7 and reach 0.5: 0, 4, 6, 7."""
-    y = np.array([0.0, 1.0, 2.0, 3.0, 3.0, 3.0, 3.0, 0.0])
-    assert swinging_door(np.arange(8.0), y, 0.5) == [0, 4, 6, 7]
-
-
 @pytest.mark.parametrize("reach", [0.01, 0.02, 0.05, 0.1])
 def test_a_swinging_door_archive_gives_bounds_or_reasons_and_nothing_false(reach: float) -> None:
     """z = 0.5, 0.5 % noise: what is told holds the closed form, what is not told has a reason."""
@@ -116,7 +84,7 @@ def test_a_swinging_door_archive_gives_bounds_or_reasons_and_nothing_false(reach
     t = steps.stamps(0.1, 60.0, before_s=80.0, past_s=10.0)
     y = np.where(t > 0, second_order.response(np.maximum(t, 0.0), 0.5), 0.0)
     y = y + 0.005 * rng.standard_normal(len(t))
-    kept = swinging_door(t, y, reach)
+    kept = archive.swinging_door(t, y, reach)
     measured = steps.make(t[kept], y[kept], 60.0).measure().measured
     allowed = {Reason.COMPRESSED, Reason.TOO_SPARSE, Reason.NOISY, Reason.CUT_SHORT, Reason.GAP}
     for quantity, truth in exact(0.5).items():

@@ -83,9 +83,12 @@ class Constants:
     sparse_when_u: float = 0.4
     """standard uncertainties at that many, in parts of the change and of an interval."""
     compressed_share: float = 0.055
+    """A deadband beyond this share of the change leaves nothing of the shape, …"""
+    compressed_peak: float = 0.03
+    """… beyond this it may hide a peak, …"""
     compressed_band: float = 2.3
-    """Deadband beyond 5 % of the change, or beyond the band / 2.5 for settling, a little
-    slack given because the deadband is seen a little too large."""
+    """… and beyond the band over this the settling; a little slack is in all three, for the
+    deadband is seen a little too large."""
     regular_share: float = 0.95
     """With so many intervals alike (within 5 %) nothing was thinned out."""
     edge_chance: float = 1e-3

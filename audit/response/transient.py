@@ -136,16 +136,20 @@ def _still_rising(view: View, path: Path, last: float) -> dict[Quantity, Measure
 
 
 def _no_peak(view: View, path: Path, t10: float) -> dict[Quantity, Measured]:
-    """No maximum beyond noise: an overshoot of about 0 with its interval."""
+    """No maximum beyond noise: an overshoot of about 0 with its interval.
+
+    A large deadband may hide a peak: then it is not said that there is none.
+    """
     after = path.x[path.t > t10]
     most = float(after.max()) - 1.0 if len(after) else 0.0
     noise_sd = float(np.sqrt(max(path.sd**2 - view.noise.coarse**2, 0.0)))
     value = max(most - CONSTANTS.chance_peak_sd * noise_sd, 0.0)
     u = float(np.hypot(path.sd, view.u1))
     bound = interval(100.0 * value, 100.0 * u, view.how, 0.0)
+    hidden = view.noise.deadband > CONSTANTS.compressed_peak
     found = dict.fromkeys(
         (Quantity.PEAK_TIME, Quantity.DECAY_RATIO, Quantity.DAMPED_PERIOD),
-        Measured.missing(Reason.NO_PEAK),
+        Measured.missing(Reason.COMPRESSED if hidden else Reason.NO_PEAK),
     )
     found[Quantity.OVERSHOOT] = replace(bound, low=0.0)
     return found
