@@ -1,251 +1,258 @@
-"""Where exports lie: an export source comes in, its files go out; then one file's bytes.
+"""One export file comes in; its content goes out as a stream, or as a file to look up things in.
 
-Local globs are relative to the site's folder; anything with ``://`` goes to fsspec as a URL.
-Endings .gz .bz2 .xz .zst are opened. Every failure of one file is an ``ExportRefused``.
+Memory stays bounded whatever the size and whatever it unpacks to. A file counts as whole if its
+size and modification stamp are the same before and after, its compression comes to an end, and,
+of a CSV, its last row does: no file is left out for being young. A writer that pauses between two
+whole rows of a plain file is not noticed; what it adds later makes the file new, to be read again.
 """
 
 from __future__ import annotations
 
-import bz2
-import glob
-import gzip
-import hashlib
 import io
-import lzma
-import os
-import re
-import zlib
-from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
+import tempfile
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
 from dataclasses import dataclass
-from pathlib import PurePath
-from typing import Any, BinaryIO, cast
-
-import fsspec
-import zstandard
-from fsspec.implementations.local import LocalFileSystem
+from pathlib import Path
+from typing import IO, Any, BinaryIO
 
 from audit.errors import ExportRefused
+from audit.exports.digest import Digest
+from audit.exports.packing import BROKEN, PIECE, Unpacker, ending
+from audit.exports.places import discover, revision, same_file
+from audit.exports.stored import Stored, stored
 from audit.records import ExportFile, ExportSource
 
-_BROKEN = (OSError, EOFError, ValueError, zlib.error, lzma.LZMAError, zstandard.ZstdError)
-_MOST_REVISED = 10**18 - 1
-_STAMPS = ("ETag", "etag", "mtime", "LastModified", "last_modified", "updated", "modified")
+__all__ = [
+    "Fetched",
+    "Opened",
+    "discover",
+    "fetch",
+    "on_disk",
+    "opened",
+    "revision",
+    "same_file",
+    "streamed",
+]
+
+RATIO_FROM = 64_000_000
+"""Octets of content from which the ratio to the stored ones is looked at."""
+_COPIED = 1 << 23
+_MB = 1_000_000
+
+
+class Opened:
+    """The decompressed content of one file, in order. Every method raises ExportRefused."""
+
+    def __init__(self, held: Stored, file: ExportFile, source: ExportSource) -> None:
+        self._held, self._path, self._limits = held, file.path, source.limits
+        self._digest = Digest()
+        self._taken = self._given = 0
+        self._hash: str | None = None
+        self._kind = ending(file.path)
+        self._unpacker = Unpacker(self._kind, self._stored) if self._kind else None
+        self._ahead = memoryview(b"")
+        self._check_stored(held.size or 0)
+
+    @property
+    def content_hash(self) -> str:
+        """SHA-256 of the stored bytes. ValueError before the content was read to its end."""
+        if self._hash is None:
+            raise ValueError("the content was not read to its end")
+        return self._hash
+
+    def read(self, most: int) -> bytes:
+        """The next ``most`` octets (over 0), fewer only at the end; b"" behind it.
+
+        Where it meets the end, it refuses a file that is not as it was when it was opened, or that
+        holds nothing. The piece is never changed afterwards.
+        """
+        parts: list[bytes] = []
+        missing = most
+        while missing and self._hash is None:
+            piece = self._piece(missing)
+            if not piece:
+                self._end()
+                break
+            parts.append(piece)
+            missing -= len(piece)
+        return parts[0] if len(parts) == 1 else b"".join(parts)
+
+    def finish(self) -> str:
+        """Reads what is left, with all checks. Gives the hash."""
+        while self._hash is None:
+            self.read(_COPIED)
+        return self.content_hash
+
+    def close(self) -> None:
+        self._digest.close()
+
+    def _piece(self, most: int) -> bytes:
+        if self._unpacker is None:
+            return self._counted(self._stored(most))
+        if not self._ahead:
+            piece = self._counted(self._unpacked(self._unpacker))
+            if len(piece) <= most:
+                return piece
+            self._ahead = memoryview(piece)
+        piece, self._ahead = bytes(self._ahead[:most]), self._ahead[most:]
+        return piece
+
+    def _unpacked(self, unpacker: Unpacker) -> bytes:
+        try:
+            return unpacker.read(PIECE)
+        except BROKEN as error:
+            self.check_unchanged()
+            raise ExportRefused(
+                self._path,
+                f"cannot be decompressed as its ending {self._kind} says: {error}",
+                "the file is cut short or of another kind; export it again",
+            ) from error
+
+    def _counted(self, piece: bytes) -> bytes:
+        self._given += len(piece)
+        self._check_unpacked()
+        return piece
+
+    def _stored(self, most: int) -> bytes:
+        piece = self._held.read(most)
+        self._taken += len(piece)
+        if self._held.size is not None and self._taken > self._held.size:
+            raise self._unfinished()
+        self._check_stored(self._taken)
+        self._digest.update(piece)
+        return piece
+
+    def _end(self) -> None:
+        self.check_unchanged()
+        if self._held.size not in (None, self._taken):
+            raise self._unfinished()
+        if not self._given:
+            raise ExportRefused(self._path, "the file is empty", "export it again")
+        self._hash = self._digest.hexdigest()
+
+    def check_unchanged(self) -> None:
+        """Refuses a file that is not as it was when it was opened."""
+        if self._held.changed():
+            raise self._unfinished()
+
+    def _unfinished(self) -> ExportRefused:
+        return ExportRefused(self._path, "still being written", "left for the next run")
+
+    def _check_stored(self, size: int) -> None:
+        if size > self._limits.largest_file_bytes:
+            raise ExportRefused(
+                self._path,
+                f"holds {_mb(max(size, self._held.size or 0))}, more than the "
+                f"{_mb(self._limits.largest_file_bytes)} allowed",
+                "export shorter spans, or raise largest_file_mb under [intake] in site.toml",
+            )
+
+    def _check_unpacked(self) -> None:
+        if self._given > self._limits.largest_unpacked_bytes:
+            raise ExportRefused(
+                self._path,
+                f"unpacks to more than the {_mb(self._limits.largest_unpacked_bytes)} allowed",
+                "export shorter spans, or raise largest_unpacked_mb under [intake] in site.toml",
+            )
+        stored_bytes = self._held.size or self._taken
+        if self._given > max(RATIO_FROM, self._limits.largest_ratio * stored_bytes):
+            raise ExportRefused(
+                self._path,
+                f"unpacks to more than {self._limits.largest_ratio} times its "
+                f"{_mb(stored_bytes)}: an archive bomb, or nothing but repetition",
+                "see what wrote it; if it is right raise largest_ratio under [intake] in site.toml",
+            )
+
+
+@contextmanager
+def opened(file: ExportFile, source: ExportSource) -> Iterator[Opened]:
+    """The decompressed content of a file as a stream. Raises ExportRefused, as ``Opened`` does.
+
+    Refused: gone, unreadable, empty, not a plain file, a link out of the export's folder, still
+    being written, cut short or damaged in its compression, beyond a limit of the source.
+    """
+    with stored(file, source) as held, closing(Opened(held, file, source)) as content:
+        yield content
+
+
+@contextmanager
+def on_disk(file: ExportFile, source: ExportSource, scratch: Path) -> Iterator[tuple[Path, str]]:
+    """The decompressed content as a file of this machine, and the SHA-256 of the stored bytes.
+
+    The file itself where it is one, else a copy in the folder ``scratch``, removed at the end.
+    Raises ExportRefused as ``opened``, also for a file that changes while it is in use; an OSError
+    of ``scratch`` (disk full) comes as it is.
+    """
+    with stored(file, source) as held, closing(Opened(held, file, source)) as content:
+        if held.place is None or ending(file.path):
+            with tempfile.NamedTemporaryFile(dir=scratch, suffix=".unpacked") as copy:
+                _copy(content, copy.file)
+                yield Path(copy.name), content.content_hash
+            return
+        content_hash = content.finish()
+        try:
+            yield Path(held.place), content_hash
+        except ExportRefused:
+            content.check_unchanged()
+            raise
+        content.check_unchanged()
+
+
+@contextmanager
+def streamed(file: ExportFile, source: ExportSource) -> Iterator[BinaryIO]:
+    """The decompressed content for looking at its head, not checked for changes at the end.
+
+    A Parquet file can be sought in: its head is found from its end. Refusals as ``opened``.
+    """
+    with stored(file, source) as held, closing(Opened(held, file, source)) as content:
+        if not ending(file.path):
+            with held.said(), held.seekable() as raw:
+                yield raw
+        elif source.format == "parquet":
+            with tempfile.TemporaryFile() as copy:
+                _copy(content, copy)
+                copy.seek(0)
+                yield copy
+        else:
+            yield io.BufferedReader(_Raw(content), PIECE)
 
 
 @dataclass(frozen=True)
-class Stored:
+class Fetched:
     """One file's bytes: ``content_hash`` sha256 as stored, ``data`` after decompression."""
 
     content_hash: str
     data: bytes
 
 
-def discover(source: ExportSource) -> list[ExportFile]:
-    """The files an export source names, in the byte order of their paths.
-
-    A missing folder or no match is an empty list. Paths are relative to the site's folder with
-    ``/``; a URL, or a local pattern given as an absolute path to elsewhere, stays as it is. A file
-    that cannot even be looked at is in the list, to be refused when it is read.
-    Raises ExportRefused where a URL or a folder cannot be listed at all.
-    """
-    found = _listed_url(source) if "://" in source.files else _listed_folder(source)
-    files = [
-        ExportFile(source.name, path, size, stamp, revision(path, source.revision))
-        for path, size, stamp in found
-    ]
-    return sorted(files, key=lambda file: os.fsencode(file.path))
+def fetch(file: ExportFile, source: ExportSource) -> Fetched:
+    """All of a file's content at once. Refusals as ``opened``."""
+    with opened(file, source) as content:
+        data = b"".join(iter(lambda: content.read(_COPIED), b""))
+        return Fetched(content.content_hash, data)
 
 
-def revision(path: str, pattern: str) -> int:
-    """The integer the regular expression finds in the path (first group, else all); none: 0.
+class _Raw(io.RawIOBase):
+    """A content as the standard library has streams."""
 
-    Beyond 18 digits it counts as the largest, or smallest, of that length.
-    """
-    match = re.search(pattern, path) if pattern else None
-    if match is None:
-        return 0
-    text = match.group(1) if match.re.groups else match.group()
-    if not text or re.fullmatch(r"[+-]?\d+", text, re.ASCII) is None:
-        return 0
-    return max(-_MOST_REVISED, min(_MOST_REVISED, int(text[:4000])))
+    def __init__(self, content: Opened) -> None:
+        self._content = content
 
+    def readable(self) -> bool:
+        return True
 
-def fetch(file: ExportFile, source: ExportSource) -> Stored:
-    """All bytes of a file. Refused: gone, unreadable, changed while it was read, truncated."""
-    fs, path = _located(file, source)
-    try:
-        before = _state(fs, path)
-        stored = cast(bytes, fs.cat_file(path))
-        after = _state(fs, path)
-    except FileNotFoundError as error:
-        if "\\" in file.path and os.sep == "/":
-            raise ExportRefused(file.path, "its name is not UTF-8", "rename the file") from error
-        raise ExportRefused(
-            file.path, "the file is gone", "nothing to do if it was moved on purpose"
-        ) from error
-    except OSError as error:
-        raise ExportRefused(
-            file.path,
-            f"cannot be read: {error.strerror or error}",
-            "check the path and its permissions",
-        ) from error
-    if before != after or len(stored) != after[0]:
-        raise ExportRefused(file.path, "still being written", "left for the next run")
-    if not stored:
-        raise ExportRefused(file.path, "the file is empty", "export it again")
-    digest = hashlib.sha256(stored).hexdigest()
-    return Stored(digest, _unpacked(stored, file.path))
+    def readinto(self, into: Any) -> int:
+        piece = self._content.read(len(into))
+        into[: len(piece)] = piece
+        return len(piece)
 
 
-@contextmanager
-def streamed(file: ExportFile, source: ExportSource) -> Iterator[BinaryIO]:
-    """The decompressed content as a stream, for looking at its head; failures as ``fetch``."""
-    fs, path = _located(file, source)
-    opener = _STREAMS.get(_ending(file.path))
-    try:
-        with fs.open(path, "rb") as raw:
-            yield raw if opener is None else opener(raw)
-    except _BROKEN as error:
-        why = getattr(error, "strerror", None) or error
-        raise ExportRefused(
-            file.path, f"cannot be read: {why}", "check the file, export it again"
-        ) from error
+def _copy(content: Opened, to: IO[bytes]) -> None:
+    while piece := content.read(_COPIED):
+        to.write(piece)
+    to.flush()
 
 
-def _listed_folder(source: ExportSource) -> Iterator[tuple[str, int, str]]:
-    _check_folder(source)
-    for found in glob.glob(source.files, root_dir=source.folder, recursive=True):
-        path = os.path.join(source.folder, found)
-        try:
-            status = os.stat(path)
-        except FileNotFoundError:  # moved away since it was listed: as if it had not been there
-            continue
-        except OSError:  # a loop of links, a folder that is closed: refused when it is read
-            yield _relative(found, source.folder), 0, ""
-            continue
-        if os.path.isfile(path):
-            yield _relative(found, source.folder), status.st_size, str(status.st_mtime_ns)
-
-
-def _check_folder(source: ExportSource) -> None:
-    """Refuse a folder that is there and cannot be listed: ``glob`` would call it empty."""
-    fixed = PurePath(source.folder)
-    for part in PurePath(source.files).parts[:-1]:
-        if glob.has_magic(part):
-            break
-        fixed /= part
-    try:
-        with os.scandir(fixed):
-            return
-    except (FileNotFoundError, NotADirectoryError):
-        return
-    except OSError as error:
-        raise ExportRefused(
-            source.files,
-            f"its folder cannot be listed: {error.strerror or error}",
-            "see that the folder is there and that this user may read it",
-        ) from error
-
-
-def _relative(found: str, folder: str) -> str:
-    path = PurePath(os.path.normpath(found))
-    if path.is_absolute() and path.is_relative_to(os.path.abspath(folder)):
-        path = path.relative_to(os.path.abspath(folder))
-    return os.fsencode(path.as_posix()).decode("utf-8", "backslashreplace")
-
-
-def _listed_url(source: ExportSource) -> Iterator[tuple[str, int, str]]:
-    try:
-        fs, pattern = fsspec.core.url_to_fs(source.files)
-        found = sorted(fs.glob(pattern))
-        for path in found:
-            if not fs.isdir(path):
-                size, stamp = _state(fs, path)
-                yield str(fs.unstrip_protocol(path)), size, stamp
-    except FileNotFoundError:
-        return
-    except (OSError, ImportError, ValueError) as error:
-        raise ExportRefused(
-            source.files,
-            f"cannot be listed: {error}",
-            "check the URL, and that the fsspec package for its protocol is installed",
-        ) from error
-
-
-def _located(file: ExportFile, source: ExportSource) -> tuple[Any, str]:
-    if "://" not in file.path:
-        return LocalFileSystem(), os.path.abspath(os.path.join(source.folder, file.path))
-    fs, path = fsspec.core.url_to_fs(file.path)
-    return fs, str(path)
-
-
-def _state(fs: Any, path: str) -> tuple[int, str]:
-    """Size and what tells that a file changed: modification time in ns, ETag, or the like."""
-    if isinstance(fs, LocalFileSystem):
-        status = os.stat(path)
-        return status.st_size, str(status.st_mtime_ns)
-    info: Mapping[str, Any] = fs.info(path)
-    for key in _STAMPS:
-        if info.get(key) is not None:
-            return int(info["size"] or 0), str(info[key])
-    try:
-        return int(info["size"] or 0), str(fs.modified(path))
-    except NotImplementedError:  # the store knows no times: the size alone has to tell
-        return int(info["size"] or 0), ""
-
-
-def _ending(path: str) -> str:
-    return PurePath(path).suffix.lower()
-
-
-def _unpacked(stored: bytes, path: str) -> bytes:
-    unpack = _UNPACK.get(_ending(path))
-    if unpack is None:
-        return stored
-    try:
-        data = unpack(stored)
-    except _BROKEN as error:
-        raise ExportRefused(
-            path,
-            f"cannot be decompressed as its ending {_ending(path)} says: {error}",
-            "the file is cut short or of another kind; export it again",
-        ) from error
-    if not data:
-        raise ExportRefused(path, "the file is empty", "export it again")
-    return data
-
-
-def _unpack_zstd(stored: bytes) -> bytes:
-    """All frames of a Zstandard file; a frame that does not end is an error."""
-    parts: list[bytes] = []
-    while stored:
-        frame = zstandard.ZstdDecompressor().decompressobj()
-        parts.append(frame.decompress(stored))
-        if not frame.eof:
-            raise EOFError("the last frame is cut short")
-        stored = frame.unused_data
-    return b"".join(parts)
-
-
-def _stream_xz(raw: BinaryIO) -> BinaryIO:
-    return cast(BinaryIO, lzma.LZMAFile(raw))
-
-
-def _stream_zstd(raw: BinaryIO) -> BinaryIO:
-    reader = zstandard.ZstdDecompressor().stream_reader(raw, read_across_frames=True)
-    return cast(BinaryIO, io.BufferedReader(cast(io.RawIOBase, reader)))
-
-
-_UNPACK: Mapping[str, Callable[[bytes], bytes]] = {
-    ".gz": gzip.decompress,
-    ".bz2": bz2.decompress,
-    ".xz": lzma.decompress,
-    ".zst": _unpack_zstd,
-}
-_STREAMS: Mapping[str, Callable[[BinaryIO], BinaryIO]] = {
-    ".gz": lambda raw: cast(BinaryIO, gzip.GzipFile(fileobj=raw)),
-    ".bz2": lambda raw: cast(BinaryIO, bz2.BZ2File(raw)),
-    ".xz": _stream_xz,
-    ".zst": _stream_zstd,
-}
+def _mb(size: int) -> str:
+    return f"{size / _MB:.3g} MB" if size < 100 * _MB else f"{size // _MB} MB"
