@@ -9,7 +9,6 @@ from typing import Any
 import fsspec
 import pytest
 from export_files import NARROW, PACKED, WANTED, WIDE, check_wide, parquet_of
-from fsspec.implementations.local import LocalFileSystem
 from fsspec.implementations.memory import MemoryFileSystem
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -215,15 +214,16 @@ def test_a_file_that_changes_while_it_is_read(
     (tmp_path / "a.csv").write_text(WIDE)
     source = ExportSource("dcs", "a.csv", folder=str(tmp_path))
     (file,) = discover(source)
-    as_it_is = LocalFileSystem.cat_file
+    as_it_is = os.read
 
-    def with_a_writer(fs: LocalFileSystem, path: str) -> bytes:
-        data: bytes = as_it_is(fs, path)
-        change(tmp_path / "a.csv")
+    def with_a_writer(descriptor: int, most: int) -> bytes:
+        data = as_it_is(descriptor, most)
+        if WIDE.encode() in data:
+            change(tmp_path / "a.csv")
         return data
 
     with monkeypatch.context() as patched:
-        patched.setattr(LocalFileSystem, "cat_file", with_a_writer)
+        patched.setattr(os, "read", with_a_writer)
         with pytest.raises(ExportRefused, match="still being written") as caught:
             read(file, source, WANTED)
     assert caught.value.remedy == "left for the next run"
