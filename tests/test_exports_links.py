@@ -8,6 +8,7 @@ from __future__ import annotations
 import glob
 import os
 import socket
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
@@ -21,11 +22,13 @@ from audit.exports.files import discover, same_file
 from audit.exports.globbing import matches, split
 
 
-def test_pipes_sockets_and_devices_are_never_opened(tmp_path: Path) -> None:
+def test_pipes_sockets_and_devices_are_never_opened(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     os.mkfifo(tmp_path / "a.csv")
     assert refusal(*found(tmp_path, "a.csv")).reason == "is a pipe, not a file"
     with socket.socket(socket.AF_UNIX) as server:
-        os.chdir(tmp_path)  # a socket's path may have 107 octets
+        monkeypatch.chdir(tmp_path)  # a socket's path may have 107 octets
         server.bind("b.csv")
         assert refusal(*found(tmp_path, "b.csv")).reason == "is a socket, not a file"
     for device in ("/dev/zero", "file:///dev/zero"):
@@ -114,17 +117,23 @@ def test_loops_of_links_end(linked: Path) -> None:
     assert len(told(linked, "exports/*/*/*/*/*/*.csv")) <= 2
 
 
-def test_a_thousand_folders_in_one_another(tmp_path: Path) -> None:
-    here = os.getcwd()
-    os.chdir(tmp_path)
-    try:
-        for _ in range(1000):
-            os.mkdir("d")
-            os.chdir("d")
-        Path("a.csv").write_text("deep")
-    finally:
-        os.chdir(here)
-    assert list(told(tmp_path, "**/*.csv").values()) == ["deep"]
+@pytest.fixture
+def deep(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Path]:
+    """A thousand folders in one another, with a file in the last; taken down one by one."""
+    monkeypatch.chdir(tmp_path)
+    for _ in range(1000):
+        os.mkdir("d")
+        os.chdir("d")
+    Path("a.csv").write_text("deep")
+    yield tmp_path
+    Path("a.csv").unlink()
+    for _ in range(1000):
+        os.chdir("..")
+        os.rmdir("d")
+
+
+def test_a_thousand_folders_in_one_another(deep: Path) -> None:
+    assert list(told(deep, "**/*.csv").values()) == ["deep"]
 
 
 def test_a_folder_below_that_cannot_be_listed_is_said(
