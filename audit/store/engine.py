@@ -22,7 +22,9 @@ from sqlalchemy.pool import ConnectionPoolEntry
 from audit.store.failures import failure, not_opened
 
 BUSY_S = 30.0
+"""How long a writer waits for the one before it."""
 SILENT_S = 60.0
+"""How long a writer on PostgreSQL may be silent in the middle of a transaction."""
 _JSON = json.JSONEncoder(ensure_ascii=False, allow_nan=False, separators=(",", ":"))
 _PURPOSE = "audit_purpose"
 _WAL = "audit_wal"
@@ -108,8 +110,8 @@ def _begin_postgresql(connection: Connection) -> None:
     purpose = connection.get_execution_options().get(_PURPOSE, Purpose.READ)
     if purpose is not Purpose.READ:
         connection.exec_driver_sql(
-            f"SELECT set_config('lock_timeout', '{BUSY_S:.0f}s', true), "
-            f"set_config('idle_in_transaction_session_timeout', '{SILENT_S:.0f}s', true)"
+            f"SELECT set_config('lock_timeout', '{BUSY_S * 1e3:.0f}', true), "
+            f"set_config('idle_in_transaction_session_timeout', '{SILENT_S * 1e3:.0f}', true)"
         )
 
 

@@ -1,8 +1,8 @@
-"""Who holds the lease: a name for people, and the process, for others to see if it still exists.
+"""Who holds the lease: a name for people, and its thread, for others to see if it still exists.
 
-In: what the lease row keeps of its holder, and this machine's table of processes. Out: whether the
-holder is alive, gone, or out of sight. The table is looked at on Linux alone; elsewhere every
-holder is out of sight, and a dead one is replaced when its time has run out.
+In: what the lease row keeps of its holder, and this machine's table of processes and threads. Out:
+whether the holder is alive, gone, or out of sight. The table is looked at on Linux alone; elsewhere
+every holder is out of sight, and a dead one is replaced when its time has run out.
 """
 
 from __future__ import annotations
@@ -15,9 +15,10 @@ from contextlib import suppress
 from dataclasses import asdict, dataclass
 from enum import Enum
 from pathlib import Path
+from threading import get_native_id
 
 Look = Callable[[int], tuple[bool, int | None]]
-"""Process number -> whether there is such a process, and when it began (None: not to be seen)."""
+"""A thread's number -> whether there is such a thread, and when it began (None: hidden)."""
 
 _STATE, _STARTED = 0, 19
 _DEAD_STATES = "ZXx"
@@ -32,24 +33,25 @@ class Life(Enum):
 
 
 @dataclass(frozen=True)
-class Process:
-    """One process, never to be taken for another that gets its number later.
+class Pulse:
+    """The thread that keeps a lease, never to be taken for one that gets its number later.
 
-    ``table``: host, boot and process-number namespace; only processes of one table see each other.
-    ``started``: clock ticks from the boot to its start.
+    It ends with the process, and with the run where the process goes on. ``table``: host, boot and
+    namespace of numbers; only threads of one table see each other. ``started``: clock ticks from
+    the boot to its start.
     """
 
     table: str
-    pid: int
+    thread: int
     started: int
 
 
 @dataclass(frozen=True)
 class Holder:
-    """Who holds the lease: the name others are told, and the process, if it can be recognised."""
+    """Who holds the lease: the name others are told, and its pulse, if it can be seen at all."""
 
     name: str
-    process: Process | None = None
+    pulse: Pulse | None = None
 
     def kept(self) -> str:
         """As it stands in the lease row."""
@@ -61,57 +63,57 @@ class Holder:
         if not kept.startswith("{"):
             return cls(kept)
         found = json.loads(kept)
-        process = found["process"]
-        return cls(found["name"], None if process is None else Process(**process))
+        pulse = found.get("pulse")
+        return cls(found["name"], None if pulse is None else Pulse(**pulse))
 
 
-def life(holder: Holder, own: Process | None, look: Look) -> Life:
-    """Whether a holder still exists, as seen from the process ``own`` through ``look``.
+def life(holder: Holder, own: Pulse | None, look: Look) -> Life:
+    """Whether a holder still exists, as seen from the thread ``own`` through ``look``.
 
-    A holder of another table is out of sight: the same number may be another process there. So is
+    A holder of another table is out of sight: the same number may be another thread there. So is
     one from before the machine was started anew, for a host of the same name may be another one.
     """
-    process = holder.process
-    if process is None or own is None or process.table != own.table:
+    pulse = holder.pulse
+    if pulse is None or own is None or pulse.table != own.table:
         return Life.OUT_OF_SIGHT
-    exists, started = look(process.pid)
-    if not exists or (started is not None and started != process.started):
+    exists, started = look(pulse.thread)
+    if not exists or (started is not None and started != pulse.started):
         return Life.GONE
     return Life.ALIVE
 
 
-def here() -> Process | None:
-    """This process; None where there is no table to look at (proc(5), Linux)."""
+def here() -> Pulse | None:
+    """The calling thread; None where there is no table to look at (proc(5), Linux)."""
     try:
         boot = Path("/proc/sys/kernel/random/boot_id").read_text("ascii").strip()
         namespace = os.readlink("/proc/self/ns/pid")
-        pid, _, started = _stat("self")
-    except OSError:
+        thread, _, started = _stat("thread-self")
+    except (OSError, ValueError, IndexError):
         return None
-    if pid != os.getpid():
+    if thread != get_native_id():
         return None  # the table is that of another namespace
-    return Process(f"{socket.gethostname()}/{boot}/{namespace}", pid, started)
+    return Pulse(f"{socket.gethostname()}/{boot}/{namespace}", thread, started)
 
 
-def look(pid: int) -> tuple[bool, int | None]:
-    """Look a process up (see ``Look``). Only where ``here`` finds a table.
+def look(thread: int) -> tuple[bool, int | None]:
+    """Look a thread up (see ``Look``). Only where ``here`` finds a table.
 
-    A killed process that its parent has not collected yet counts as none. Signal 0 finds processes
-    of other users too where the table hides them; it does nothing to them (kill(2)).
+    One of a killed process that its parent has not collected yet counts as none. Signal 0 finds
+    those of other users too where the table hides them; it does nothing to them (kill(2)).
     """
     try:
         with suppress(PermissionError):
-            os.kill(pid, 0)
-        _, state, started = _stat(str(pid))
+            os.kill(thread, 0)
+        _, state, started = _stat(str(thread))
     except ProcessLookupError:
         return False, None
-    except OSError:
+    except (OSError, ValueError, IndexError):
         return True, None
     return state not in _DEAD_STATES, started
 
 
 def _stat(name: str) -> tuple[int, str, int]:
-    """Number, state and start of a process: fields 1, 3 and 22 of /proc/PID/stat, proc(5)."""
+    """Number, state and start of a thread: fields 1, 3 and 22 of its stat file, proc(5)."""
     text = Path("/proc", name, "stat").read_text("utf-8", errors="replace")
     number, _, _ = text.partition(" ")
     fields = text[text.rindex(")") + 1 :].split()  # the name before it may hold anything

@@ -10,17 +10,16 @@ import time
 from collections.abc import Callable, Iterator
 from contextlib import closing, contextmanager, suppress
 from pathlib import Path
-from threading import Event, Thread
 
 from sqlalchemy import Connection
 from sqlalchemy.orm import Session
 
 from audit.errors import StoreUnready
-from audit.store import holder as holder_of
 from audit.store import lease as lease_row
 from audit.store import schema as schema_of
 from audit.store.engine import Purpose, connected, make_engine
 from audit.store.entries import Lease, Schema
+from audit.store.heartbeat import Heartbeat
 from audit.store.holder import Holder
 from audit.store.urls import checked_url, shown, sqlite_file
 
@@ -120,22 +119,19 @@ def take_lease(
     """Holds the right to write while the block runs.
 
     ``holder`` is what others are told (who, where). A thread puts off the end of the lease every
-    third of ``ttl_s`` seconds. A holder that was a process of this machine and is no more is
-    replaced at once; one that is not seen from here, when its lease has run out, which is waited
+    third of ``ttl_s`` seconds. A holder that was a run on this machine and is no more is replaced
+    at once; one that is not seen from here, when its lease has run out, which is waited
     for. Raises StoreUnready, naming the holder, if another run holds the store and shows life.
     """
-    lease = _claim(store, Holder(holder, holder_of.here()), ttl_s, told)
-    ended = Event()
-    beat = Thread(target=_beat, args=(store, lease, ended), name="store-lease", daemon=True)
-    beat.start()
-    try:
-        yield lease
-    finally:
-        ended.set()
-        beat.join()
-        # A store that has gone away takes no lease back: it runs out by itself.
-        with suppress(StoreUnready), store._writing(Purpose.SEAL) as connection:
-            lease_row.release(connection, lease)
+    with Heartbeat(store._renew) as beat:
+        lease = _claim(store, Holder(holder, beat.pulse), ttl_s, told)
+        beat.keep(lease)
+        try:
+            yield lease
+        finally:
+            # A store that has gone away takes no lease back: it is seen to be left, or runs out.
+            with suppress(StoreUnready), store._writing(Purpose.SEAL) as connection:
+                lease_row.release(connection, lease)
 
 
 def _claim(store: Store, holder: Holder, ttl_s: float, told: Told | None) -> Lease:
@@ -154,23 +150,6 @@ def _claim(store: Store, holder: Holder, ttl_s: float, told: Told | None) -> Lea
         if told is not None:
             told(f"waiting for {got.name}", round(waited_s), round(first.left_s))
         time.sleep(min(1.0, got.left_s))
-
-
-def _beat(store: Store, lease: Lease, ended: Event) -> None:
-    """Puts off the end of the lease until told to stop, or until it is lost.
-
-    Where the store is away, goes on trying, more often; each write proves the lease for itself.
-    """
-    pause_s = lease.ttl_s / 3
-    while not ended.wait(pause_s):
-        try:
-            held = store._renew(lease)
-        except StoreUnready:
-            pause_s = lease.ttl_s / 18
-            continue
-        if not held:
-            return
-        pause_s = lease.ttl_s / 3
 
 
 def backup(store: Store, path: Path) -> None:
