@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from datetime import date, timedelta
 
 _MONTHS = {"m": 1, "y": 12}
-_AGE = re.compile(r"([1-9]\d{0,3})([dmy])")
+_AGE = re.compile(r"([1-9][0-9]{0,3})([dmy])")
 
 
 @dataclass(frozen=True)

@@ -5,10 +5,14 @@ from __future__ import annotations
 import shutil
 import sqlite3
 from contextlib import closing
+from pathlib import Path
 
 from audit.errors import StoreUnready
 from audit.store.session import Store
 from audit.store.urls import sqlite_file
+
+BUSY_S = 30.0
+"""How long a transaction of somebody else is waited for."""
 
 
 def vacuum(store: Store) -> bool:
@@ -20,15 +24,9 @@ def vacuum(store: Store) -> bool:
     file = sqlite_file(store._url)
     if file is None:
         return False
-    needed, free = 2 * file.stat().st_size, shutil.disk_usage(file.parent).free
-    if free < needed:
-        raise StoreUnready(
-            f"to make {file} smaller, {needed / 1e6:.0f} MB have to be free beside it; "
-            f"there are {free / 1e6:.0f} MB",
-            "make room; the free space in the file is used for new rows meanwhile",
-        )
     try:
-        with closing(sqlite3.connect(file, isolation_level=None, timeout=30.0)) as connection:
+        with closing(sqlite3.connect(file, isolation_level=None, timeout=BUSY_S)) as connection:
+            _check_room(connection, file)
             connection.execute("VACUUM")
             connection.execute("PRAGMA wal_checkpoint(TRUNCATE)")
     except sqlite3.OperationalError as error:
@@ -36,3 +34,15 @@ def vacuum(store: Store) -> bool:
             f"{file} could not be made smaller: {error}", "try again when nobody uses the store"
         ) from error
     return True
+
+
+def _check_room(connection: sqlite3.Connection, file: Path) -> None:
+    (pages,) = connection.execute("PRAGMA page_count").fetchone()
+    (page_bytes,) = connection.execute("PRAGMA page_size").fetchone()
+    needed, free = 2 * pages * page_bytes, shutil.disk_usage(file.parent).free
+    if free < needed:
+        raise StoreUnready(
+            f"to make {file} smaller, {needed / 1e6:.0f} MB have to be free beside it; "
+            f"there are {free / 1e6:.0f} MB",
+            "make room; the free space in the file is used for new rows meanwhile",
+        )
