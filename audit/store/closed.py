@@ -10,9 +10,10 @@ any more.
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import cache
 from typing import Any, NamedTuple
 
-from sqlalchemy import func, insert, select, update
+from sqlalchemy import bindparam, func, insert, select, update
 from sqlalchemy.orm import Session
 
 from audit.store.tables import ClosedRow, LoopRow, LoopVersionRow
@@ -31,22 +32,30 @@ class Closed(NamedTuple):
 
 def loop_and_closed(s: Session, tag: str) -> tuple[int | None, Closed | None]:
     """A loop's id, None for one the register never held; and its closed time, if it has any."""
-    reach = LoopVersionRow.before_us + LoopVersionRow.after_us + 2 * LoopVersionRow.join_us
-    row = s.execute(
-        select(LoopRow.id, ClosedRow.until_us, reach.label("reach_us"))
-        .join_from(LoopRow, ClosedRow, LoopRow.id == ClosedRow.loop_id, isouter=True)
-        .join(
-            LoopVersionRow,
-            (LoopVersionRow.loop_id == LoopRow.id) & LoopVersionRow.superseded_at.is_(None),
-            isouter=True,
-        )
-        .where(LoopRow.tag == tag)
-    ).first()
+    row = s.connection().execute(_loop_query(), {"tag": tag}).first()
     if row is None:
         return None, None
     if row.until_us is None:
         return row.id, None
     return row.id, Closed(row.until_us, row.until_us + row.reach_us)
+
+
+@cache
+def _loop_query() -> Any:
+    """Built once: each night asks it for every loop."""
+    loop, closed = LoopRow.__table__, ClosedRow.__table__
+    version = LoopVersionRow.__table__
+    reach = version.c.before_us + version.c.after_us + 2 * version.c.join_us
+    return (
+        select(loop.c.id, closed.c.until_us, reach.label("reach_us"))
+        .join_from(loop, closed, loop.c.id == closed.c.loop_id, isouter=True)
+        .join(
+            version,
+            (version.c.loop_id == loop.c.id) & version.c.superseded_at.is_(None),
+            isouter=True,
+        )
+        .where(loop.c.tag == bindparam("tag"))
+    )
 
 
 def closed_time(s: Session, tag: str) -> Closed | None:

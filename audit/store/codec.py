@@ -15,14 +15,24 @@ from __future__ import annotations
 import hashlib
 import struct
 import threading
-from typing import NamedTuple
+from collections.abc import Callable
+from functools import cache
+from typing import Any, NamedTuple
 
 import numpy as np
 import zstandard
 from numpy.typing import NDArray
 
 from audit.records import Record, Role, Samples
-from audit.store import codec_first
+from audit.store import codec_first, codec_kernel
+from audit.store.codec_kernel import (
+    ALL_GOOD,
+    BAD_IS_NAN,
+    HELD,
+    ONE_STEP,
+    PLAIN_FLOATS,
+    SAME_STAMPS,
+)
 
 _MAGIC = b"LC\x02"
 _LEVEL = 1
@@ -33,19 +43,8 @@ _REGULAR = struct.Struct("<qQ")
 _DECIMAL = struct.Struct("<Bq")
 _COUNT = struct.Struct("<I")
 _PLANES = struct.Struct("<B")
-_ALL_GOOD = 1
-_BAD_IS_NAN = 2
-_SAME_STAMPS = 4
-_ONE_STEP = 8
-_HELD = 16
-_PLAIN_FLOATS = 255
-_RUNS_PART = 16
-"""Values of which at most one in so many differs from the one before are kept as runs."""
-_FEW = 16
-_EXACT_BELOW = 2.0**52
-_SMALL_BELOW = 2.0**29
-_SCALES: NDArray[np.float64] = 10.0 ** np.arange(10, dtype=np.float64)
-_NAN_BITS = np.array(np.nan, "<f8").view("<u8")
+_NO_STAMPS = np.empty(0, "<u8")
+_SCALES: NDArray[np.float64] = np.array(codec_kernel.SCALES)
 
 Words = NDArray[np.uint64]
 Floats = NDArray[np.float64]
@@ -104,108 +103,59 @@ def _compressed(body: bytes) -> bytes:
 
 
 def _body(record: Record) -> bytes:
-    parts: list[bytes] = []
-    before: NDArray[np.int64] | None = None
+    room = _Room.of(max((len(samples) for samples in record.signals.values()), default=0))
+    put_signal = _kernel()
+    at = 0
+    before = _NO_STAMPS
     for role in Role:
-        if role in record.signals:
-            samples = record.signals[role]
-            _put_signal(parts, role, samples, before)
-            before = samples.t_us
-    return b"".join(parts)
+        if role not in record.signals:
+            continue
+        samples = record.signals[role]
+        stamps = np.ascontiguousarray(samples.t_us, "<i8").view("<u8")
+        value = np.ascontiguousarray(samples.value, "<f8")
+        good = np.ascontiguousarray(samples.good)
+        bits = value.view("<u8")
+        at = put_signal(
+            _NUMBER[role], stamps, before, value, bits, good, room.words, room.picks, room.out, at
+        )
+        before = stamps
+    return room.out[:at].tobytes()
 
 
-def _put_signal(
-    parts: list[bytes], role: Role, samples: Samples, before: NDArray[np.int64] | None
-) -> None:
-    """Head, stamps, which are good, values."""
-    value = np.ascontiguousarray(samples.value, "<f8")
-    flags, stamps = _stamps(samples.t_us, before)
-    mask = b""
-    if samples.good.all():
-        flags |= _ALL_GOOD
-    else:
-        mask = np.packbits(samples.good).tobytes()
-        if (value[~samples.good].view("<u8") == _NAN_BITS).all():
-            flags |= _BAD_IS_NAN
-            value = value[samples.good]
-    runs = _runs(value)
-    if runs is not None:
-        flags |= _HELD
-        value = value[runs]
-    parts += (_SIGNAL.pack(_NUMBER[role], flags, len(samples)), *stamps, mask)
-    if runs is not None:
-        parts += (_COUNT.pack(len(runs)), *_planes(runs.astype("<u8")))
-    parts += _numbers(value)
+class _Room(NamedTuple):
+    """Where signals of so many samples are put together."""
+
+    words: NDArray[np.uint64]
+    picks: NDArray[np.int64]
+    out: NDArray[np.uint8]
+
+    @staticmethod
+    def of(count: int) -> _Room:
+        most = len(Role) * codec_kernel.most_octets(count)
+        return _Room(np.empty(count, "<u8"), np.empty(count, "<i8"), np.empty(most, np.uint8))
 
 
-def _stamps(
-    stamps: NDArray[np.int64], before: NDArray[np.int64] | None
-) -> tuple[int, tuple[bytes, ...]]:
-    """How stamps are kept, and these bytes."""
-    if before is not None and np.array_equal(stamps, before):
-        return _SAME_STAMPS, ()
-    words = np.ascontiguousarray(stamps, "<i8").view("<u8")
-    first = int(stamps[0]) if len(stamps) else 0
-    steps = words[1:] - words[:-1]
-    if len(steps) == 0 or (steps == steps[0]).all():
-        return _ONE_STEP, (_REGULAR.pack(first, int(steps[0]) if len(steps) else 0),)
-    unit = int(np.gcd.reduce(steps))
-    return 0, (_REGULAR.pack(first, unit), *_planes(steps // np.uint64(unit)))
+@cache
+def _kernel() -> Callable[..., int]:
+    """``codec_kernel.put_signal``, compiled or as an earlier process left it on disk."""
+    import numba
+    from numba.extending import register_jitable
 
+    for part in codec_kernel.PARTS:
+        register_jitable(part)
 
-def _runs(value: Floats) -> NDArray[np.int64] | None:
-    """Where the values change, the first place included; None where they do so often."""
-    bits = value.view("<u8")
-    other = bits[1:] != bits[:-1]
-    if len(bits) == 0 or _RUNS_PART * np.count_nonzero(other) > len(bits):
-        return None
-    return np.concatenate(([0], np.flatnonzero(other) + 1))
+    def read(kind: Any) -> Any:
+        return numba.types.Array(kind, 1, "C", readonly=True)
 
-
-def _numbers(value: Floats) -> tuple[bytes, ...]:
-    """Number of decimals, the first whole number, and zigzag differences; else the 64 bits."""
-    found = _whole_numbers(value)
-    if found is None:
-        return (_DECIMAL.pack(_PLAIN_FLOATS, 0), *_planes(value.view("<u8")))
-    decimals, whole = found
-    rise = whole[1:] - whole[:-1]
-    words = (rise << 1) ^ (rise >> (8 * rise.itemsize - 1))
-    unsigned: NDArray[np.unsignedinteger] = words.view(f"<u{words.itemsize}")
-    return (_DECIMAL.pack(decimals, int(whole[0])), *_planes(unsigned))
-
-
-def _whole_numbers(value: Floats) -> tuple[int, NDArray[np.signedinteger]] | None:
-    """The fewest decimals with which every value is regained to the bit, and the whole numbers of
-    the last of them; None where there are none, or too few values to look.
-    """
-    if len(value) <= _FEW:
-        return None
-    low, high = float(value.min()), float(value.max())
-    most = max(-low, high)  # NaN or infinite where one value is
-    if not most < _EXACT_BELOW or (low <= 0.0 <= high and np.signbit(value[value == 0.0]).any()):
-        return None  # minus zero is not regained from a whole number
-    possible = _SCALES[: int(np.searchsorted(_SCALES, _EXACT_BELOW / max(most, 1.0)))]
-    few = value[:_FEW]  # rules out most of the scales
-    likely = (np.rint(few * possible[:, np.newaxis]) / possible[:, np.newaxis] == few).all(axis=1)
-    for decimals in np.flatnonzero(likely).tolist():
-        scale = possible[decimals]
-        whole = value * scale
-        np.rint(whole, out=whole)
-        if (whole / scale == value).all():
-            small = scale * most < _SMALL_BELOW
-            return decimals, whole.astype("<i4" if small else "<i8")
-    return None
-
-
-def _planes(words: NDArray[np.unsignedinteger]) -> tuple[bytes, ...]:
-    """Which byte planes are not all zero, as bits; and these planes, the lowest first."""
-    some = int(np.bitwise_or.reduce(words, initial=0))
-    if some < 1 << 8:
-        return (b"\x01", words.astype("<u1").tobytes()) if some else (b"\x00",)
-    held = [k for k in range(words.itemsize) if some >> (8 * k) & 0xFF]
-    narrow = np.ascontiguousarray(words if some >> 16 else words.astype("<u2"))
-    octets = narrow.view("<u1").reshape(-1, narrow.itemsize)
-    return (_PLANES.pack(sum(1 << k for k in held)), *(octets[:, k].tobytes() for k in held))
+    whole, octet, place = numba.uint64, numba.uint8, numba.int64
+    samples = (read(whole), read(whole), read(numba.float64), read(whole), read(numba.boolean))
+    signature = place(place, *samples, whole[::1], place[::1], octet[::1], place)
+    compiled: Callable[..., int]
+    try:
+        compiled = numba.njit(signature, nogil=True, cache=True)(codec_kernel.put_signal)
+    except (OSError, RuntimeError):  # no folder can be written, or the disk is full
+        compiled = numba.njit(signature, nogil=True)(codec_kernel.put_signal)
+    return compiled
 
 
 class _Body:
@@ -242,13 +192,13 @@ class _Body:
 
 def _take_signal(body: _Body, before: NDArray[np.int64]) -> tuple[Role, Samples]:
     number, flags, count = body.take(_SIGNAL)
-    t_us = before.copy() if flags & _SAME_STAMPS else _take_stamps(body, flags, count)
+    t_us = before.copy() if flags & SAME_STAMPS else _take_stamps(body, flags, count)
     good = np.ones(count, np.bool_)
-    if not flags & _ALL_GOOD:
+    if not flags & ALL_GOOD:
         good = np.unpackbits(body.octets((count + 7) // 8), count=count).astype(np.bool_)
-    held = int(good.sum()) if flags & _BAD_IS_NAN else count
-    value = _take_held(body, held) if flags & _HELD else _take_numbers(body, held)
-    if flags & _BAD_IS_NAN:
+    held = int(good.sum()) if flags & BAD_IS_NAN else count
+    value = _take_held(body, held) if flags & HELD else _take_numbers(body, held)
+    if flags & BAD_IS_NAN:
         whole = np.full(count, np.nan)
         whole[good] = value
         value = whole
@@ -261,9 +211,9 @@ def _take_stamps(body: _Body, flags: int, count: int) -> NDArray[np.int64]:
     first, unit = body.take(_REGULAR)
     stamps = np.zeros(count, "<u8")
     if count > 1:
-        steps = np.ones(count - 1, "<u8") if flags & _ONE_STEP else body.words(count - 1)
+        steps = np.ones(count - 1, "<u8") if flags & ONE_STEP else body.words(count - 1)
         np.cumsum(steps * np.uint64(unit), dtype="<u8", out=stamps[1:])
-    elif not flags & _ONE_STEP:
+    elif not flags & ONE_STEP:
         raise ValueError("a stored curve is damaged")
     stamps += np.array(first, "<i8").view("<u8")
     return stamps.view("<i8").astype(np.int64, copy=False)
@@ -278,7 +228,7 @@ def _take_held(body: _Body, count: int) -> Floats:
 
 def _take_numbers(body: _Body, count: int) -> Floats:
     decimals, first = body.take(_DECIMAL)
-    if decimals == _PLAIN_FLOATS:
+    if decimals == PLAIN_FLOATS:
         return body.words(count).view("<f8").astype(np.float64, copy=False)
     words = body.words(max(count - 1, 0))
     whole = np.full(count, first, "<i8")

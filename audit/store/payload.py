@@ -79,7 +79,7 @@ def loop_of(tag: str, row: Columns) -> Loop:
 
 def measured_values(measured: Mapping[Quantity, Measured]) -> dict[str, Any]:
     """The JSON of what was measured, in the order of the quantities."""
-    return {q.value: _measured_value(measured[q]) for q in Quantity if q in measured}
+    return {name: _measured_value(measured[q]) for name, q in _QUANTITY.items() if q in measured}
 
 
 def _measured_value(one: Measured) -> str | list[Any]:

@@ -7,6 +7,7 @@ instants have to be looked at again, and the edge slices that a change across a 
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
+from itertools import pairwise
 
 import numpy as np
 
@@ -32,11 +33,10 @@ def weave(
     signals: dict[Role, Samples] = {}
     for role in Role:
         parts = [record.signals[role] for record in kept if role in record.signals]
-        known = _merge(parts)
-        known = pick(known, ~inside(known.t_us, union(replaced.get(role, ()))))
-        new = fresh.get(role, Samples.empty())
         if parts or role in fresh:
-            signals[role] = _merge([known, new])
+            known = _merge(parts)
+            known = pick(known, ~inside(known.t_us, union(replaced.get(role, ()))))
+            signals[role] = _merge([known, fresh.get(role, Samples.empty())])
     return Record(signals)
 
 
@@ -47,11 +47,31 @@ def _merge(parts: Sequence[Samples]) -> Samples:
         return Samples.empty()
     if len(parts) == 1:
         return parts[0]
-    stamps = np.concatenate([part.t_us for part in parts])
-    t_us, first = np.unique(stamps, return_index=True)
-    value = np.concatenate([part.value for part in parts])[first]
-    good = np.concatenate([part.good for part in parts])[first]
-    return Samples(t_us, value, good)
+    apart = sorted((piece for part in parts for piece in _pieces(part, parts)), key=_first_us)
+    if all(one.t_us[-1] < other.t_us[0] for one, other in pairwise(apart)):
+        return _joined(apart)
+    joined = _joined(parts)
+    t_us, first = np.unique(joined.t_us, return_index=True)
+    return Samples(t_us, joined.value[first], joined.good[first])
+
+
+def _joined(parts: Sequence[Samples]) -> Samples:
+    return Samples(
+        np.concatenate([part.t_us for part in parts]),
+        np.concatenate([part.value for part in parts]),
+        np.concatenate([part.good for part in parts]),
+    )
+
+
+def _first_us(part: Samples) -> int:
+    return int(part.t_us[0])
+
+
+def _pieces(part: Samples, parts: Sequence[Samples]) -> list[Samples]:
+    """A part cut where another one begins, so that parts that enclose one another only touch."""
+    cuts = np.unique(part.t_us.searchsorted([_first_us(other) for other in parts]))
+    ends = [0, *cuts[(cuts > 0) & (cuts < len(part))].tolist(), len(part)]
+    return [Samples(part.t_us[a:b], part.value[a:b], part.good[a:b]) for a, b in pairwise(ends)]
 
 
 def to_look_at(record: Record, spans: Iterable[Span], windows: Windows) -> list[Span]:
@@ -106,15 +126,24 @@ def dependence(
     starts: list[int | None] = []
     ends: list[int | None] = []
     for role in roles:
-        good_us = slice_.of(role).only_good().t_us
-        starts.append(int(good_us[0]) if len(good_us) and good_us[0] < start_us else None)
+        good_us = _outer_good_us(slice_.of(role))
+        starts.append(good_us[0] if good_us and good_us[0] < start_us else None)
         if role in waited:
-            ends.append(int(good_us[-1]) if len(good_us) and good_us[-1] > end_us else None)
+            ends.append(good_us[1] if good_us and good_us[1] > end_us else None)
     before, after = _all_known(starts), _all_known(ends)
     return (
         None if before is None else min([*before, start_us]),
         None if after is None else max([*after, end_us]),
     )
+
+
+def _outer_good_us(samples: Samples) -> Span | None:
+    """Stamps of the first and the last good sample."""
+    good = samples.good
+    if len(good) and good[0] and good[-1]:
+        return int(samples.t_us[0]), int(samples.t_us[-1])
+    good_us = samples.t_us[good]
+    return (int(good_us[0]), int(good_us[-1])) if len(good_us) else None
 
 
 def _all_known(stamps: Sequence[int | None]) -> list[int] | None:
