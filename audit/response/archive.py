@@ -258,5 +258,11 @@ def _clustered(t: Array, v: Array, window_s: float) -> float:
     least = int(inside.sum())
     if share >= 1.0 or least < CONSTANTS.cluster_ratio * share * count:
         return 0.0
-    tail = (comb(count, k) * share**k * (1.0 - share) ** (count - k) for k in range(least, count))
-    return float(np.log(sum(tail) + share**count))
+    part = comb(count, least) * share**least * (1.0 - share) ** (count - least)
+    tail = part
+    for k in range(least, count):
+        part *= (count - k) / (k + 1) * share / (1.0 - share)
+        tail += part
+        if part < 1e-3 * tail:
+            break
+    return float(np.log(tail))
