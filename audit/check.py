@@ -146,9 +146,7 @@ def _read_newest(listed: Sequence[Listed], wanted: Collection[str], seen: _Look)
             if not left:
                 return
             try:
-                seen.tags[source.name] |= set(
-                    exports.read(file, source, dict.fromkeys(left, True)).named
-                )
+                seen.tags[source.name] |= exports.named(file, source)
             except ExportRefused as refused:
                 seen.faults.append(_fault(refused))
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date, datetime, timedelta
+from itertools import pairwise
 
 from audit.config import Config
 from audit.loopwork import LoopWork, days_known
@@ -17,6 +18,7 @@ from audit.records import (
     Role,
     SetpointChange,
     Spec,
+    TagState,
     to_us,
 )
 from audit.standings import DAYS_LOOKED_AT, StandingWork, band_changed
@@ -24,6 +26,9 @@ from audit.store import Store, queries
 from audit.weaving.precedence import FreshTag
 from audit.weaving.spans import Span, union
 from audit.weaving.stretches import context, grouped
+
+LOOP_SAMPLES = 4_000_000
+"""Samples of a loop that are worked through at once: about 0.2 GB in a worker."""
 
 
 def reading_of(
@@ -50,6 +55,7 @@ class LoopContext:
     config: Config
     specs: Mapping[str, Sequence[Spec]]
     tag_sources: Mapping[str, str]
+    tag_states: Mapping[str, Mapping[Role, TagState]]
 
     def reading(self, loop: Loop) -> Reading:
         return reading_of(loop, self.tag_sources, self.config.exports)
@@ -90,7 +96,24 @@ def loop_work(
         fresh=own,
         touched=tuple(touched),
         days=tuple(days),
+        states=context_.tag_states.get(loop.tag, {}),
     )
+
+
+def spans_at_once(tags: Mapping[str, FreshTag], loops: Sequence[Loop]) -> list[Span]:
+    """The time of fresh samples in parts, in each of which no loop has many more than LOOP_SAMPLES.
+
+    Parts are of one length.
+    """
+    sizes = {tag: sum(samples.count for samples, _ in fresh.parts) for tag, fresh in tags.items()}
+    largest = max((sum(sizes.get(t, 0) for t in loop.tags().values()) for loop in loops), default=0)
+    spans = [span for fresh in tags.values() for span in fresh.spans]
+    if not spans:
+        return []
+    first, last = min(start for start, _ in spans), max(end for _, end in spans)
+    parts = min(1 + largest // LOOP_SAMPLES, last - first + 1)
+    borders = [first + (last - first + 1) * number // parts for number in range(parts + 1)]
+    return [(start, end - 1) for start, end in pairwise(borders)]
 
 
 def _to_recall(spans: Sequence[Span], touched: Sequence[int], loop: Loop) -> list[Span]:

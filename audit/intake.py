@@ -1,87 +1,196 @@
-"""Export files that are new to the store, read in batches in the order of their first stamps."""
+"""Export files that are new to the store, read in batches in the order of their first stamps.
+
+What is read lies in a scratch folder of the run until its batch has been worked through.
+"""
 
 from __future__ import annotations
 
+import hashlib
+import os
+import shutil
+import tempfile
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from pathlib import Path
 
 from audit import exports
-from audit.errors import ExportRefused
+from audit.errors import AuditError, ExportRefused, Fault
 from audit.records import ExportFile, ExportRead, ExportSource
-from audit.workers import Workers
+from audit.workers import Serial, Workers
 
-BATCH_CELLS = 20_000_000
-"""Cells taken before a batch is worked through: about 0.4 GB of samples."""
+BATCH_CELLS = 100_000_000
+"""Samples of a batch: about 1 to 2 GB of scratch, more only where a single file holds more."""
 
 
 @dataclass(frozen=True)
 class NewFile:
-    """A file the store has not taken as it is now, and how to read it."""
+    """A file the store has not taken as it is now, and how to read it.
+
+    ``only``: the tags it is read again for; None: all, it is new.
+    """
 
     file: ExportFile
     source: ExportSource
+    only: frozenset[str] | None = None
 
 
 @dataclass(frozen=True, eq=False)
 class ReadResult:
     """A new file with what was read of it, or with the reason why it was refused."""
 
-    file: ExportFile
+    new: NewFile
     read: ExportRead | None
     refused: ExportRefused | None
+    scratch: Path
 
 
 @dataclass(frozen=True, eq=False)
 class _Task:
     new: NewFile
     wanted: Mapping[str, bool]
+    scratch: Path
+    threads: int
+
+
+@dataclass(frozen=True)
+class Seen:
+    """What the store knows of a path: its size and stamp when it was last looked at.
+
+    ``missing``: tags the register names now that it was not asked for then.
+    """
+
+    size: int
+    stamp: str
+    missing: frozenset[str] = frozenset()
 
 
 @dataclass(frozen=True, eq=False)
 class Found:
-    """New files, the number of files known, and the sources that cannot be listed."""
+    """New files, those known as they are, sources that cannot be listed, files found twice."""
 
     new: list[NewFile]
-    known: int
+    known: dict[str, NewFile]
     refused: list[ExportRefused]
+    twice: list[Fault]
 
 
-def find(sources: Sequence[ExportSource], seen: Mapping[str, tuple[int, str]]) -> Found:
+def find(sources: Sequence[ExportSource], seen: Mapping[str, Seen]) -> Found:
     """Files whose size or modification stamp differ from what the store has seen.
 
-    ``seen``: path -> (size, stamp). A file without a stamp counts as new each time.
+    A file without a stamp counts as new each time. A known one is read again for tags it was not
+    asked for. Of two sources that find the same file the first has it.
     """
-    found = Found([], 0, [])
-    known = 0
+    found = Found([], {}, [], [])
+    met: dict[str, str] = {}
     for source in sources:
         try:
             files = exports.discover(source)
         except ExportRefused as refused:
             found.refused.append(refused)
             continue
-        new = [f for f in files if not f.stamp or seen.get(f.path) != (f.size, f.stamp)]
-        found.new.extend(NewFile(file, source) for file in new)
-        known += len(files) - len(new)
-    return Found(found.new, known, found.refused)
+        for file in files:
+            first = met.setdefault(exports.same_file(file, source), source.name)
+            if first == source.name:
+                _sort_in(NewFile(file, source), seen.get(file.path), found)
+            else:
+                found.twice.append(_found_twice(file, source, first))
+    return found
+
+
+def _found_twice(file: ExportFile, source: ExportSource, first: str) -> Fault:
+    return Fault(
+        file.path,
+        f"also found by [[exports]] '{source.name}'; it is read as '{first}'",
+        "let the patterns under files exclude each other",
+    )
+
+
+def _sort_in(new: NewFile, seen: Seen | None, found: Found) -> None:
+    file = new.file
+    if not file.stamp or seen is None or (seen.size, seen.stamp) != (file.size, file.stamp):
+        found.new.append(new)
+        return
+    found.known[file.path] = new
+    if seen.missing:
+        found.new.append(replace(new, only=seen.missing))
+
+
+def read_again(
+    known: Mapping[str, NewFile],
+    asked: Mapping[str, frozenset[str]],
+    wanted: Mapping[str, bool],
+    scratch: Path,
+) -> list[ReadResult]:
+    """Files that are there as they were taken, read once more for some tags each, by path."""
+    again = [replace(known[path], only=tags) for path, tags in asked.items() if path in known]
+    tasks = [
+        _Task(new, wanted, scratch / f"again-{len(asked)}-{number}.samples", 1)
+        for number, new in enumerate(again)
+    ]
+    return [_read(task) for task in tasks]
+
+
+@contextmanager
+def scratch_folder(named: str, store_url: str) -> Iterator[Path]:
+    """An empty folder for one run, in the folder ``named`` ("": the system's temporary one).
+
+    It is always the same one for a store, so that what a run that was killed has left is cleared by
+    the next one; only the run that holds the store may use it.
+    """
+    mark = hashlib.sha256(f"{os.getuid()} {store_url}".encode()).hexdigest()[:16]
+    folder = Path(named or tempfile.gettempdir()) / f"loopassay-scratch-{mark}"
+    try:
+        if folder.is_symlink():
+            folder.unlink()
+        shutil.rmtree(folder, ignore_errors=True)
+        folder.mkdir(mode=0o700, parents=bool(named))
+    except OSError as error:
+        raise AuditError(
+            f"the scratch folder {folder} cannot be made: {error.strerror}",
+            "name a folder that can be written as scratch in [intake] of site.toml",
+        ) from error
+    try:
+        yield folder
+    finally:
+        shutil.rmtree(folder, ignore_errors=True)
 
 
 def batches(
     files: Sequence[NewFile],
     wanted: Mapping[str, bool],
     pool: Workers,
+    scratch: Path,
     most_cells: int = BATCH_CELLS,
 ) -> Iterator[list[ReadResult]]:
-    """Read the files by first stamp; a batch ends once it holds ``most_cells`` samples."""
+    """Read the files by first stamp; a batch ends once it holds ``most_cells`` samples.
+
+    A batch's scratch files are removed when the next one is asked for.
+    """
     batch: list[ReadResult] = []
     cells = 0
-    for result in pool.map(_read, [_Task(new, wanted) for new in _by_first_stamp(files, pool)]):
+    few = len(files) <= pool.cores
+    reader, threads = (Serial(), pool.cores) if few else (pool, 1)
+    tasks = [
+        _Task(new, wanted, scratch / f"{number}.samples", threads)
+        for number, new in enumerate(_by_first_stamp(files, pool))
+    ]
+    for result in reader.map(_read, tasks):
         batch.append(result)
         cells += 0 if result.read is None else result.read.account.taken
         if cells >= most_cells:
             yield batch
+            clear(batch)
             batch, cells = [], 0
     if batch:
         yield batch
+        clear(batch)
+
+
+def clear(batch: Sequence[ReadResult]) -> None:
+    """Remove what a batch that is worked through has on scratch."""
+    for result in batch:
+        result.scratch.unlink(missing_ok=True)
 
 
 def _by_first_stamp(files: Sequence[NewFile], pool: Workers) -> list[NewFile]:
@@ -99,8 +208,10 @@ def _first_stamp(new: NewFile) -> int | None:
 
 
 def _read(task: _Task) -> ReadResult:
+    new = task.new
     try:
-        read = exports.read(task.new.file, task.new.source, task.wanted)
+        read = exports.read(new.file, new.source, task.wanted, task.scratch, task.threads)
     except ExportRefused as refused:
-        return ReadResult(task.new.file, None, refused)
-    return ReadResult(task.new.file, read, None)
+        task.scratch.unlink(missing_ok=True)
+        return ReadResult(new, None, refused, task.scratch)
+    return ReadResult(new, read, None, task.scratch)

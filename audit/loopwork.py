@@ -8,11 +8,11 @@ same in this process or another.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import date
 from zoneinfo import ZoneInfo
 
-from audit import days, quality, response, setpoints, verdict
+from audit import days, quality, response, setpoints, tag_states, verdict
 from audit.records import (
     KeptDay,
     Loop,
@@ -27,6 +27,7 @@ from audit.records import (
     SetpointChange,
     Spec,
     Step,
+    TagState,
     instant,
     spec_in_force,
 )
@@ -41,6 +42,7 @@ class LoopWork:
 
     ``kept``: stored slices around the fresh spans. ``touched``: at_us of the stored steps whose
     result may change. ``days``: the stored day's records around the fresh spans.
+    ``states``: what the loop's tags last said.
     """
 
     loop: Loop
@@ -52,6 +54,7 @@ class LoopWork:
     fresh: Mapping[Role, FreshTag]
     touched: tuple[int, ...]
     days: tuple[KeptDay, ...]
+    states: Mapping[Role, TagState] = field(default_factory=dict)
 
     def spans(self) -> list[Span]:
         """Every span some tag of the loop has fresh word of."""
@@ -60,7 +63,7 @@ class LoopWork:
 
 def audit_loop(work: LoopWork) -> LoopResult:
     """Find, measure and judge the setpoint changes that the fresh samples concern."""
-    fresh = {role: _as_samples(role, tag.raw, work.loop) for role, tag in work.fresh.items()}
+    fresh = {role: _as_samples(role, tag.load(), work.loop) for role, tag in work.fresh.items()}
     replaced = {role: tag.spans for role, tag in work.fresh.items()}
     record = weave(work.kept, fresh, replaced)
     steps = [measure_step(record, change, work) for change in _concerned(record, work)]
@@ -72,6 +75,7 @@ def audit_loop(work: LoopWork) -> LoopResult:
         withdrawn=tuple(at_us for at_us in work.touched if at_us not in found),
         edges=tuple(edges(record, borders, work.loop.windows)),
         days=tuple(_days(work, fresh, replaced)),
+        tag_states=tag_states.follow_all(fresh, work.states),
     )
 
 
@@ -112,6 +116,8 @@ def settings_for(
         band_pct=2.0 if spec is None else spec.settling_band_pct,
         min_step_eu=None if spec is None else spec.min_step_eu,
         span_eu=loop.span_eu,
+        range_low=loop.range_low,
+        range_high=loop.range_high,
         error_u_eu=error_u_eu,
         output_low=loop.output_low,
         output_high=loop.output_high,

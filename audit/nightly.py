@@ -10,14 +10,16 @@ from __future__ import annotations
 import os
 import socket
 import time
-from collections.abc import Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections.abc import Collection, Iterator, Mapping, Sequence
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass, field, replace
 from datetime import date, datetime, timedelta
+from pathlib import Path
 
 from audit import feed, intake
-from audit.errors import AuditError, ExportRefused, Fault
-from audit.gather import LoopContext, loop_work, standing_works
+from audit.errors import AuditError, ExportRefused, Fault, StoreUnready
+from audit.feed_facts import feed_facts
+from audit.gather import LoopContext, loop_work, spans_at_once, standing_works
 from audit.loopwork import LoopWork, audit_loop
 from audit.ranking import order
 from audit.records import CellAccount, Coverage, Loop, Standing, instant, to_us
@@ -25,7 +27,7 @@ from audit.run_report import Progress, RunReport, Tally
 from audit.site import Site
 from audit.standings import standings
 from audit.store import Lease, Store, queries, take_lease, writes
-from audit.weaving.precedence import FreshExport, FreshTag, settle
+from audit.weaving.precedence import FreshExport, FreshTag, Settled, settle
 from audit.workers import Workers, workers
 
 
@@ -39,6 +41,7 @@ class _Run:
     pool: Workers
     now: datetime
     progress: Progress
+    scratch: Path
     started: float = field(default_factory=time.monotonic)
     tally: Tally = field(default_factory=Tally)
 
@@ -62,12 +65,18 @@ def run(
     ``nights``: first and last night (inclusive) to publish a list for; None: the first cut-off
     after the newest good stamp. ``accept_older``: take site files the store has seen replaced.
     Raises StoreUnready where the store is not at this program's schema, belongs to another site or
-    is held by another audit; AuditError for a night that has not begun.
+    is held by another audit; AuditError for a night that has not begun. ``cores`` None: as the site
+    has it.
     """
     _check_begun(site, nights, now)
     store.require_current()
-    with take_lease(store, _holder()) as lease, workers(cores) as pool:
-        audit = _Run(site, store, lease, pool, now, progress or _silent)
+    rule = site.config.intake
+    with (
+        take_lease(store, _holder(), told=progress or _silent) as lease,
+        workers(rule.cores if cores is None else cores) as pool,
+        intake.scratch_folder(rule.scratch, site.config.store_url) as scratch,
+    ):
+        audit = _Run(site, store, lease, pool, now, progress or _silent, scratch)
         with _logged(audit):
             _enter_register(audit, accept_older)
             _take_exports(audit)
@@ -103,7 +112,7 @@ def _logged(audit: _Run) -> Iterator[None]:
     try:
         yield
     except BaseException as failure:
-        with audit.store.write(audit.lease) as session:
+        with suppress(StoreUnready), audit.store.write(audit.lease) as session:
             counts = audit.tally.counts()
             why = failure.message if isinstance(failure, AuditError) else repr(failure)
             writes.end_run(session, run_id, audit.clock(), "failed", counts, why)
@@ -128,21 +137,29 @@ def _enter_register(audit: _Run, accept_older: bool) -> None:
 
 def _take_exports(audit: _Run) -> None:
     """Read what is new, a batch of files at a time, and work each batch through all loops."""
-    with audit.store.read() as session:
-        seen = {
-            export.path: (export.size, export.stamp)
-            for export in queries.exports(session)
-            if export.state != "reading"
-        }
-    found = intake.find(audit.site.config.exports, seen)
-    audit.tally.files_skipped += found.known
+    wanted = _wanted(audit.site.register.loops)
+    found = intake.find(audit.site.config.exports, _seen(audit, wanted.keys()))
+    audit.tally.files_skipped += len(found.known) - sum(new.only is not None for new in found.new)
     audit.tally.files_refused.extend(_fault(refused) for refused in found.refused)
-    loops = audit.site.register.loops
+    audit.tally.faults.extend(found.twice)
     done = 0
-    for batch in intake.batches(found.new, _wanted(loops), audit.pool):
+    for batch in intake.batches(found.new, wanted, audit.pool, audit.scratch):
         done += len(batch)
         audit.progress("reading exports", done, len(found.new))
-        _take_batch(audit, batch)
+        _take_batch(audit, batch, found.known, wanted)
+
+
+def _seen(audit: _Run, wanted: Collection[str]) -> dict[str, intake.Seen]:
+    """What the store knows of each path, with the tags it has yet to be asked for."""
+    with audit.store.read() as session:
+        exports = [seen for seen in queries.exports(session) if seen.state != "reading"]
+        asked = queries.tag_sets(session, {seen.asked_set_id for seen in exports})
+    missing = {number: frozenset(wanted) - tags for number, tags in asked.items()}
+    nothing: frozenset[str] = frozenset()
+    return {
+        seen.path: intake.Seen(seen.size, seen.stamp, missing.get(seen.asked_set_id, nothing))
+        for seen in exports
+    }
 
 
 def _wanted(loops: Sequence[Loop]) -> dict[str, bool]:
@@ -155,47 +172,78 @@ def _wanted(loops: Sequence[Loop]) -> dict[str, bool]:
     return wanted | {loop.mode: True for loop in loops if loop.mode}
 
 
-def _take_batch(audit: _Run, batch: Sequence[intake.ReadResult]) -> None:
-    fresh = [FreshExport(r.file, r.read) for r in batch if r.read is not None]
-    tags, accounts = settle(fresh, _stored_coverage(audit, fresh))
-    ids = _begin(audit, batch, fresh, accounts)
-    for result in audit.pool.map(audit_loop, _loop_works(audit, tags)):
-        with audit.store.write(audit.lease) as session:
-            audit.tally.saved(result, writes.save_loop(session, result, audit.now))
+def _take_batch(
+    audit: _Run,
+    batch: Sequence[intake.ReadResult],
+    known: Mapping[str, intake.NewFile],
+    wanted: Mapping[str, bool],
+) -> None:
+    results, settled = _settled(audit, batch, known, wanted)
+    ids = _begin(audit, results, settled.accounts, wanted)
+    for span in spans_at_once(settled.tags, audit.site.register.loops):
+        tags = {tag: fresh.within(*span) for tag, fresh in settled.tags.items()}
+        for result in audit.pool.map(audit_loop, _loop_works(audit, tags)):
+            with audit.store.write(audit.lease) as session:
+                audit.tally.saved(result, writes.save_loop(session, result, audit.now))
     with audit.store.write(audit.lease) as session:
         writes.finish_exports(session, ids, audit.now)
+    intake.clear(results)
+
+
+def _settled(
+    audit: _Run,
+    batch: Sequence[intake.ReadResult],
+    known: Mapping[str, intake.NewFile],
+    wanted: Mapping[str, bool],
+) -> tuple[list[intake.ReadResult], Settled]:
+    """Which export holds where. Those that hold again, and whose samples were not kept, are read
+    again if they are still there."""
+    results, tried = list(batch), set[str]()
+    while True:
+        fresh = [FreshExport(r.new.file, r.read, r.new.only) for r in results if r.read is not None]
+        settled = settle(fresh, _stored_coverage(audit, fresh))
+        asked = {path: tags for path, tags in settled.exposed.items() if path not in tried}
+        if not asked:
+            return results, settled
+        tried |= asked.keys()
+        audit.tally.not_kept(path for path in asked if path not in known)
+        results += intake.read_again(known, asked, wanted, audit.scratch)
 
 
 def _stored_coverage(audit: _Run, fresh: Sequence[FreshExport]) -> list[Coverage]:
     """What the store knows to cover the time of the fresh files, and what their paths covered."""
-    paths = [export.file.path for export in fresh]
-    firsts = [export.read.first_us for export in fresh if export.read.first_us is not None]
-    lasts = [export.read.last_us for export in fresh if export.read.last_us is not None]
+    paths = {export.file.path for export in fresh}
     with audit.store.read() as session:
-        stored = queries.coverage_of_paths(session, paths)
-        if firsts and lasts:
-            around = queries.coverage(session, from_us=min(firsts), to_us=max(lasts))
-            stored += [cover for cover in around if cover.path not in set(paths)]
-    return stored
+        own = queries.coverage_of_paths(session, paths)
+        spans = [(cover.from_us, cover.to_us) for cover in own]
+        spans += [span for export in fresh if (span := export.span()) is not None]
+        if not spans:
+            return own
+        around = queries.coverage(
+            session, from_us=min(start for start, _ in spans), to_us=max(end for _, end in spans)
+        )
+    return own + [cover for cover in around if cover.path not in paths]
 
 
 def _begin(
     audit: _Run,
-    batch: Sequence[intake.ReadResult],
-    fresh: Sequence[FreshExport],
+    results: Sequence[intake.ReadResult],
     accounts: Sequence[CellAccount],
+    wanted: Collection[str],
 ) -> list[int]:
     """Enter the batch's files: those read as begun, the others as refused."""
+    left = iter(accounts)
     with audit.store.write(audit.lease) as session:
-        for result in batch:
+        ids = []
+        for result in results:
+            file = result.new.file
             if result.refused is not None:
                 audit.tally.files_refused.append(_fault(result.refused))
-                writes.refuse_export(session, result.file, result.refused.message, audit.now)
-        ids = []
-        for export, account in zip(fresh, accounts, strict=True):
-            read = replace(export.read, account=account)
-            audit.tally.read(account, read.faults)
-            ids.append(writes.begin_export(session, export.file, read, audit.now))
+                writes.refuse_export(session, file, result.refused.message, audit.now)
+            elif result.read is not None:
+                read = replace(result.read, account=next(left))
+                audit.tally.read(read.account, read.faults)
+                ids.append(writes.begin_export(session, file, read, audit.now, wanted))
     return ids
 
 
@@ -205,7 +253,12 @@ def _fault(refused: ExportRefused) -> Fault:
 
 def _context(audit: _Run) -> LoopContext:
     with audit.store.read() as session:
-        return LoopContext(audit.site.config, queries.specs(session), queries.tag_sources(session))
+        return LoopContext(
+            audit.site.config,
+            queries.specs(session),
+            queries.tag_sources(session),
+            queries.tag_states(session),
+        )
 
 
 def _loop_works(audit: _Run, tags: Mapping[str, FreshTag]) -> Iterator[LoopWork]:
@@ -257,11 +310,4 @@ def _publish(audit: _Run, nights: Sequence[date]) -> Sequence[date]:
 def _quiet(audit: _Run, asked: datetime, night: date) -> tuple[str, ...]:
     """What is missing from the feed, asked at a time; the last days are those before the night."""
     loops = audit.site.register.loops
-    with audit.store.read() as session:
-        newest_us = queries.newest_stamp(session, to_us(asked))
-        named = queries.tag_sources(session)
-        days = queries.day_records_many(
-            session, [loop.tag for loop in loops], night - timedelta(days=2), night
-        )
-    newest = None if newest_us is None else instant(newest_us)
-    return feed.quiet(loops, named.keys(), newest, asked, days)
+    return feed.sentences(feed_facts(audit.store, loops, audit.site.config.exports, asked, night))

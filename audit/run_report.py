@@ -65,6 +65,18 @@ class Tally:
         self.account = add(self.account, account)
         self.faults.extend(faults)
 
+    def not_kept(self, paths: Iterable[str]) -> None:
+        """Exports hold again somewhere, and are no longer there to be read again."""
+        self.faults.extend(
+            Fault(
+                path,
+                "it holds again where a later export has gone, but it is no longer there: "
+                "its samples of that time are not kept",
+                "put the file back where it was if these days matter",
+            )
+            for path in paths
+        )
+
     def saved(self, result: LoopResult, saved: SavedLoop) -> None:
         """One loop was written."""
         self.steps["new"] += saved.new

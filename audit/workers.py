@@ -23,6 +23,9 @@ Result = TypeVar("Result")
 class Workers(Protocol):
     """Maps a function over items and yields the results in the order of the items."""
 
+    @property
+    def cores(self) -> int: ...
+
     def map(
         self, function: Callable[[Item], Result], items: Iterable[Item]
     ) -> Iterator[Result]: ...
@@ -30,6 +33,8 @@ class Workers(Protocol):
 
 class Serial:
     """One after another, in this process."""
+
+    cores = 1
 
     def map(self, function: Callable[[Item], Result], items: Iterable[Item]) -> Iterator[Result]:
         return map(function, items)
@@ -40,6 +45,7 @@ class Processes:
 
     def __init__(self, pool: ProcessPoolExecutor, cores: int, ahead: int = 3) -> None:
         self._pool = pool
+        self.cores = cores
         self._most = cores * ahead
 
     def map(self, function: Callable[[Item], Result], items: Iterable[Item]) -> Iterator[Result]:

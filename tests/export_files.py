@@ -6,9 +6,10 @@ import gzip
 import io
 import lzma
 from collections.abc import Callable, Mapping
-from dataclasses import replace
+from dataclasses import dataclass, fields, replace
 from hashlib import sha256
 from pathlib import Path
+from tempfile import TemporaryDirectory
 from typing import Any
 
 import numpy as np
@@ -16,7 +17,7 @@ import pandas as pd
 import zstandard
 
 from audit.exports import discover, read
-from audit.records import ExportRead, ExportSource, RawSamples
+from audit.records import ExportFile, ExportRead, ExportSource, RawSamples
 
 WANTED = {"FIC-1.PV": False, "FIC-1.SP": False, "FIC-1.MODE": True, "absent": False}
 WIDE = """timestamp,FIC-1.PV,FIC-1.SP,FIC-1.MODE,other
@@ -33,19 +34,35 @@ def a_source(folder: Path, **declared: Any) -> ExportSource:
     return replace(ExportSource("dcs", "*", folder=str(folder)), **declared)
 
 
+@dataclass(frozen=True, eq=False)
+class WholeRead(ExportRead):
+    """What an export holds, its samples in memory."""
+
+    columns: Mapping[str, RawSamples]
+
+
+def read_whole(file: ExportFile, source: ExportSource, wanted: Mapping[str, bool]) -> WholeRead:
+    """One file through ``read``."""
+    with TemporaryDirectory() as scratch:
+        got = read(file, source, wanted, Path(scratch) / "samples")
+        columns = {tag: samples.load() for tag, samples in got.columns.items()}
+        told = {item.name: getattr(got, item.name) for item in fields(ExportRead)}
+        return WholeRead(**told | {"columns": columns})
+
+
 def read_bytes(
     folder: Path,
     content: bytes | str,
     name: str = "a.csv",
     wanted: Mapping[str, bool] = WANTED,
     **declared: Any,
-) -> ExportRead:
+) -> WholeRead:
     """One file through discover and read; its account must balance."""
     data = content.encode() if isinstance(content, str) else content
     (folder / name).write_bytes(data)
     source = a_source(folder, files=name, **declared)
     (file,) = discover(source)
-    got = read(file, source, wanted)
+    got = read_whole(file, source, wanted)
     assert got.account.balance == 0
     assert got.content_hash == sha256(data).hexdigest()
     for raw in got.columns.values():
@@ -99,7 +116,7 @@ PACKED: dict[str, Callable[[bytes], bytes]] = {
 }
 
 
-def check_wide(got: ExportRead) -> None:
+def check_wide(got: WholeRead) -> None:
     assert got.named == ("FIC-1.MODE", "FIC-1.PV", "FIC-1.SP")
     assert {tag: as_rows(raw) for tag, raw in got.columns.items()} == {
         "FIC-1.MODE": [(0.0, "AUTO"), (1.0, "1"), (2.5, "1"), (4.0, "MAN")],

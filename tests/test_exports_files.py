@@ -9,12 +9,13 @@ from typing import Any
 import fsspec
 import pytest
 from export_files import NARROW, PACKED, WANTED, WIDE, check_wide, parquet_of
+from export_files import read_whole as read
 from fsspec.implementations.memory import MemoryFileSystem
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from audit.errors import ExportRefused
-from audit.exports import discover, first_stamp, peek, read
+from audit.exports import discover, first_stamp, peek
 from audit.exports.files import revision
 from audit.records import ExportRead, ExportSource
 

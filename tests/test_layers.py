@@ -28,7 +28,8 @@ MAY_KNOW: dict[str, set[str]] = {
     "register": {*VOCABULARY, "sitefiles"},
     "site": {*VOCABULARY, "config", "register"},
     # the rooms on the way of the data: none knows another
-    "exports": VOCABULARY,
+    "scratch": VOCABULARY,
+    "exports": {*VOCABULARY, "scratch"},
     "quality": VOCABULARY,
     "days": VOCABULARY,
     "setpoints": VOCABULARY,
@@ -43,7 +44,10 @@ MAY_KNOW: dict[str, set[str]] = {
     "demo_site": set(),
     "starter": set(),
     # one loop's way through the rooms, still without file, clock or database
-    "loopwork": {*VOCABULARY, "days", "quality", "response", "setpoints", "verdict", "weaving"},
+    "loopwork": {
+        *VOCABULARY,
+        *("days", "quality", "response", "setpoints", "tag_states", "verdict", "weaving"),
+    },
     "standings": {*VOCABULARY, "loopwork", "ranking", "response", "trend"},
     "feed": {*VOCABULARY, "figures"},
     "tag_states": VOCABULARY,
@@ -53,7 +57,17 @@ MAY_KNOW: dict[str, set[str]] = {
     "run_report": {*VOCABULARY, "store"},
     "nightly": {
         *VOCABULARY,
-        *("feed", "gather", "intake", "loopwork", "ranking", "run_report", "site", "standings"),
+        *(
+            "feed",
+            "feed_facts",
+            "gather",
+            "intake",
+            "loopwork",
+            "ranking",
+            "run_report",
+            "site",
+            "standings",
+        ),
         *("store", "weaving", "workers"),
     },
     "feed_facts": {*VOCABULARY, "feed", "store"},
@@ -82,7 +96,7 @@ ONLY = {
     "rich": {"cli"},
     "apscheduler": set(),
     "multiprocessing": {"workers"},
-    "concurrent": {"workers"},
+    "concurrent": {"workers", "exports"},
 }
 
 CLOCK = {

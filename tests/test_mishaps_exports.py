@@ -12,9 +12,10 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 from export_files import START_US, WIDE, a_source, as_rows, read_bytes
+from export_files import read_whole as read
 
 from audit.errors import ExportRefused
-from audit.exports import discover, peek, read
+from audit.exports import discover, peek
 from audit.workers import workers
 
 
@@ -55,8 +56,10 @@ def test_a_loop_of_links_and_an_odd_name_are_refused_alone(tmp_path: Path) -> No
             said[file.path] = f"{len(read(file, source, {}).columns)} tags"
         except ExportRefused as refused:
             said[file.path] = refused.reason
-    assert list(said) == ["a.csv", r"e\xe4.csv", "f.csv"]
+    assert list(said) == ["a.csv", "b.csv", "d.csv", r"e\xe4.csv", "f.csv"]
     assert "links" in said["a.csv"]
+    assert "leads nowhere" in said["b.csv"]
+    assert "a pipe" in said["d.csv"]
     assert "not UTF-8" in said[r"e\xe4.csv"]
     assert said["f.csv"] == "0 tags"
 
@@ -133,8 +136,8 @@ def test_a_type_that_nothing_can_be_made_of_refuses_the_file(
     def unknown(*_: object) -> None:
         raise pa.ArrowNotImplementedError("no kernel matching input types")
 
-    monkeypatch.setattr("audit.exports.layouts.taken", unknown)
-    with pytest.raises(ExportRefused, match=r"type that cannot be read \(timestamp string"):
+    monkeypatch.setattr("audit.exports.layouts.parts", unknown)
+    with pytest.raises(ExportRefused, match=r"type that cannot be read \(timestamp"):
         read_bytes(tmp_path, WIDE)
     (file,) = discover(a_source(tmp_path, files="a.csv"))
     with pytest.raises(ExportRefused, match="type that cannot be read"):

@@ -61,8 +61,9 @@ def test_span_arithmetic_agrees_with_sets_of_instants(
 
 def test_of_two_files_the_later_path_holds_where_both_cover() -> None:
     fresh = [export("b.csv", (0, 5, 10), 2.0), export("a.csv", (4, 8, 12), 1.0)]
-    tags, accounts = settle(fresh, [])
-    raw = tags["A"].raw.samples
+    settled = settle(fresh, [])
+    tags, accounts = settled.tags, settled.accounts
+    raw = tags["A"].load().samples
     assert raw.t_us.tolist() == [0, 5, 10, 12]
     assert raw.value.tolist() == [2.0, 2.0, 2.0, 1.0]
     assert (accounts[1].taken, accounts[1].replaced, accounts[1].balance) == (1, 2, 0)
@@ -71,8 +72,8 @@ def test_of_two_files_the_later_path_holds_where_both_cover() -> None:
 
 
 def test_revision_goes_before_the_path() -> None:
-    tags, _ = settle([export("a.csv", (0, 10), 1.0, 2), export("b.csv", (0, 10), 2.0, 1)], [])
-    assert tags["A"].raw.samples.value.tolist() == [1.0, 1.0]
+    fresh = [export("a.csv", (0, 10), 1.0, 2), export("b.csv", (0, 10), 2.0, 1)]
+    assert settle(fresh, []).tags["A"].load().samples.value.tolist() == [1.0, 1.0]
 
 
 @pytest.mark.parametrize(
@@ -80,17 +81,17 @@ def test_revision_goes_before_the_path() -> None:
 )
 def test_stored_coverage_wins_or_loses_by_the_same_rule(path: str, held: list[int]) -> None:
     stored = [Coverage("A", 5, 15, "dcs", "m.csv", 0)]
-    tags, accounts = settle([export(path, (0, 3, 7, 13, 17, 20), 1.0)], stored)
-    assert tags["A"].raw.samples.t_us.tolist() == held
-    assert accounts[0].replaced == 6 - len(held)
+    settled = settle([export(path, (0, 3, 7, 13, 17, 20), 1.0)], stored)
+    assert settled.tags["A"].load().samples.t_us.tolist() == held
+    assert settled.accounts[0].replaced == 6 - len(held)
 
 
 def test_new_content_of_a_path_also_clears_where_only_the_old_reached() -> None:
     stored = [Coverage("A", 0, 100, "dcs", "m.csv", 0), Coverage("B", 0, 100, "dcs", "m.csv", 0)]
-    tags, _ = settle([export("m.csv", (40, 50), 1.0)], stored)
+    tags = settle([export("m.csv", (40, 50), 1.0)], stored).tags
     assert tags["A"].spans == ((0, 100),)
     assert tags["B"].spans == ((0, 100),)
-    assert len(tags["B"].raw.samples) == 0
+    assert len(tags["B"].load().samples) == 0
 
 
 def test_weave_replaces_kept_samples_only_in_the_replaced_spans() -> None:

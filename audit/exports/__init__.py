@@ -4,7 +4,7 @@ files (where they lie, bytes) -> csv_file | parquet_file (a sheet of columns) ->
 (stamps), codes (quality), cells (values) -> layouts (wide or narrow, samples) -> intake.
 """
 
-from audit.exports.files import discover
-from audit.exports.intake import Peek, first_stamp, peek, read
+from audit.exports.files import discover, same_file
+from audit.exports.intake import Peek, first_stamp, named, peek, read
 
-__all__ = ["Peek", "discover", "first_stamp", "peek", "read"]
+__all__ = ["Peek", "discover", "first_stamp", "named", "peek", "read", "same_file"]

@@ -35,6 +35,11 @@ def is_good(text: str, source: ExportSource) -> bool | None:
     return None if quality is None else quality is Quality.GOOD
 
 
+def whole(text: str) -> str:
+    """The text of a code that came as a number with decimals, such as 192.0, without them."""
+    return re.sub(r"\.0*$", "", text)
+
+
 def opc_da(code: int) -> Quality | None:
     """OPC Data Access 3.0, section 6.8: the low byte is QQSSSSLL, QQ 0 bad, 1 uncertain, 3 good.
 

@@ -1,9 +1,9 @@
-"""Bytes of a Parquet file come in, a Sheet of its columns as they are typed goes out."""
+"""A Parquet file comes in, Sheets of its columns as they are typed go out, some rows at a time."""
 
 from __future__ import annotations
 
-import io
-from collections.abc import Mapping
+from collections.abc import Generator, Iterator, Mapping
+from pathlib import Path
 from typing import Any, BinaryIO
 
 import pyarrow as pa
@@ -11,51 +11,63 @@ import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
 from audit.errors import ExportRefused
-from audit.exports.sheet import Sheet, asked_for, check_names
+from audit.exports.sheet import ArrowColumn, Sheet, asked_for, check_names
 from audit.records import ExportSource
 
+_CELLS_AT_ONCE = 4_000_000
+_LEAST_ROWS = 1 << 10
+_MOST_ROWS = 1 << 20
 _BYTES = (pa.types.is_binary, pa.types.is_large_binary, pa.types.is_fixed_size_binary)
 
 
-def sheet(data: bytes, source: ExportSource, wanted: Mapping[str, object], path: str) -> Sheet:
-    """The asked-for columns of a whole Parquet file. Raises ExportRefused."""
-    return _read(io.BytesIO(data), source, wanted, path, None)
+def pieces(
+    stored: Path | BinaryIO,
+    source: ExportSource,
+    wanted: Mapping[str, bool],
+    path: str,
+    threads: int = 1,
+    rows: int | None = None,
+) -> Generator[Sheet, None, None]:
+    """The asked-for columns, some rows at a time; at least one Sheet. Raises ExportRefused.
 
-
-def head(
-    stream: BinaryIO, source: ExportSource, wanted: Mapping[str, object], path: str, rows: int
-) -> Sheet:
-    """As ``sheet``, the first ``rows`` rows alone; reads the footer and what those rows need."""
-    return _read(stream, source, wanted, path, rows)
-
-
-def _read(
-    stream: Any, source: ExportSource, wanted: Mapping[str, object], path: str, rows: int | None
-) -> Sheet:
+    ``rows``: only so many, from the beginning. What is read of the file are its footer and the
+    pages of those columns; memory is bounded by a row group as it is stored and one piece.
+    """
     try:
-        file = pq.ParquetFile(stream)
-        names = tuple(str(name) for name in file.schema_arrow.names)
+        footer = pq.read_metadata(stored)
+        names = tuple(str(name) for name in footer.schema.to_arrow_schema().names)
         check_names(names, source, path, None)
         asked = asked_for(names, source, wanted)
-        if rows is None:
-            table = file.read(columns=asked)
-        else:
-            first = next(iter(file.iter_batches(batch_size=rows, columns=asked)), None)
-            empty = file.schema_arrow.empty_table()
-            table = empty if first is None else pa.Table.from_batches([first])
+        modes = [name for name in asked if wanted.get(name)]
+        with pq.ParquetFile(stored, metadata=footer, read_dictionary=modes) as file:
+            yield from _pieces(file, names, asked, path, threads, rows)
     except (pa.ArrowException, OSError, EOFError) as error:
         raise ExportRefused(
             path,
             f"not readable as Parquet: {error}",
             "the file is cut short or damaged; export it again",
         ) from error
-    columns = {name: _one(table.column(name)) for name in asked}
-    return Sheet(path, names, columns, table.num_rows, lambda row: None)
 
 
-def _one(column: Any) -> Any:
-    whole = column.combine_chunks()
-    return _plain(pa.concat_arrays(whole.chunks) if isinstance(whole, pa.ChunkedArray) else whole)
+def _pieces(
+    file: Any, names: tuple[str, ...], asked: list[str], path: str, threads: int, rows: int | None
+) -> Iterator[Sheet]:
+    at_once = rows or min(_MOST_ROWS, max(_LEAST_ROWS, _CELLS_AT_ONCE // len(asked)))
+    done = 0
+    for batch in file.iter_batches(batch_size=at_once, columns=asked, use_threads=threads > 1):
+        yield _sheet(batch, names, asked, path, done)
+        done += batch.num_rows
+        if rows is not None:
+            return
+    if done == 0:
+        empty = pa.RecordBatch.from_pylist([], schema=file.schema_arrow)
+        yield _sheet(empty, names, asked, path, 0)
+
+
+def _sheet(batch: Any, names: tuple[str, ...], asked: list[str], path: str, done: int) -> Sheet:
+    place = {name: at for at, name in enumerate(batch.schema.names)}
+    columns = {name: ArrowColumn(_plain(batch.column(place[name]))) for name in asked}
+    return Sheet(path, names, columns, batch.num_rows, lambda row: None, first_row=done)
 
 
 def _plain(column: Any) -> Any:

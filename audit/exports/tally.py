@@ -52,8 +52,9 @@ REFUSED = {
 class Tally:
     """Counts of one file, and at most FAULTS_SHOWN examples of what was refused."""
 
-    def __init__(self, sheet: Sheet) -> None:
-        self._sheet = sheet
+    def __init__(self) -> None:
+        self.rows = 0
+        self.read = 0
         self._refused: Counter[str] = Counter()
         self._faults: list[Fault] = []
         self._shown: Counter[str] = Counter()
@@ -64,15 +65,22 @@ class Tally:
         self.bad_quality = 0
         self.unregistered = 0
 
-    def ragged(self, cells_each: int) -> None:
-        """Rows with too few or too many cells: the declared number of value cells of each."""
-        if self._sheet.ragged:
-            self._refused["ragged_row"] += self._sheet.ragged * cells_each
-        for row in self._sheet.ragged_rows[:_EACH_SHOWN]:
-            self._show("ragged_row", row.line, f"{row.found} instead of {row.expected}", None, None)
+    def piece(self, sheet: Sheet, cells_each: int) -> None:
+        """The next piece of the file, with ``cells_each`` value cells in a row.
+
+        Rows with too few or too many cells have all of them refused.
+        """
+        self.rows += sheet.rows + sheet.ragged
+        self.read += (sheet.rows + sheet.ragged) * cells_each
+        if sheet.ragged:
+            self._refused["ragged_row"] += sheet.ragged * cells_each
+        for row in sheet.ragged_rows[: max(0, _EACH_SHOWN - self._shown["ragged_row"])]:
+            found = f"{row.found} instead of {row.expected}"
+            self._show("ragged_row", sheet.path, row.line, found, None, None)
 
     def refuse(
         self,
+        sheet: Sheet,
         reason: str,
         rows: NDArray[np.int64],
         text_of: Callable[[int], object],
@@ -80,21 +88,21 @@ class Tally:
         tag_of: Callable[[int], str | None] = lambda row: None,
         cells_each: int = 1,
     ) -> None:
-        """Cells refused in these rows of the sheet; the text and tag only of those shown."""
+        """Cells refused in these rows of a piece; the text and tag only of those shown."""
         if len(rows) == 0:
             return
         self._refused[reason] += len(rows) * cells_each
-        for row in rows[: _EACH_SHOWN - self._shown[reason]].tolist():
-            line = self._sheet.line_of(row)
+        for row in rows[: max(0, _EACH_SHOWN - self._shown[reason])].tolist():
+            line = sheet.line_of(row)
             found = repr(text_of(row))[:_TEXT_SHOWN]
-            where = found if line is not None else f"{found} in row {row + 1}"
-            self._show(reason, line, where, column, tag_of(row))
+            where = found if line is not None else f"{found} in row {sheet.first_row + row + 1}"
+            self._show(reason, sheet.path, line, where, column, tag_of(row))
 
-    def account(self, read: int) -> CellAccount:
-        """The account; ``read`` is counted by the caller from the shape of the file."""
+    def account(self) -> CellAccount:
+        """The account of the file."""
         return CellAccount(
-            rows=self._sheet.rows + self._sheet.ragged,
-            read=read,
+            rows=self.rows,
+            read=self.read,
             taken=self.taken,
             duplicate=self.duplicate,
             replaced=self.replaced,
@@ -110,10 +118,14 @@ class Tally:
         return tuple(sorted(shown, key=lambda fault: fault.line or 0))
 
     def _show(
-        self, reason: str, line: int | None, found: str, column: str | None, tag: str | None
+        self,
+        reason: str,
+        path: str,
+        line: int | None,
+        found: str,
+        column: str | None,
+        tag: str | None,
     ) -> None:
         problem, remedy = REFUSED[reason]
         self._shown[reason] += 1
-        self._faults.append(
-            Fault(self._sheet.path, f"{problem}: {found}", remedy, line, column, tag)
-        )
+        self._faults.append(Fault(path, f"{problem}: {found}", remedy, line, column, tag))

@@ -26,8 +26,9 @@ Flag = NDArray[np.bool_]
 
 @dataclass(frozen=True, eq=False)
 class Walls:
-    """Wall stamps [n] against a zone's changes. ``change`` is the index of the change a repeated
-    stamp belongs to; ``earlier`` is its first UTC reading, ``later`` the second (else equal)."""
+    """Wall stamps [n] against a zone's changes. ``change`` is the UTC instant of the change that a
+    repeated stamp belongs to; ``earlier`` is its first UTC reading, ``later`` the second (else
+    equal)."""
 
     earlier: Whole
     later: Whole
@@ -47,32 +48,60 @@ def placed(wall_us: Whole, zone: ZoneInfo) -> Walls:
     after = np.minimum(piece + inside, len(at))
     back = offset[after] < offset[piece]
     earlier, later = wall_us - offset[piece], wall_us - offset[after]
-    return Walls(earlier, later, piece, inside & back, inside & ~back)
+    change = np.append(at, np.iinfo(np.int64).max)[piece]
+    return Walls(earlier, later, change, inside & back, inside & ~back)
 
 
-def told_apart(walls: Walls, wall_us: Whole, groups: NDArray[np.int64]) -> tuple[Flag, Flag]:
-    """Of repeated stamps: which can be told by the order of the rows, and which are the later one.
+class Order:
+    """The order of a file's wall stamps, followed piece by piece; it tells a repeated hour apart.
 
-    ``groups`` [n]: rows of one group stand in the order they were recorded in (a wide file, or one
-    tag of a narrow one). Certain is a group whose stamps go back exactly once at a change, inside
-    the repeated hour, and never anywhere else.
+    Rows of one group stand in the order they were recorded in (a wide file, or one tag of a narrow
+    one). Certain is a group whose stamps go back exactly once at a change, inside the repeated
+    hour, and nowhere else in the file: what stands before is the first reading, the rest the
+    second.
     """
-    order = np.argsort(groups, kind="stable")
-    wall, group, change = wall_us[order], groups[order], walls.change[order]
-    inside = walls.repeated[order]
-    back = (wall[1:] < wall[:-1]) & (group[1:] == group[:-1])
-    at_change = back & inside[1:] & inside[:-1] & (change[1:] == change[:-1])
-    stray = np.unique(group[1:][back & ~at_change])
-    keys, key = np.unique(np.stack([group, change], axis=1), axis=0, return_inverse=True)
-    key = key.reshape(-1)
-    turns = np.bincount(key[1:][at_change], minlength=len(keys))
-    turn_at = np.zeros(len(keys), np.int64)
-    turn_at[key[1:][at_change]] = np.flatnonzero(at_change) + 1
-    sure = inside & (turns[key] == 1) & ~np.isin(group, stray)
-    later = sure & (np.arange(len(wall)) >= turn_at[key])
-    certain, second = np.zeros(len(wall), np.bool_), np.zeros(len(wall), np.bool_)
-    certain[order], second[order] = sure, later
-    return certain, second
+
+    def __init__(self) -> None:
+        self.repeated = False
+        self._turns: dict[tuple[int, int], list[int]] = {}
+        self._stray: set[int] = set()
+        self._last: dict[int, tuple[int, int, bool]] = {}
+
+    def follow(self, walls: Walls, wall_us: Whole, groups: Whole, rows: Whole) -> None:
+        """The next rows of the file: their stamps, groups and numbers in the file [n]."""
+        self.repeated = self.repeated or bool(walls.repeated.any())
+        seen = [code for code in np.unique(groups).tolist() if code in self._last]
+        carried = np.array([self._last[code] for code in seen], np.int64).reshape(-1, 3)
+        group = np.concatenate((np.array(seen, np.int64), groups))
+        order = np.argsort(group, kind="stable")
+        group = group[order]
+        wall = np.concatenate((carried[:, 0], wall_us))[order]
+        change = np.concatenate((carried[:, 1], walls.change))[order]
+        inside = np.concatenate((carried[:, 2] > 0, walls.repeated))[order]
+        row = np.concatenate((np.full(len(seen), -1), rows))[order]
+        same = group[1:] == group[:-1]
+        back = (wall[1:] < wall[:-1]) & same
+        at_change = back & inside[1:] & inside[:-1] & (change[1:] == change[:-1])
+        self._stray.update(np.unique(group[1:][back & ~at_change]).tolist())
+        for at in (np.flatnonzero(at_change) + 1).tolist():
+            self._turns.setdefault((int(group[at]), int(change[at])), []).append(int(row[at]))
+        for at in np.flatnonzero(np.append(~same, True)[: len(group)]).tolist():
+            self._last[int(group[at])] = (int(wall[at]), int(change[at]), bool(inside[at]))
+
+    def told(self, walls: Walls, groups: Whole, rows: Whole) -> tuple[Flag, Flag]:
+        """Of repeated stamps [n]: which can be told, and which of these are the second reading."""
+        certain, second = np.zeros(len(rows), np.bool_), np.zeros(len(rows), np.bool_)
+        at = np.flatnonzero(walls.repeated)
+        pairs = np.stack((groups[at], walls.change[at]), axis=1)
+        keys, key = np.unique(pairs, axis=0, return_inverse=True)
+        key = key.reshape(-1)
+        for number, (group, change) in enumerate(keys.tolist()):
+            turns = self._turns.get((group, change), [])
+            if len(turns) == 1 and group not in self._stray:
+                own = at[key == number]
+                certain[own] = True
+                second[own] = rows[own] >= turns[0]
+        return certain, second
 
 
 def _table(wall_us: Whole, zone: ZoneInfo) -> tuple[Whole, Whole]:

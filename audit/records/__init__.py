@@ -6,7 +6,7 @@ Units are in the names: ``_us`` integer microseconds (an instant ``*_at_us``/``t
 sample that is not good: what was not measured is ``None`` with a ``Reason``.
 """
 
-from audit.records.instants import DAY_US, EPOCH, SECOND_US, instant, local_day, to_us
+from audit.records.instants import DAY_US, EPOCH, SECOND_US, Span, instant, local_day, to_us
 from audit.records.kept import Edge, KeptDay, LoopResult, MeasuredStep, TagState
 from audit.records.plant import (
     ExportSource,
@@ -28,6 +28,7 @@ from audit.records.signals import (
     RawSamples,
     Record,
     Samples,
+    TagSamples,
 )
 from audit.records.standing import (
     DayRecord,
@@ -91,11 +92,13 @@ __all__ = [
     "Role",
     "Samples",
     "SetpointChange",
+    "Span",
     "Spec",
     "Standing",
     "StandingRule",
     "StandingWord",
     "Step",
+    "TagSamples",
     "TagState",
     "Trend",
     "Verdict",

@@ -13,6 +13,10 @@ DAY_US = 86_400 * SECOND_US
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 
 
+Span = tuple[int, int]
+"""A closed interval of instants, microseconds."""
+
+
 def instant(at_us: int) -> datetime:
     """Microseconds since 1970-01-01T00:00Z as an aware UTC time."""
     return EPOCH + timedelta(microseconds=at_us)

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from audit.errors import Fault
+from audit.records.instants import Span
 from audit.records.words import Role
 
 
@@ -44,12 +46,32 @@ class Samples:
 
     def around(self, from_us: int, to_us: int) -> Samples:
         """As ``between``, with the last good sample before and the first good one after."""
-        good_at = self.t_us[self.good]
-        before = int(np.searchsorted(good_at, from_us, "left")) - 1
-        after = int(np.searchsorted(good_at, to_us, "right"))
-        start = int(good_at[before]) if before >= 0 else from_us
-        end = int(good_at[after]) if after < len(good_at) else to_us
-        return self.between(start, end)
+        first = int(self.t_us.searchsorted(from_us, "left"))
+        last = int(self.t_us.searchsorted(to_us, "right"))
+        first = self._good_before(first)
+        last = self._good_from(last)
+        return Samples(self.t_us[first:last], self.value[first:last], self.good[first:last])
+
+    def _good_before(self, index: int) -> int:
+        """Index of the last good sample before an index; the index itself where there is none."""
+        stop, width = index, 1
+        while stop > 0:
+            start = max(stop - width, 0)
+            found = self.good[start:stop].nonzero()[0]
+            if len(found):
+                return start + int(found[-1])
+            stop, width = start, 8 * width
+        return index
+
+    def _good_from(self, index: int) -> int:
+        """Index after the first good sample from an index on; the index where there is none."""
+        start, width = index, 1
+        while start < len(self):
+            found = self.good[start : start + width].nonzero()[0]
+            if len(found):
+                return start + int(found[0]) + 1
+            start, width = start + width, 8 * width
+        return index
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,6 +80,55 @@ class RawSamples:
 
     samples: Samples
     texts: tuple[str, ...] | None = None
+
+    @property
+    def count(self) -> int:
+        return len(self.samples)
+
+    @property
+    def first_us(self) -> int:
+        return int(self.samples.t_us[0])
+
+    def load(self, spans: Sequence[Span] | None = None) -> RawSamples:
+        """The samples in the disjoint, ordered spans; None: all of them."""
+        if spans is None:
+            return self
+        us = self.samples.t_us
+        inside = np.zeros(len(us), np.bool_)
+        for start, end in spans:
+            inside |= (us >= start) & (us <= end)
+        held = Samples(us[inside], self.samples.value[inside], self.samples.good[inside])
+        return RawSamples(held, self.texts)
+
+    def counted(self, spans: Sequence[Span]) -> tuple[int, int]:
+        """How many samples lie in the spans: good ones, others."""
+        good = self.load(spans).samples.good
+        return int(np.count_nonzero(good)), int(np.count_nonzero(~good))
+
+    def good_until(self, until_us: int) -> tuple[int | None, int]:
+        """The newest good stamp not after ``until_us``, and how many good ones are after it."""
+        good_us = self.samples.t_us[self.samples.good]
+        past = int(np.searchsorted(good_us, until_us, "right"))
+        return (int(good_us[past - 1]) if past else None), len(good_us) - past
+
+
+class TagSamples(Protocol):
+    """The samples an export gives of one tag, in memory (``RawSamples``) or on scratch."""
+
+    @property
+    def count(self) -> int: ...
+
+    @property
+    def first_us(self) -> int: ...
+
+    def load(self, spans: Sequence[Span] | None = None) -> RawSamples:
+        """The samples in the disjoint, ordered spans; None: all of them."""
+
+    def counted(self, spans: Sequence[Span]) -> tuple[int, int]:
+        """How many samples lie in the spans: good ones, others."""
+
+    def good_until(self, until_us: int) -> tuple[int | None, int]:
+        """The newest good stamp not after ``until_us``, and how many good ones are after it."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -68,7 +139,8 @@ class Record:
 
     def of(self, role: Role) -> Samples:
         """The samples of a role; empty where the loop has no such tag or nothing came."""
-        return self.signals.get(role, Samples.empty())
+        found = self.signals.get(role)
+        return Samples.empty() if found is None else found
 
     def around(self, from_us: int, to_us: int) -> Record:
         """Each signal in from_us..to_us with its bounding good samples."""
@@ -125,7 +197,7 @@ class ExportRead:
     first_us: int | None
     last_us: int | None
     named: tuple[str, ...]
-    columns: Mapping[str, RawSamples]
+    columns: Mapping[str, TagSamples]
     account: CellAccount
     faults: tuple[Fault, ...] = ()
 

@@ -7,7 +7,6 @@ from collections.abc import Collection, Iterable
 from datetime import datetime
 from typing import Any
 
-import numpy as np
 from sqlalchemy import insert, select, update
 from sqlalchemy.orm import Session
 
@@ -16,8 +15,12 @@ from audit.store.bulk import add, portions
 from audit.store.tables import ExportRow, TagOfSetRow, TagSetRow
 
 
-def begin_export(s: Session, file: ExportFile, read: ExportRead, now: datetime) -> int:
+def begin_export(
+    s: Session, file: ExportFile, read: ExportRead, now: datetime, asked: Collection[str] = ()
+) -> int:
     """Enters a file that was read, as "reading", with the time it covers; returns its id.
+
+    ``asked``: the tags it was asked for, whether it names them or not.
 
     The content replaces the older one of the same path. What the older one covered stays known
     until ``finish_exports``: an audit that is cut off in between must still find what to replace.
@@ -31,6 +34,7 @@ def begin_export(s: Session, file: ExportFile, read: ExportRead, now: datetime) 
         "first_us": read.first_us,
         "last_us": read.last_us,
         "tag_set_id": None if read.first_us is None else _tag_set(s, read.named),
+        "asked_set_id": _tag_set(s, asked),
         "newest_good_us": newest,
         "future_stamps": future,
         "superseded_at": None,
@@ -61,6 +65,7 @@ def refuse_export(s: Session, file: ExportFile, reason: str, now: datetime) -> N
         "first_us": None,
         "last_us": None,
         "tag_set_id": None,
+        "asked_set_id": None,
         "newest_good_us": None,
         "future_stamps": 0,
         "superseded_at": None,
@@ -121,15 +126,9 @@ def _account_values(account: CellAccount) -> dict[str, Any]:
 
 def _newest_good(read: ExportRead, now_us: int) -> tuple[int | None, int]:
     """The newest good stamp that is not in the future, and how many good ones are."""
-    newest: list[int] = []
-    future = 0
-    for column in read.columns.values():
-        good = column.samples.t_us[column.samples.good]
-        past = int(np.searchsorted(good, now_us, "right"))
-        future += len(good) - past
-        if past:
-            newest.append(int(good[past - 1]))
-    return max(newest, default=None), future
+    found = [column.good_until(now_us) for column in read.columns.values()]
+    newest = [stamp for stamp, _ in found if stamp is not None]
+    return max(newest, default=None), sum(future for _, future in found)
 
 
 def _supersede(s: Session, path: str, now: datetime) -> None:

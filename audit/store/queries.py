@@ -20,6 +20,7 @@ from audit.records import (
 )
 from audit.store.bulk import portions
 from audit.store.entries import NightInfo, RunInfo, SeenExport, StoredLoop
+from audit.store.lease import running
 from audit.store.past import (
     curve,
     day_records,
@@ -69,6 +70,7 @@ __all__ = [
     "nights",
     "past_steps",
     "past_steps_many",
+    "running",
     "runs",
     "site_name",
     "size",

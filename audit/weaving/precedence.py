@@ -12,10 +12,17 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
-from numpy.typing import NDArray
 
-from audit.records import CellAccount, Coverage, ExportFile, ExportRead, RawSamples, Samples
-from audit.weaving.spans import Span, inside, pick, subtract, union
+from audit.records import (
+    CellAccount,
+    Coverage,
+    ExportFile,
+    ExportRead,
+    RawSamples,
+    Samples,
+    TagSamples,
+)
+from audit.weaving.spans import Span, subtract, union
 
 
 @dataclass(frozen=True, eq=False)
@@ -23,53 +30,112 @@ class FreshTag:
     """What new export files say of one tag.
 
     ``spans``: where they hold, disjoint and in order; whatever was known of the tag there is
-    replaced by ``raw``, whose stamps all lie inside them.
+    replaced. ``parts``: an export's samples of the tag, and the spans in which they hold.
     """
 
     spans: tuple[Span, ...]
-    raw: RawSamples
+    parts: tuple[tuple[TagSamples, tuple[Span, ...]], ...] = ()
+
+    def load(self) -> RawSamples:
+        """The samples that hold, all within the spans."""
+        return _concatenate([samples.load(spans) for samples, spans in self.parts])
+
+    def within(self, start: int, end: int) -> FreshTag:
+        """What holds from one instant to another, both inclusive."""
+        parts = [(samples, _clipped(spans, start, end)) for samples, spans in self.parts]
+        return FreshTag(_clipped(self.spans, start, end), tuple(p for p in parts if p[1]))
+
+
+def _clipped(spans: Iterable[Span], start: int, end: int) -> tuple[Span, ...]:
+    return tuple((max(a, start), min(b, end)) for a, b in spans if a <= end and b >= start)
 
 
 @dataclass(frozen=True, eq=False)
 class FreshExport:
-    """One export file and what was read from it."""
+    """One export file and what was read from it.
+
+    ``only``: the tags it was read again for; what it says of others is known. None: it is new.
+    """
 
     file: ExportFile
     read: ExportRead
+    only: frozenset[str] | None = None
+
+    def span(self) -> Span | None:
+        """From its first to its last stamp; None for a file without."""
+        first, last = self.read.first_us, self.read.last_us
+        return None if first is None or last is None else (first, last)
+
+    def is_new_for(self, tag: str) -> bool:
+        return self.only is None or tag in self.only
 
 
-def settle(
-    fresh: Sequence[FreshExport], stored: Sequence[Coverage]
-) -> tuple[dict[str, FreshTag], list[CellAccount]]:
+@dataclass(frozen=True, eq=False)
+class Settled:
+    """What holds once every export's rank is weighed.
+
+    ``tags``: by name. ``accounts``: the files', in their order. ``exposed``: paths of stored
+    exports that hold again where earlier content of a fresh path has gone, with the tags concerned:
+    their samples there were not kept.
+    """
+
+    tags: Mapping[str, FreshTag]
+    accounts: Sequence[CellAccount]
+    exposed: Mapping[str, frozenset[str]]
+
+
+def settle(fresh: Sequence[FreshExport], stored: Sequence[Coverage]) -> Settled:
     """Decide between the fresh exports, and between them and the stored coverage.
 
     ``stored`` may hold earlier content of a fresh path: that content is gone, and the spans in
     which it held are replaced too (by nothing, where the new content does not reach).
-    Returns the tags by name and the files' accounts in the order of ``fresh``.
     """
-    paths = {export.file.path for export in fresh}
+    by_path = {export.file.path: export for export in fresh}
     known: dict[str, list[Coverage]] = {}
     for cover in stored:
         known.setdefault(cover.tag, []).append(cover)
+    naming = _by_tag(fresh)
     accounts = [export.read.account for export in fresh]
     tags: dict[str, FreshTag] = {}
-    for tag, exports in _by_tag(fresh).items():
-        others = [cover for cover in known.get(tag, []) if cover.path not in paths]
-        parts, spans = [], []
-        for index in exports:
-            export = fresh[index]
-            rivals = others + [_coverage(tag, fresh[i]) for i in exports if i != index]
-            won = _won(_coverage(tag, export), rivals)
-            raw = export.read.columns.get(tag)
+    exposed: dict[str, set[str]] = {}
+    for tag in dict.fromkeys([*naming, *known]):
+        covers = known.get(tag, [])
+        others = [cover for cover in covers if cover.path not in by_path]
+        gone = [c for c in covers if c.path in by_path and by_path[c.path].is_new_for(tag)]
+        spans, parts = _holding(tag, naming.get(tag, []), fresh, others, accounts)
+        left = [span for cover in gone for span in _won(cover, others)]
+        if spans or left:
+            tags[tag] = FreshTag(tuple(union([*spans, *left])), tuple(parts))
+        open_again = subtract(left, [_span(fresh[index]) for index in naming.get(tag, [])])
+        for cover in others:
+            if any(cover.from_us <= end and cover.to_us >= start for start, end in open_again):
+                exposed.setdefault(cover.path, set()).add(tag)
+    return Settled(tags, accounts, {path: frozenset(found) for path, found in exposed.items()})
+
+
+def _holding(
+    tag: str,
+    exports: Sequence[int],
+    fresh: Sequence[FreshExport],
+    others: Sequence[Coverage],
+    accounts: list[CellAccount],
+) -> tuple[list[Span], list[tuple[TagSamples, tuple[Span, ...]]]]:
+    """Where the fresh exports hold a tag, and with what; samples lost are counted as replaced."""
+    parts: list[tuple[TagSamples, tuple[Span, ...]]] = []
+    spans: list[Span] = []
+    for index in exports:
+        export = fresh[index]
+        rivals = [*others, *(_coverage(tag, fresh[i]) for i in exports if i != index)]
+        won = _won(_coverage(tag, export), rivals)
+        samples = export.read.columns.get(tag)
+        if samples is not None:
+            lost = subtract([_span(export)], won)
+            accounts[index] = _lose(accounts[index], *samples.counted(lost))
+        if export.is_new_for(tag):
             spans += won
-            if raw is not None:
-                held = inside(raw.samples.t_us, won)
-                accounts[index] = _lose(accounts[index], raw.samples, ~held)
-                parts.append(RawSamples(pick(raw.samples, held), raw.texts))
-        gone = [c for c in known.get(tag, []) if c.path in paths]
-        spans += [span for cover in gone for span in _won(cover, others)]
-        tags[tag] = FreshTag(tuple(union(spans)), _concatenate(parts))
-    return _with_vanished(tags, known, paths), accounts
+            if samples is not None:
+                parts.append((samples, tuple(won)))
+    return spans, parts
 
 
 def _by_tag(fresh: Sequence[FreshExport]) -> dict[str, list[int]]:
@@ -82,24 +148,15 @@ def _by_tag(fresh: Sequence[FreshExport]) -> dict[str, list[int]]:
     return found
 
 
-def _with_vanished(
-    tags: dict[str, FreshTag], known: Mapping[str, Sequence[Coverage]], paths: set[str]
-) -> dict[str, FreshTag]:
-    """Add the tags that a path's earlier content named and its new content does not."""
-    for tag, covers in known.items():
-        if tag not in tags and any(cover.path in paths for cover in covers):
-            others = [cover for cover in covers if cover.path not in paths]
-            spans = [s for c in covers if c.path in paths for s in _won(c, others)]
-            tags[tag] = FreshTag(tuple(union(spans)), RawSamples(Samples.empty()))
-    return tags
-
-
 def _coverage(tag: str, export: FreshExport) -> Coverage:
-    first, last = export.read.first_us, export.read.last_us
-    assert first is not None
-    assert last is not None
     file = export.file
-    return Coverage(tag, first, last, file.source, file.path, file.revision)
+    return Coverage(tag, *_span(export), file.source, file.path, file.revision)
+
+
+def _span(export: FreshExport) -> Span:
+    span = export.span()
+    assert span is not None
+    return span
 
 
 def _won(cover: Coverage, rivals: Iterable[Coverage]) -> list[Span]:
@@ -115,10 +172,8 @@ def _won(cover: Coverage, rivals: Iterable[Coverage]) -> list[Span]:
     return subtract([(cover.from_us, cover.to_us)], higher)
 
 
-def _lose(account: CellAccount, samples: Samples, lost: NDArray[np.bool_]) -> CellAccount:
+def _lose(account: CellAccount, good: int, bad: int) -> CellAccount:
     """Count lost samples as replaced: the good ones were taken, the others bad quality."""
-    good = int((samples.good & lost).sum())
-    bad = int(lost.sum()) - good
     if good + bad == 0:
         return account
     return replace(

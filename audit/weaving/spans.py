@@ -7,10 +7,9 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from audit.records import Samples
+from audit.records import Samples, Span
 
-Span = tuple[int, int]
-"""A closed interval of instants, microseconds."""
+__all__ = ["Span", "inside", "pick", "subtract", "union"]
 
 
 def union(spans: Iterable[Span]) -> list[Span]:
