@@ -19,6 +19,7 @@ from audit.records import (
     StandingWord,
 )
 from audit.store.bulk import portions
+from audit.store.closed import closed_time
 from audit.store.entries import NightInfo, RunInfo, SeenExport, StoredLoop
 from audit.store.lease import running
 from audit.store.past import (
@@ -52,6 +53,7 @@ from audit.store.tables import (
 )
 
 __all__ = [
+    "closed_time",
     "coverage",
     "coverage_of_paths",
     "curve",
