@@ -112,6 +112,12 @@ def test_full_precision_values_cost_no_more_than_their_bits() -> None:
     assert len(encode(record)) < 8 * 400 + 100
 
 
+def test_a_signal_without_a_value_for_each_stamp_is_refused() -> None:
+    odd = Samples(np.arange(5), np.zeros(4), np.ones(5, np.bool_))
+    with pytest.raises(ValueError, match="one value"):
+        encode(Record({Role.PV: odd}))
+
+
 def test_the_digest_is_of_the_content() -> None:
     one, again, other = some.curve(some.T0), some.curve(some.T0), some.curve(some.T0, seed=2)
     assert pack(one).digest == pack(again).digest != pack(other).digest

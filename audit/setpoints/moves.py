@@ -109,6 +109,8 @@ def _portion(sp: Samples, changed: Indices, at: Indices, windows: Windows) -> Mo
     jitter = _jitters(sp.value, changed, near)
     held = near.at[~jitter]
     held = held[~np.isin(held, _spikes(sp, changed, windows))]
+    if not jitter.any():
+        return Moves(held, np.zeros(len(held)))
     noisy, noise_eu = _level_moves(sp.value, changed, near.only(jitter))
     moves = np.concatenate((held, noisy))
     noise = np.concatenate((np.zeros(len(held)), noise_eu))

@@ -42,7 +42,6 @@ _SIGNAL = struct.Struct("<BBI")
 _REGULAR = struct.Struct("<qQ")
 _DECIMAL = struct.Struct("<Bq")
 _COUNT = struct.Struct("<I")
-_PLANES = struct.Struct("<B")
 _NO_STAMPS = np.empty(0, "<u8")
 _SCALES: NDArray[np.float64] = np.array(codec_kernel.SCALES)
 
@@ -88,51 +87,49 @@ def decode(data: bytes) -> Record:
     return Record({role: signals[role] for role in Role if role in signals})
 
 
-class _Compressor(threading.local):
-    """One a thread: making one costs as much as packing a curve."""
+class _Tools(threading.local):
+    """What packing needs, kept by each thread: making it anew takes as long as packing a curve.
+
+    ``words``, ``picks``, ``out``: room for signals of ``count`` samples.
+    """
 
     def __init__(self) -> None:
-        self.made = zstandard.ZstdCompressor(level=_LEVEL)
+        self.compressor = zstandard.ZstdCompressor(level=_LEVEL)
+        self.count = -1
+
+    def make_room(self, count: int) -> None:
+        if count > self.count:
+            self.count = count
+            self.words = np.empty(count, "<u8")
+            self.picks = np.empty(count, "<i8")
+            self.out = np.empty(len(Role) * codec_kernel.most_octets(count), np.uint8)
 
 
-_COMPRESSOR = _Compressor()
+_TOOLS = _Tools()
 
 
 def _compressed(body: bytes) -> bytes:
-    return _MAGIC + _COMPRESSOR.made.compress(body)
+    return _MAGIC + _TOOLS.compressor.compress(body)
 
 
 def _body(record: Record) -> bytes:
-    room = _Room.of(max((len(samples) for samples in record.signals.values()), default=0))
-    put_signal = _kernel()
+    put_signal, tools = _kernel(), _TOOLS
+    tools.make_room(max((len(samples) for samples in record.signals.values()), default=0))
     at = 0
     before = _NO_STAMPS
     for role in Role:
-        if role not in record.signals:
+        samples = record.signals.get(role)
+        if samples is None:
             continue
-        samples = record.signals[role]
         stamps = np.ascontiguousarray(samples.t_us, "<i8").view("<u8")
         value = np.ascontiguousarray(samples.value, "<f8")
         good = np.ascontiguousarray(samples.good)
-        bits = value.view("<u8")
-        at = put_signal(
-            _NUMBER[role], stamps, before, value, bits, good, room.words, room.picks, room.out, at
-        )
+        if not len(stamps) == len(value) == len(good):
+            raise ValueError("a signal needs one value and one flag a stamp")
+        given = (stamps, before, value, value.view("<u8"), good)
+        at = put_signal(_NUMBER[role], *given, tools.words, tools.picks, tools.out, at)
         before = stamps
-    return room.out[:at].tobytes()
-
-
-class _Room(NamedTuple):
-    """Where signals of so many samples are put together."""
-
-    words: NDArray[np.uint64]
-    picks: NDArray[np.int64]
-    out: NDArray[np.uint8]
-
-    @staticmethod
-    def of(count: int) -> _Room:
-        most = len(Role) * codec_kernel.most_octets(count)
-        return _Room(np.empty(count, "<u8"), np.empty(count, "<i8"), np.empty(most, np.uint8))
+    return tools.out[:at].tobytes()
 
 
 @cache
