@@ -27,6 +27,12 @@ def us_of(text: str) -> int:
     return (datetime.fromisoformat(text) - EPOCH) // timedelta(microseconds=1)
 
 
+ODD_STAMPS = [
+    *(None, "", " ", "x", "2026-03-14", "2026-03-14T08:00:00Z", "2026-10-25T02:30", "1700000000.5"),
+    *("2026-03-29T02:30", "2026-10-25 03:30", "20260314T0800Z", "1", "1e9"),
+]
+
+
 def one(text: object, kind: ExportSource) -> int | None:
     read = stamps(pa.array([text]), kind)
     return int(read.us[0]) if read.told[0] == Told.FINE else None
@@ -325,3 +331,12 @@ def test_iso_as_pandas_reads_it(parts: list[tuple[datetime, int, str, int]]) -> 
         exact = Fraction(expected.value if expected.unit == "ns" else expected.as_unit("ns").value)
         assert us == round(exact / 1000)
     assert set(read.told.tolist()) == {Told.FINE}
+
+
+@given(st.lists(st.sampled_from(ODD_STAMPS), max_size=20))
+def test_coded_stamps_read_as_plain_ones(texts: list[str | None]) -> None:
+    plain = pa.array(texts, pa.string())
+    for kind in (source(zone="Europe/Paris"), source("epoch_s"), source("%Y-%m-%d")):
+        read, coded = stamps(plain, kind), stamps(plain.dictionary_encode(), kind)
+        assert read.told.tolist() == coded.told.tolist()
+        assert read.us.tolist() == coded.us.tolist()

@@ -13,6 +13,10 @@ from export_files import NARROW, START_US, WANTED, as_rows, parquet_of, read_byt
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from audit.exports import cells
+from audit.exports.cells import Cell
+from audit.records import ExportSource
+
 
 def test_parquet_cells_of_odd_types(tmp_path: Path) -> None:
     table = pa.table(
@@ -33,16 +37,16 @@ def test_parquet_cells_of_odd_types(tmp_path: Path) -> None:
 
 
 def test_one_bad_cell_costs_one_cell(tmp_path: Path) -> None:
-    cells = ["x", "1,5", "NaN", "inf", "-Infinity", "1_000", "0x10", "1e999", "٣", "1 000", "--1"]
-    cells += ["1.7976931348623157e308", "-3.4028235e38"]  # fill values: the largest of IEEE 754
+    odd = ["x", "1,5", "NaN", "inf", "-Infinity", "1_000", "0x10", "1e999", "٣", "1 000", "--1"]
+    odd += ["1.7976931348623157e308", "-3.4028235e38"]  # fill values: the largest of IEEE 754
     good = ["1", " 2 ", "+3", "4.", ".5", "-6e-1", "0007", "1e-400", "-1e30"]
     lines = [
         f'2026-03-14T08:00:{second:02}Z,"{cell}",1'
-        for second, cell in enumerate([*cells, *good, " ", ""])
+        for second, cell in enumerate([*odd, *good, " ", ""])
     ]
     text = "\n".join(["timestamp,FIC-1.PV,FIC-1.SP", *lines])
     got = read_bytes(tmp_path, text)
-    assert got.account.refused == {"not_a_number": len(cells)}
+    assert got.account.refused == {"not_a_number": len(odd)}
     assert got.account.blank == 2
     assert [cell for _, cell in as_rows(got.columns["FIC-1.PV"])] == [float(cell) for cell in good]
     assert len(got.columns["FIC-1.SP"].samples) == len(lines)
@@ -285,3 +289,64 @@ def test_every_cell_is_counted_once_wide(
     assert {tag: as_rows(raw) for tag, raw in same.columns.items()} == {
         tag: as_rows(raw) for tag, raw in got.columns.items()
     }
+
+
+def test_thousands_where_they_belong(tmp_path: Path) -> None:
+    marked = ["1,234.5", "-1,234,567", "999", "1,000e3", '"+12,345."', "1234,567", "12,34", ",123"]
+    marked += ["1,2345", "1.5,000", "0,001.5"]
+    lines = [f"2026-03-14T08:00:{second:02}Z;{cell}\n" for second, cell in enumerate(marked)]
+    text = "timestamp;FIC-1.PV\n" + "".join(lines)
+    got = read_bytes(tmp_path, text, delimiter=";", thousands=",")
+    values = [1234.5, -1234567.0, 999.0, 1e6, 12345.0, 1.5]
+    assert [cell for _, cell in as_rows(got.columns["FIC-1.PV"])] == values
+    assert got.account.refused == {"not_a_number": 5}
+    swapped = "".join(lines).translate(str.maketrans(",.", ".,"))
+    text = "timestamp;FIC-1.PV\n" + swapped
+    got = read_bytes(tmp_path, text, delimiter=";", thousands=".", decimal=",")
+    assert [cell for _, cell in as_rows(got.columns["FIC-1.PV"])] == values
+
+
+def test_a_thousands_mark_that_is_the_delimiter_too(tmp_path: Path) -> None:
+    text = 'timestamp,FIC-1.PV\n2026-03-14T08:00:00Z,"1,234.5"\n2026-03-14T08:00:01Z,1\n'
+    got = read_bytes(tmp_path, text, thousands=",")
+    assert as_rows(got.columns["FIC-1.PV"]) == [(0.0, 1234.5), (1.0, 1.0)]
+    assert read_bytes(tmp_path, text).account.refused == {"not_a_number": 1}
+
+
+def test_words_for_true_and_false(tmp_path: Path) -> None:
+    words = ["EIN", "aus", " Ein ", "true", "1", "einaus"]
+    lines = [f"2026-03-14T08:00:{second:02}Z,{word},{word}\n" for second, word in enumerate(words)]
+    text = "timestamp,FIC-1.PV,FIC-1.MODE\n" + "".join(lines)
+    got = read_bytes(tmp_path, text, true_words=("ein",), false_words=("Aus",))
+    assert [cell for _, cell in as_rows(got.columns["FIC-1.PV"])] == [1.0, 0.0, 1.0, 1.0]
+    modes = [cell for _, cell in as_rows(got.columns["FIC-1.MODE"])]
+    assert modes == [word.strip() for word in words]
+    usual = read_bytes(tmp_path, text)
+    assert [cell for _, cell in as_rows(usual.columns["FIC-1.PV"])] == [1.0, 1.0]
+
+
+TEXTS = st.lists(
+    st.one_of(
+        st.none(), st.sampled_from(["1", "1.0", " 1", "x", "", " ", "TRUE", "1,000", "1e31"])
+    ),
+    max_size=20,
+)
+
+
+@given(TEXTS, TEXTS)
+def test_coded_texts_read_as_plain_ones(texts: list[str | None], unused: list[str | None]) -> None:
+    source = ExportSource("x", "*", thousands=",")
+    plain = pa.array(texts, pa.string())
+    # Arrow's dictionaries may hold nulls, texts twice, and texts that no cell has
+    dictionary = pa.array([*unused, *texts], pa.string())
+    code = pa.array(range(len(unused), len(unused) + len(texts)), pa.int32())
+    coded: Any = pa.DictionaryArray.from_arrays(code, dictionary)
+    number, same = cells.read_numbers(plain, source), cells.read_numbers(coded, source)
+    assert (number.value.tolist(), number.held.tolist()) == (
+        same.value.tolist(),
+        same.held.tolist(),
+    )
+    word, told = cells.words(plain, "."), cells.words(coded, ".")
+    assert word.texts == told.texts
+    assert (word.value.tolist(), word.held.tolist()) == (told.value.tolist(), told.held.tolist())
+    assert word.all_values == (Cell.BLANK not in word.held.tolist())

@@ -1,13 +1,14 @@
 """Cells of one column come in as an Arrow array, numbers or texts go out, each cell told apart.
 
 Text is parsed to the nearest double. What is no decimal number of up to LARGEST (words, NaN and
-Inf, a historian's fill value such as 3.4e38, a thousands separator, another decimal mark than the
-declared one) costs its cell, never the row.
+Inf, a historian's fill value such as 3.4e38, another decimal or thousands mark than the declared
+one) costs its cell, never the row. The declared words for true and false are 1 and 0.
 """
 
 from __future__ import annotations
 
 import re
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from enum import IntEnum
 from typing import Any
@@ -16,6 +17,8 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
+
+from audit.records import ExportSource
 
 _NUMBER = r"^[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?$"
 _PLAIN = re.compile(_NUMBER)
@@ -37,25 +40,52 @@ class Cell(IntEnum):
 class Cells:
     """One column's cells [n]: ``value`` (0.0 where there is none) and what each cell holds.
 
-    With ``texts`` set, ``value`` is an index into them.
+    With ``texts`` set, ``value`` is an index into them. ``all_values``: each cell is known to hold
+    a value; where it is False nobody has looked.
     """
 
     value: NDArray[np.float64]
     held: NDArray[np.int8]
     texts: tuple[str, ...] | None = None
+    all_values: bool = False
 
     def part(self, start: int, stop: int) -> Cells:
         """Cells start..stop-1."""
-        return Cells(self.value[start:stop], self.held[start:stop], self.texts)
+        return Cells(self.value[start:stop], self.held[start:stop], self.texts, self.all_values)
+
+    def take(self, rows: NDArray[np.int64]) -> Cells:
+        """The cells of these rows, in this order; of row -1 a blank one."""
+        if len(self.value) == 0:
+            return Cells(np.zeros(len(rows)), np.full(len(rows), np.int8(Cell.BLANK)), self.texts)
+        value, held = self.value[rows], self.held[rows]
+        none = rows < 0
+        if none.any():
+            value[none], held[none] = 0.0, Cell.BLANK
+        return Cells(value, held, self.texts, self.all_values and not none.any())
 
 
-def numbers(column: Any, decimal: str) -> Cells:
-    """A column of numbers; ``decimal`` is the decimal mark of its texts."""
+def read_numbers(column: Any, source: ExportSource) -> Cells:
+    """A column of numbers as the source writes them."""
+    words = dict.fromkeys(map(str.casefold, source.false_words), 0.0)
+    words |= dict.fromkeys(map(str.casefold, source.true_words), 1.0)
+    return numbers(column, source.decimal, source.thousands, words)
+
+
+def numbers(
+    column: Any, decimal: str, thousands: str = "", words: Mapping[str, float] | None = None
+) -> Cells:
+    """A column of numbers; ``decimal`` is the decimal mark of its texts.
+
+    ``thousands``: the mark between groups of three digits before it, "": none. ``words``, in
+    lower case (str.casefold), are read as the numbers given.
+    """
     kind = column.type
     if pa.types.is_dictionary(kind):
-        return numbers(pc.cast(column, kind.value_type), decimal)
+        return numbers(column.dictionary, decimal, thousands, words).take(_codes(column))
     if _is_text(kind):
-        return _parsed(_trimmed(column), decimal)
+        column = _trimmed(column)
+        plain = _ungrouped(column, decimal, thousands) if thousands else column
+        return _with_words(_parsed(plain, decimal), column, words or {})
     if pa.types.is_floating(kind) or pa.types.is_integer(kind) or pa.types.is_decimal(kind):
         return _typed(pc.cast(column, pa.float64(), safe=False), column)
     if pa.types.is_boolean(kind):
@@ -69,15 +99,24 @@ def words(column: Any, decimal: str) -> Cells:
 
     Texts are stripped; numbers become their shortest text, so that 1, 1.0 and "1.0" are all "1".
     """
-    coded = as_texts(column).dictionary_encode()
-    canonical = [canonical_text(text, decimal) for text in coded.dictionary.to_pylist()]
+    if not (pa.types.is_dictionary(column.type) and _is_text(column.type.value_type)):
+        column = as_texts(column).dictionary_encode()
+    return coded_words(column.dictionary.to_pylist(), _codes(column), decimal)
+
+
+def coded_words(given: Sequence[str | None], code: NDArray[np.int64], decimal: str) -> Cells:
+    """As ``words``, of texts ``given`` and each cell's index into them (-1: none)."""
+    used = np.bincount(code + 1, minlength=len(given) + 1)[1:]
+    canonical = [
+        canonical_text(text, decimal) if text and count else ""
+        for text, count in zip(given, used.tolist(), strict=True)
+    ]
     texts = tuple(sorted({text for text in canonical if text}))
     place = {text: at for at, text in enumerate(texts)}
-    index = np.array([place.get(text, -1) for text in canonical] or [-1], np.int64)
-    code = pc.fill_null(coded.indices, -1).to_numpy(zero_copy_only=False)
-    value = np.where(code < 0, -1, index[code])
-    held = np.where(value < 0, np.int8(Cell.BLANK), np.int8(Cell.VALUE))
-    return Cells(np.maximum(value, 0).astype(np.float64), held, texts)
+    value = np.array([*(place.get(text, -1) for text in canonical), -1], np.float64)[code]
+    blank = value < 0
+    all_values = not blank.any()
+    return Cells(np.where(blank, 0.0, value), blank.astype(np.int8), texts, all_values)
 
 
 def canonical_text(text: str, decimal: str = ".") -> str:
@@ -102,6 +141,13 @@ def as_texts(column: Any) -> Any:
     except (pa.ArrowNotImplementedError, pa.ArrowInvalid):
         texts = [None if cell is None else str(cell) for cell in column.to_pylist()]
         return pa.array(texts, pa.string())
+
+
+def _codes(column: Any) -> NDArray[np.int64]:
+    """Each cell's index into the dictionary, -1 where there is none."""
+    indices = pc.cast(column.indices, pa.int64())
+    codes: NDArray[np.int64] = pc.fill_null(indices, -1).to_numpy(zero_copy_only=False)
+    return codes
 
 
 def _is_text(kind: Any) -> bool:
@@ -131,6 +177,30 @@ def _trimmed(column: Any) -> Any:
     return pc.if_else(
         pc.equal(column, pa.scalar("", column.type)), pa.scalar(None, column.type), column
     )
+
+
+def _ungrouped(column: Any, decimal: str, thousands: str) -> Any:
+    """Numbers with thousands marks where they belong without them; all else as it is."""
+    if not pc.any(pc.match_substring(column, thousands)).as_py():
+        return column
+    mark, point = re.escape(thousands), re.escape(decimal)
+    grouped = rf"^[+-]?[0-9]{{1,3}}({mark}[0-9]{{3}})+({point}[0-9]*)?([eE][+-]?[0-9]+)?$"
+    bare = pc.replace_substring(column, thousands, "")
+    return pc.if_else(pc.match_substring_regex(column, grouped), bare, column)
+
+
+def _with_words(cells: Cells, column: Any, words: Mapping[str, float]) -> Cells:
+    """With the numbers that ``words`` stand for, in the cells that hold no number."""
+    rows = np.flatnonzero(cells.held == Cell.NOT_A_NUMBER)
+    if not words or len(rows) == 0:
+        return cells
+    coded = column.take(pa.array(rows)).dictionary_encode()
+    found = [words.get(text.casefold(), np.nan) for text in coded.dictionary.to_pylist()]
+    number = np.array(found)[coded.indices.to_numpy()]
+    known = ~np.isnan(number)
+    value, held = cells.value.copy(), cells.held.copy()
+    value[rows[known]], held[rows[known]] = number[known], Cell.VALUE
+    return Cells(value, held)
 
 
 def _parsed(column: Any, decimal: str) -> Cells:

@@ -28,7 +28,6 @@ from audit.records import SECOND_US, ExportSource
 
 _FIRST = datetime(1970, 1, 1, tzinfo=UTC)
 _LAST_US = int((datetime(2200, 1, 1, tzinfo=UTC) - _FIRST).total_seconds()) * SECOND_US
-_APART_US = 366 * 86_400 * SECOND_US
 _EPOCH_FROM_US = 365 * 86_400 * SECOND_US
 _EPOCH_DIGITS = {"epoch_s": 6, "epoch_ms": 3, "epoch_us": 0, "epoch_ns": -3}
 
@@ -63,49 +62,58 @@ class Stamps:
     told: NDArray[np.int8]
 
 
-def stamps(column: Any, source: ExportSource, groups: NDArray[np.int64] | None = None) -> Stamps:
+@dataclass(frozen=True, eq=False)
+class RowsSoFar:
+    """Where a piece of a file stands: rows before it, the order of wall stamps up to it, and that
+    of the whole file where it was read before."""
+
+    first_row: int
+    order: zones.Order
+    known: zones.Order | None
+
+
+def stamps(
+    column: Any,
+    source: ExportSource,
+    groups: NDArray[np.int64] | None = None,
+    so_far: RowsSoFar | None = None,
+) -> Stamps:
     """UTC of a time column (an Arrow array of any type), as the source declares it.
 
     ``groups`` [n]: which rows stand in the order they were recorded in (default: all); by that
-    order the repeated hour of an autumn clock change is told apart where it can be. A stamp before
-    1970 or from 2200 on is BAD, and so is an epoch number of 1970: today's numbers fall there when
-    they are read in too small a unit. Raises ValueError for a time_format that cannot be followed.
+    order the repeated hour of an autumn clock change is told apart where it can be. ``so_far``: the
+    column is a piece of a file; None: it is the whole of it. A stamp before 1970 or from 2200 on is
+    BAD, and so is an epoch number of 1970: today's numbers fall there when they are read in too
+    small a unit. Raises ValueError for a time_format that cannot be followed.
     """
     read = _bounded(_typed(column, source))
     local = np.flatnonzero(read.told == Told.LOCAL)
     if len(local) == 0:
         return read
-    return _bounded(_settled(read, local, ZoneInfo(source.timezone), groups))
-
-
-def strays(us: NDArray[np.int64]) -> NDArray[np.bool_]:
-    """Which of a file's stamps [n] lie more than a year away from the rest of them.
-
-    A controller whose clock was set back to its epoch, or far ahead, writes such stamps. A file
-    covers all of its time, so that a single one would take the place of years of other exports.
-    The rest is at least 19 in 20 of the file; where nothing is, no stamp is astray.
-    """
-    order = np.argsort(us, kind="stable")
-    part = np.zeros(len(us), np.int64)
-    part[order[1:]] = np.cumsum(np.diff(us[order]) > _APART_US)
-    count = np.bincount(part, minlength=1)
-    if count.max() * 20 < 19 * len(us):
-        return np.zeros(len(us), np.bool_)
-    astray: NDArray[np.bool_] = part != count.argmax()
-    return astray
+    group = np.zeros(len(local), np.int64) if groups is None else groups[local]
+    return _bounded(_settled(read, local, ZoneInfo(source.timezone), group, so_far))
 
 
 def _settled(
-    read: Stamps, local: NDArray[np.int64], zone: ZoneInfo, groups: NDArray[np.int64] | None
+    read: Stamps,
+    local: NDArray[np.int64],
+    zone: ZoneInfo,
+    group: NDArray[np.int64],
+    so_far: RowsSoFar | None,
 ) -> Stamps:
     us, told = read.us.copy(), read.told.copy()
     wall = us[local]
     walls = zones.placed(wall, zone)
     us[local], told[local] = walls.earlier, Told.FINE
     told[local[walls.missing]] = Told.MISSING
+    order = zones.Order() if so_far is None else so_far.order
+    row = local if so_far is None else local + so_far.first_row
+    order.follow(walls, wall, group, row)
     if walls.repeated.any():
-        group = np.zeros(len(local), np.int64) if groups is None else groups[local]
-        certain, second = zones.told_apart(walls, wall, group)
+        known = order if so_far is None else so_far.known
+        certain, second = (walls.missing, walls.missing)
+        if known is not None:
+            certain, second = known.told(walls, group, row)
         us[local[second]] = walls.later[second]
         told[local[walls.repeated & ~certain]] = Told.REPEATED
     return Stamps(us, told)
@@ -124,7 +132,7 @@ def _typed(column: Any, source: ExportSource) -> Stamps:
     """By the column's Arrow type: true time stamps are taken as such, all else as declared."""
     kind = column.type
     if pa.types.is_dictionary(kind):
-        return _typed(pc.cast(column, kind.value_type), source)
+        return _coded(column, source)
     if pa.types.is_timestamp(kind):
         return _native(column, kind.unit, kind.tz is not None)
     if pa.types.is_date(kind):
@@ -135,6 +143,14 @@ def _typed(column: Any, source: ExportSource) -> Stamps:
     if not any(is_kind(kind) for is_kind in kinds):
         return _nothing(len(column))
     return _texts(pc.cast(column, pa.string()), source)
+
+
+def _coded(column: Any, source: ExportSource) -> Stamps:
+    """Each different stamp is read once."""
+    read = _typed(column.dictionary, source)
+    indices = pc.cast(column.indices, pa.int64())
+    code = pc.fill_null(indices, -1).to_numpy(zero_copy_only=False)
+    return Stamps(np.append(read.us, 0)[code], np.append(read.told, np.int8(Told.BAD))[code])
 
 
 def _texts(column: Any, source: ExportSource) -> Stamps:
