@@ -236,6 +236,14 @@ def test_exit_codes_of_an_audit_and_their_order(change: dict[str, Any], code: in
         (("nightly", "--from", "2026-03-14", "--to", "2026-03-13"), "is after --to"),
         (("demo", "--loops", "0"), "'0' is not a number of loops"),
         (("store",), "the following arguments are required: ACTION"),
+        (("store", "prune", "lists"), "arguments are required: --older-than"),
+        (("store", "prune", "--older-than", "2y"), "arguments are required: KIND"),
+        (("store", "prune", "days", "--older-than", "2y"), "invalid choice: 'days'"),
+        (("store", "prune", "runs", "--older-than", "2w"), "'2w' is no age; write 90d, 18m or 2y"),
+        (
+            ("store", "prune", "runs", "--older-than", "2y", "--dry-run", "--vacuum"),
+            "--dry-run and --vacuum do not go together",
+        ),
         (("rank", "--config", "/nowhere/site.toml"), "there is no such file"),
     ],
 )
