@@ -5,13 +5,14 @@ from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
+import numba
 import numpy as np
 import pytest
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from audit.errors import ExportRefused
-from audit.exports import cells, csv_file
+from audit.exports import cells, csv_compiled, csv_file, csv_scan
 from audit.exports.cells import Cell
 from audit.exports.csv_columns import CodedColumn, ParsedColumn
 from audit.exports.sheet import Sheet
@@ -400,3 +401,30 @@ def test_memory_is_used_again_only_when_nothing_refers_to_it() -> None:
         for sheet in csv_file.pieces(stream, WIDE, WANTED, "a.csv", 1, 1_000)
     }
     assert len(places) < len(sheets) / 2
+
+
+def test_nothing_is_asked_for_but_the_time() -> None:
+    (sheet,) = read("timestamp,A,M\nt,1,x\n\nu,2\nv,3,y\n", wanted={}, piece_bytes=99)
+    assert list(sheet.columns) == ["timestamp"]
+    assert texts(sheet, "timestamp") == ["t", "v"]
+    assert [sheet.line_of(row) for row in range(2)] == [2, 5]
+    assert (sheet.ragged, sheet.ragged_rows[0].line) == (1, 4)
+
+
+def test_a_compiled_function_that_cannot_be_kept_is_compiled_all_the_same(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    njit = numba.njit
+
+    def without_a_place(*how: Any, **options: Any) -> Any:
+        if options.pop("cache", False):
+            raise RuntimeError("cannot cache function: no locator available")
+        return njit(*how, **options)
+
+    monkeypatch.setattr(numba, "njit", without_a_place)
+    data, ends = np.frombuffer(b"\nab,c\n", np.uint8).copy(), np.zeros(3, np.int32)
+    at, length = np.array([1, 4], np.int32), np.array([2, 1], np.int32)
+    gather, joined = csv_compiled.compiled(csv_scan.gather, data, at, at, at, data), data.copy()
+    gather(data, at, length, ends, joined)
+    assert joined[:3].tobytes() == b"abc"
+    assert ends.tolist() == [0, 2, 3]

@@ -18,6 +18,7 @@ from audit.exports import cells
 from audit.exports.csv_blocks import Block, too_long
 from audit.exports.csv_columns import CodedColumn, CodedTexts, ParsedColumn
 from audit.exports.csv_compiled import compile_kernels
+from audit.exports.csv_kernel import NUMBER
 from audit.exports.csv_plan import Plan
 from audit.exports.csv_scan import FOUND, LONG
 from audit.exports.sheet import Column, RaggedRow, Sheet
@@ -69,7 +70,7 @@ def _parsed(block: Block, plan: Plan, ragged: list[tuple[int, int]]) -> pa.Table
         ragged.append((row.number, row.actual_columns))
         return "skip"
 
-    place = {plan.names.index(name): name for name in plan.asked}
+    place = {plan.at[name]: name for name in plan.asked}
     names = [place.get(at, f"#{at}") for at in range(len(plan.names))]
     content: Any = block.data[
         block.at - 1 : block.end
@@ -96,7 +97,7 @@ def _parsed(block: Block, plan: Plan, ragged: list[tuple[int, int]]) -> pa.Table
 
 
 def _column(array: Any, name: str, plan: Plan) -> Column:
-    if name in plan.numbers:
+    if plan.kind[plan.at[name]] == NUMBER:
         return ParsedColumn(cells.read_numbers(array, plan.source), _Texts(array))
     coded = array.dictionary_encode()
     codes = coded.indices.fill_null(-1).to_numpy(zero_copy_only=False)

@@ -51,15 +51,15 @@ def compile_kernels() -> Kernels:
     octets, codes, wholes = (np.zeros(1, kind) for kind in (np.uint8, np.int32, np.int64))
     held, floats = np.zeros(1, np.int8), np.zeros(1)
     return Kernels(
-        _compiled(csv_kernel.read_rows, csv_kernel.no_work(), 0, 0),
-        _compiled(csv_scan.find_rows, octets, 0, 0, True, 0, 0, wholes, wholes),
-        _compiled(csv_scan.find_cells, octets, 0, 0, codes, wholes, 0, codes, codes),
-        _compiled(csv_scan.gather, octets, codes, codes, codes, octets),
-        _compiled(csv_scan.settle, floats, held, 0, floats, held),
+        compiled(csv_kernel.read_rows, csv_kernel.no_work(), 0, 0),
+        compiled(csv_scan.find_rows, octets, 0, 0, True, 0, 0, wholes, wholes),
+        compiled(csv_scan.find_cells, octets, 0, 0, codes, wholes, 0, codes, codes),
+        compiled(csv_scan.gather, octets, codes, codes, codes, octets),
+        compiled(csv_scan.settle, floats, held, 0, floats, held),
     )
 
 
-def _compiled(function: Callable[..., Any], *like: Any) -> Callable[..., Any]:
+def compiled(function: Callable[..., Any], *like: Any) -> Callable[..., Any]:
     """``function`` for arguments of the types of ``like``; without a cache where none is possible.
 
     What is kept on disk goes by the function's own name and file alone: the name gets a hash of all
@@ -72,12 +72,12 @@ def _compiled(function: Callable[..., Any], *like: Any) -> Callable[..., Any]:
     if function is csv_scan.settle:
         signature = numba.int64(*map(numba.typeof, like))
     njit: Any = numba.njit  # its types leave out the option _nrt
-    compiled: Callable[..., Any]
+    ready: Callable[..., Any]
     try:
-        compiled = njit(signature, **_OPTIONS, cache=True)(function)
+        ready = njit(signature, **_OPTIONS, cache=True)(function)
     except (OSError, RuntimeError):  # no folder can be written, or the disk is full
-        compiled = njit(signature, **_OPTIONS)(function)
-    return compiled
+        ready = njit(signature, **_OPTIONS)(function)
+    return ready
 
 
 @functools.cache

@@ -128,7 +128,7 @@ def _numbers(
     return {
         name: ParsedColumn(
             Cells(whole[at], work.held[at, :rows], None, bool(without[at] == 0)),
-            _Texts(block, plan.delimiter, work.starts[:rows], plan.names.index(name)),
+            _Texts(block, plan.delimiter, work.starts[:rows], plan.at[name]),
             None,
             whole,
             at,

@@ -55,12 +55,17 @@ class Plan:
         )
 
     @cached_property
+    def at(self) -> Mapping[str, int]:
+        """The place of each column in the file; of equal names the first."""
+        return {name: at for at, name in reversed([*enumerate(self.names)])}
+
+    @cached_property
     def kind(self) -> NDArray[np.int8]:
         """What the kernel makes of each column of the file."""
         kind = np.full(len(self.names), kernel.SKIPPED, np.int8)
-        kind[[self.names.index(name) for name in self.numbers]] = kernel.NUMBER
-        kind[[self.names.index(name) for name in self.texts]] = kernel.TEXT
-        kind[self.names.index(self.time)] = kernel.TIME
+        kind[[self.at[name] for name in self.numbers]] = kernel.NUMBER
+        kind[[self.at[name] for name in self.texts]] = kernel.TEXT
+        kind[self.at[self.time]] = kernel.TIME
         return kind
 
     @cached_property
@@ -68,8 +73,7 @@ class Plan:
         """The place of each column among those of its kind."""
         place = np.zeros(len(self.names), np.int32)
         for group in (self.numbers, self.texts):
-            for at, name in enumerate(group):
-                place[self.names.index(name)] = at
+            place[[self.at[name] for name in group]] = np.arange(len(group))
         return place
 
 
@@ -93,7 +97,8 @@ def plan_of(
         numbers = tuple(name for name in read if not wanted[name])
     else:
         numbers = tuple(name for name in read if name == source.value)
-    texts = tuple(name for name in read if name not in numbers)
+    known = frozenset(numbers)
+    texts = tuple(name for name in read if name not in known)
     return Plan(path, source, names, asked, numbers, texts)
 
 
