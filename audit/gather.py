@@ -11,6 +11,7 @@ from audit.config import Config
 from audit.loopwork import LoopWork, days_known
 from audit.records import (
     ExportSource,
+    KeptDay,
     Loop,
     PastStep,
     Reading,
@@ -56,6 +57,7 @@ class LoopContext:
     specs: Mapping[str, Sequence[Spec]]
     tag_sources: Mapping[str, str]
     tag_states: Mapping[str, Mapping[Role, TagState]]
+    with_past: frozenset[str]
 
     def reading(self, loop: Loop) -> Reading:
         return reading_of(loop, self.tag_sources, self.config.exports)
@@ -71,7 +73,33 @@ def loop_work(
         return None
     reading = context_.reading(loop)
     config = context_.config
-    first_day, last_day = days_known(spans, reading, config.timezone)
+    past = _Past((), (), ())
+    if loop.tag in context_.with_past:
+        past = _past(store, loop, spans, days_known(spans, reading, config.timezone))
+    return LoopWork(
+        loop=loop,
+        specs=tuple(context_.specs.get(loop.tag, ())),
+        reading=reading,
+        error_u_eu=config.standing.error_u_eu,
+        zone=config.timezone,
+        kept=past.kept,
+        fresh=own,
+        touched=past.touched,
+        days=past.days,
+        states=context_.tag_states.get(loop.tag, {}),
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class _Past:
+    """What is kept of a loop around fresh spans: slices, steps that may change, days."""
+
+    kept: tuple[Record, ...]
+    touched: tuple[int, ...]
+    days: tuple[KeptDay, ...]
+
+
+def _past(store: Store, loop: Loop, spans: Sequence[Span], days: tuple[date, date]) -> _Past:
     near = grouped(spans, loop.windows)
     with store.read() as session:
         touched = sorted(
@@ -85,19 +113,8 @@ def loop_work(
         kept += [
             record for span in near for record in queries.edges_next_to(session, loop.tag, *span)
         ]
-        days = queries.kept_days(session, loop.tag, first_day, last_day)
-    return LoopWork(
-        loop=loop,
-        specs=tuple(context_.specs.get(loop.tag, ())),
-        reading=reading,
-        error_u_eu=config.standing.error_u_eu,
-        zone=config.timezone,
-        kept=tuple(kept),
-        fresh=own,
-        touched=tuple(touched),
-        days=tuple(days),
-        states=context_.tag_states.get(loop.tag, {}),
-    )
+        found = queries.kept_days(session, loop.tag, *days)
+    return _Past(tuple(kept), tuple(touched), tuple(found))
 
 
 def spans_at_once(tags: Mapping[str, FreshTag], loops: Sequence[Loop]) -> list[Span]:

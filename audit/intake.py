@@ -5,6 +5,7 @@ What is read lies in a scratch folder of the run until its batch has been worked
 
 from __future__ import annotations
 
+import fcntl
 import hashlib
 import os
 import shutil
@@ -21,6 +22,8 @@ from audit.workers import Serial, Workers
 
 BATCH_CELLS = 100_000_000
 """Samples of a batch: about 1 to 2 GB of scratch, more only where a single file holds more."""
+
+_IN_USE = "in-use"
 
 
 @dataclass(frozen=True)
@@ -135,25 +138,39 @@ def read_again(
 def scratch_folder(named: str, store_url: str) -> Iterator[Path]:
     """An empty folder for one run, in the folder ``named`` ("": the system's temporary one).
 
-    It is always the same one for a store, so that what a run that was killed has left is cleared by
-    the next one; only the run that holds the store may use it.
+    What runs on the same store have left there is cleared, unless they still live.
     """
     mark = hashlib.sha256(f"{os.getuid()} {store_url}".encode()).hexdigest()[:16]
-    folder = Path(named or tempfile.gettempdir()) / f"loopassay-scratch-{mark}"
+    parent = Path(named or tempfile.gettempdir())
     try:
-        if folder.is_symlink():
-            folder.unlink()
-        shutil.rmtree(folder, ignore_errors=True)
-        folder.mkdir(mode=0o700, parents=bool(named))
+        parent.mkdir(parents=True, exist_ok=True)
+        for left in parent.glob(f"loopassay-{mark}-*"):
+            if not left.is_symlink() and not _in_use(left):
+                shutil.rmtree(left, ignore_errors=True)
+        folder = Path(tempfile.mkdtemp(prefix=f"loopassay-{mark}-", dir=parent))
     except OSError as error:
         raise AuditError(
-            f"the scratch folder {folder} cannot be made: {error.strerror}",
+            f"no scratch folder can be made in {parent}: {error.strerror}",
             "name a folder that can be written as scratch in [intake] of site.toml",
         ) from error
     try:
-        yield folder
+        with (folder / _IN_USE).open("w") as mine:
+            fcntl.flock(mine, fcntl.LOCK_EX)
+            yield folder
     finally:
         shutil.rmtree(folder, ignore_errors=True)
+
+
+def _in_use(folder: Path) -> bool:
+    """Whether the run whose scratch folder this is still lives: the lock ends with its process."""
+    try:
+        with (folder / _IN_USE).open() as other:
+            fcntl.flock(other, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return True
+    except FileNotFoundError:
+        return False
+    return False
 
 
 def batches(

@@ -182,12 +182,17 @@ def _take_batch(
     ids = _begin(audit, results, settled.accounts, wanted)
     for span in spans_at_once(settled.tags, audit.site.register.loops):
         tags = {tag: fresh.within(*span) for tag, fresh in settled.tags.items()}
-        for result in audit.pool.map(audit_loop, _loop_works(audit, tags)):
+        for rows in audit.pool.map(work_loop, _loop_works(audit, tags)):
             with audit.store.write(audit.lease) as session:
-                audit.tally.saved(result, writes.save_loop(session, result, audit.now))
+                audit.tally.saved(rows, writes.save_rows(session, rows, audit.now))
     with audit.store.write(audit.lease) as session:
         writes.finish_exports(session, ids, audit.now)
     intake.clear(results)
+
+
+def work_loop(work: LoopWork) -> writes.LoopRows:
+    """One loop's audit, down to the values of its rows: all that another process can do of it."""
+    return writes.rows_of(audit_loop(work))
 
 
 def _settled(
@@ -258,6 +263,7 @@ def _context(audit: _Run) -> LoopContext:
             queries.specs(session),
             queries.tag_sources(session),
             queries.tag_states(session),
+            queries.with_past(session),
         )
 
 

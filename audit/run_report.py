@@ -9,8 +9,8 @@ from datetime import date
 from typing import Protocol
 
 from audit.errors import Fault
-from audit.records import CellAccount, LoopResult
-from audit.store.writes import SavedLoop
+from audit.records import CellAccount
+from audit.store.writes import LoopRows, SavedLoop
 
 
 class Progress(Protocol):
@@ -77,15 +77,14 @@ class Tally:
             for path in paths
         )
 
-    def saved(self, result: LoopResult, saved: SavedLoop) -> None:
+    def saved(self, rows: LoopRows, saved: SavedLoop) -> None:
         """One loop was written."""
         self.steps["new"] += saved.new
         self.steps["changed"] += saved.changed
         self.steps["withdrawn"] += saved.withdrawn
         if saved.new + saved.changed + saved.withdrawn:
-            ends = [measured.step.change.window_end_us for measured in result.steps]
             known = [] if self.earliest_changed_us is None else [self.earliest_changed_us]
-            self.earliest_changed_us = min([*ends, *result.withdrawn, *known])
+            self.earliest_changed_us = min([*rows.ends_us, *rows.withdrawn, *known])
 
     def counts(self) -> Mapping[str, int]:
         """For the run's record in the store."""

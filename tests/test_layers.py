@@ -91,6 +91,7 @@ ONLY = {
     "sqlite3": {"store"},
     "fsspec": {"exports"},
     "pyarrow": {"exports", "demo_site"},
+    "numba": {"exports", "store"},
     "pandas": {"exports"},
     "argparse": {"cli"},
     "rich": {"cli"},

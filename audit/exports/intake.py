@@ -23,7 +23,7 @@ from audit.exports.tally import Tally
 from audit.records import ExportFile, ExportRead, ExportSource
 from audit.scratch import Part, ScratchColumn, ScratchWriter
 
-PIECE_BYTES = 32 << 20
+PIECE_BYTES = 16 << 20
 """Of a CSV file's content in one piece."""
 _PEEK_BYTES = 1 << 18
 _FIRST_BYTES = 1 << 14

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Protocol
@@ -50,7 +51,7 @@ class ArrowColumn:
         return ArrowColumn(self.array.take(pa.array(rows)))
 
     def numbers(self, source: ExportSource) -> Cells:
-        return cells.numbers(self.array, source.decimal)
+        return cells.read_numbers(self.array, source)
 
     def words(self, source: ExportSource) -> Cells:
         return cells.words(self.array, source.decimal)
@@ -123,7 +124,7 @@ def check_names(names: Sequence[str], source: ExportSource, path: str, line: int
             "export fewer tags to a file, or raise the limit in site.toml",
             line,
         )
-    repeated = sorted({name for name in names if name and names.count(name) > 1})
+    repeated = sorted(name for name, count in Counter(names).items() if name and count > 1)
     if repeated:
         raise ExportRefused(
             path,

@@ -43,7 +43,8 @@ REFUSED = {
     ),
     "not_a_number": (
         "no number",
-        "plain numbers up to 1e30 with the declared decimal mark and no thousands separator",
+        "plain numbers up to 1e30 with the declared decimal and thousands marks, or the declared "
+        "booleans",
     ),
 }
 """Reasons a cell is refused for, each with what is wrong and what would be right."""

@@ -93,12 +93,14 @@ class RawSamples:
         """The samples in the disjoint, ordered spans; None: all of them."""
         if spans is None:
             return self
-        us = self.samples.t_us
-        inside = np.zeros(len(us), np.bool_)
-        for start, end in spans:
-            inside |= (us >= start) & (us <= end)
-        held = Samples(us[inside], self.samples.value[inside], self.samples.good[inside])
-        return RawSamples(held, self.texts)
+        parts = [self.samples.between(start, end) for start, end in spans]
+        if len(parts) == 1:
+            return RawSamples(parts[0], self.texts)
+        held = [
+            np.concatenate([none, *(getattr(part, name) for part in parts)])
+            for name, none in vars(Samples.empty()).items()
+        ]
+        return RawSamples(Samples(*held), self.texts)
 
     def counted(self, spans: Sequence[Span]) -> tuple[int, int]:
         """How many samples lie in the spans: good ones, others."""

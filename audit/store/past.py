@@ -355,6 +355,15 @@ def _day_of(row: Sequence[Any]) -> DayRecord:
     return DayRecord(day, span_us, auto_us, mode_us, saturated_us, output_us, pv_bad_us)
 
 
+def with_past(s: Session) -> frozenset[str]:
+    """The tags of the loops of which anything is kept: a step, an edge or a day."""
+    kept_of = [
+        select(table.loop_id).where(table.loop_id == LoopRow.id).exists()
+        for table in (EdgeRow, DayRow, MeasurementRow)
+    ]
+    return frozenset(s.scalars(select(LoopRow.tag).where(or_(*kept_of))))
+
+
 def tag_states(s: Session) -> dict[str, dict[Role, TagState]]:
     """What the tags of each loop last said, by the loop's tag and the tag's role."""
     query = select(

@@ -37,6 +37,7 @@ from audit.store.past import (
     step_counts,
     tag_states,
     touched,
+    with_past,
 )
 from audit.store.payload import detail_of, loop_of
 from audit.store.size import size, size_bytes
@@ -84,6 +85,7 @@ __all__ = [
     "tag_sources",
     "tag_states",
     "touched",
+    "with_past",
 ]
 
 

@@ -1,10 +1,9 @@
-"""What one audit of a loop found -> its rows, in one transaction and a handful of statements."""
+"""The rows of one loop's audit -> the store, in one transaction and a handful of statements."""
 
 from __future__ import annotations
 
-import hashlib
 from collections import defaultdict
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from datetime import datetime
 from functools import cache
@@ -14,14 +13,11 @@ from sqlalchemy import bindparam, delete, select, tuple_, update
 from sqlalchemy.orm import Session
 
 from audit.errors import UnknownLoop
-from audit.records import LoopResult, MeasuredStep, Record
-from audit.store import codec_first
-from audit.store.bulk import JsonText, add, portions, put
+from audit.records import LoopResult
+from audit.store.bulk import add, portions, put
 from audit.store.closed import Closed, loop_and_closed
-from audit.store.codec import Packed, encode, pack
-from audit.store.engine import compact_json
 from audit.store.entries import SavedLoop
-from audit.store.payload import step_values
+from audit.store.loop_rows import LoopRows, StepRows, rows_of
 from audit.store.tables import (
     CurveRow,
     DayRow,
@@ -30,8 +26,6 @@ from audit.store.tables import (
     TagStateRow,
     VerdictRow,
 )
-
-_JSON_COLUMNS = ("moves", "change_set_aside", "measured", "set_aside")
 
 
 @dataclass
@@ -44,49 +38,61 @@ class _Past:
     fingerprint: bytes = b""
     curves: dict[bytes, int] = field(default_factory=dict)
 
-    def curve_like(self, packed: Packed, curve: Record) -> int | None:
+    def holds(self, one: StepRows) -> bool:
+        """Whether the current measurement is this one, in whichever encoding."""
+        return self.current is not None and (
+            self.fingerprint == one.fingerprint or self.fingerprint == one.first_fingerprint()
+        )
+
+    def curve_like(self, one: StepRows) -> int | None:
         """The number of the stored curve with this content, in whichever encoding."""
-        found = self.curves.get(packed.digest)
+        found = self.curves.get(one.curve["digest"])
         if found is None and self.curves:
-            found = self.curves.get(codec_first.digest(curve))
+            found = self.curves.get(one.first_curve_digest)
         return found
 
 
 def save_loop(s: Session, result: LoopResult, now: datetime) -> SavedLoop:
-    """Writes a loop's result. A step that equals the stored one, its curve included, is left alone;
+    """Writes a loop's result: ``save_rows`` of ``rows_of``."""
+    return save_rows(s, rows_of(result), now)
+
+
+def save_rows(s: Session, rows: LoopRows, now: datetime) -> SavedLoop:
+    """Writes a loop's rows. A step that equals the stored one, its curve included, is left alone;
     one that differs gets a new measurement, the old one a ``superseded_at``; a withdrawn one only
     that. In the loop's closed time, and within a change's reach of it, all stays as it is. Verdicts
     rest on a stored version of the loop's spec. Raises UnknownLoop.
     """
-    loop_id, closed = loop_and_closed(s, result.tag)
+    loop_id, closed = loop_and_closed(s, rows.tag)
     if loop_id is None:
-        raise UnknownLoop(f"{result.tag} is no loop of the register")
-    open_ = result if closed is None else _open_part(result, closed)
-    stamps = [one.step.change.at_us for one in open_.steps]
-    past = _past(s, loop_id, [*stamps, *open_.withdrawn])
+        raise UnknownLoop(f"{rows.tag} is no loop of the register")
+    open_ = rows if closed is None else _open_part(rows, closed)
+    past = _past(s, loop_id, [*(one.at_us for one in open_.steps), *open_.withdrawn])
     withdrawn = [at for at in open_.withdrawn if past[at].current is not None]
     fresh = _fresh(loop_id, open_.steps, past, now)
     changed = [row["at_us"] for row in fresh.measurements if past[row["at_us"]].current is not None]
     _supersede(s, loop_id, [*withdrawn, *changed], now)
     fresh.insert(s)
-    _replace_edges(s, loop_id, open_)
-    _replace_days(s, loop_id, result)
-    _replace_tag_states(s, loop_id, result)
+    _drop_edges(s, loop_id, open_.dropped_edges)
+    own = {"loop_id": loop_id}
+    put(s, EdgeRow, [own | edge for edge in open_.edges])
+    put(s, DayRow, [own | day for day in rows.days])
+    put(s, TagStateRow, [own | state for state in rows.tag_states])
     return SavedLoop(
         new=len(fresh.measurements) - len(changed),
         changed=len(changed),
         withdrawn=len(withdrawn),
-        closed=len(result.steps) - len(open_.steps),
+        closed=len(rows.steps) - len(open_.steps),
     )
 
 
-def _open_part(result: LoopResult, closed: Closed) -> LoopResult:
-    """The result without what lies in the loop's closed time."""
+def _open_part(rows: LoopRows, closed: Closed) -> LoopRows:
+    """The rows without what lies in the loop's closed time."""
     return replace(
-        result,
-        steps=tuple(one for one in result.steps if one.step.change.at_us > closed.fixed_us),
-        withdrawn=tuple(at_us for at_us in result.withdrawn if at_us > closed.fixed_us),
-        edges=tuple(edge for edge in result.edges if edge.border_us > closed.until_us),
+        rows,
+        steps=tuple(one for one in rows.steps if one.at_us > closed.fixed_us),
+        withdrawn=tuple(at_us for at_us in rows.withdrawn if at_us > closed.fixed_us),
+        edges=tuple(edge for edge in rows.edges if edge["border_us"] > closed.until_us),
     )
 
 
@@ -105,32 +111,25 @@ class _Fresh:
 
 
 def _fresh(
-    loop_id: int, steps: Sequence[MeasuredStep], past: dict[int, _Past], now: datetime
+    loop_id: int, steps: Sequence[StepRows], past: dict[int, _Past], now: datetime
 ) -> _Fresh:
     fresh = _Fresh([], [], [])
     for one in steps:
-        packed = pack(one.curve)
-        values = step_values(one.step) | {
-            "depends_from_us": one.depends_from_us,
-            "depends_to_us": one.depends_to_us,
-        }
-        verdicts = _verdict_values(one)
-        texts = {name: JsonText(compact_json(values[name])) for name in _JSON_COLUMNS}
-        fingerprint = _fingerprint(values, texts, verdicts, packed)
-        known = past[values["at_us"]]
-        if known.current is not None and (
-            known.fingerprint == fingerprint
-            or known.fingerprint == _first_fingerprint(values, verdicts, one.curve)
-        ):
+        known = past[one.at_us]
+        if known.holds(one):
             continue
-        key = {"loop_id": loop_id, "at_us": values["at_us"], "number": known.number + 1}
-        curve_number = known.curve_like(packed, one.curve)
+        key = {"loop_id": loop_id, "at_us": one.at_us, "number": known.number + 1}
+        curve_number = known.curve_like(one)
         if curve_number is None:
             curve_number = known.curve_number + 1
-            fresh.curves.append(_curve_values(key | {"number": curve_number}, one.curve, packed))
-        own = {"curve_number": curve_number, "fingerprint": fingerprint, "measured_at": now}
-        fresh.measurements.append(values | texts | key | own)
-        fresh.verdicts += [verdict | key for verdict in verdicts]
+            fresh.curves.append({**one.curve, **key, "number": curve_number})
+        own = {
+            "curve_number": curve_number,
+            "fingerprint": one.fingerprint,
+            "measured_at": now,
+        }
+        fresh.measurements.append({**one.measurement, **key, **own})
+        fresh.verdicts += [{**verdict, **key} for verdict in one.verdicts]
     return fresh
 
 
@@ -186,104 +185,11 @@ def _supersede(s: Session, loop_id: int, stamps: Sequence[int], now: datetime) -
         )
 
 
-def _verdict_values(one: MeasuredStep) -> list[dict[str, Any]]:
-    return [
-        {
-            "quantity": quantity.value,
-            "spec_version": verdict.spec_version,
-            "limit_value": verdict.limit,
-            "outcome": verdict.outcome.value,
-            "why": None if verdict.why is None else verdict.why.value,
-        }
-        for quantity, verdict in sorted(one.step.verdicts.items())
-    ]
-
-
-def _fingerprint(
-    values: Mapping[str, Any],
-    texts: Mapping[str, str],
-    verdicts: Sequence[Mapping[str, Any]],
-    packed: Packed,
-) -> bytes:
-    """What a measurement is told from another by: all that is stored of it, and its curve."""
-    plain = [value for name, value in values.items() if name not in texts]
-    judged = [list(verdict.values()) for verdict in verdicts]
-    content = "\n".join((compact_json([plain, judged]), *texts.values()))
-    return hashlib.blake2b(content.encode() + packed.digest, digest_size=16).digest()
-
-
-def _first_fingerprint(
-    values: Mapping[str, Any], verdicts: Sequence[Mapping[str, Any]], curve: Record
-) -> bytes:
-    """The same as it was made when curves were stored in the first encoding."""
-    content = compact_json([values, verdicts]).encode() + codec_first.digest(curve)
-    return hashlib.blake2b(content, digest_size=16).digest()
-
-
-def _curve_values(key: dict[str, Any], curve: Record, packed: Packed) -> dict[str, Any]:
-    from_us, to_us = _span(curve, key["at_us"])
-    return key | {"from_us": from_us, "to_us": to_us, "digest": packed.digest, "data": packed.data}
-
-
-def _span(record: Record, otherwise_us: int) -> tuple[int, int]:
-    """First and last stamp of a record; of one without samples the given instant."""
-    filled = [samples.t_us for samples in record.signals.values() if len(samples)]
-    first = min((int(stamps[0]) for stamps in filled), default=otherwise_us)
-    last = max((int(stamps[-1]) for stamps in filled), default=otherwise_us)
-    return first, last
-
-
-def _replace_edges(s: Session, loop_id: int, result: LoopResult) -> None:
-    rows = []
-    for edge in result.edges:
-        from_us, to_us = _span(edge.record, edge.border_us)
-        rows.append(
-            {
-                "loop_id": loop_id,
-                "border_us": edge.border_us,
-                "side": edge.side,
-                "from_us": from_us,
-                "to_us": to_us,
-                "data": encode(edge.record),
-            }
-        )
-    for some in portions(result.dropped_edges):
+def _drop_edges(s: Session, loop_id: int, dropped: Sequence[tuple[int, str]]) -> None:
+    for some in portions(dropped):
         s.execute(
             delete(EdgeRow).where(
                 EdgeRow.loop_id == loop_id,
                 tuple_(EdgeRow.border_us, EdgeRow.side).in_(some),
             )
         )
-    put(s, EdgeRow, rows)
-
-
-def _replace_days(s: Session, loop_id: int, result: LoopResult) -> None:
-    rows = [
-        {
-            "loop_id": loop_id,
-            "day": kept.record.day,
-            "span_us": kept.record.span_us,
-            "auto_us": kept.record.auto_us,
-            "mode_us": kept.record.mode_us,
-            "saturated_us": kept.record.saturated_us,
-            "output_us": kept.record.output_us,
-            "pv_bad_us": kept.record.pv_bad_us,
-            "runs": kept.runs,
-        }
-        for kept in result.days
-    ]
-    put(s, DayRow, rows)
-
-
-def _replace_tag_states(s: Session, loop_id: int, result: LoopResult) -> None:
-    rows = [
-        {
-            "loop_id": loop_id,
-            "role": role.value,
-            "newest_us": state.newest_us,
-            "value": state.value,
-            "held_since_us": state.held_since_us,
-        }
-        for role, state in result.tag_states.items()
-    ]
-    put(s, TagStateRow, rows)

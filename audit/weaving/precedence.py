@@ -189,6 +189,8 @@ def _concatenate(parts: Sequence[RawSamples]) -> RawSamples:
     ordered = sorted((p for p in parts if len(p.samples)), key=lambda p: int(p.samples.t_us[0]))
     if not ordered:
         return RawSamples(Samples.empty())
+    if len(ordered) == 1:
+        return ordered[0]
     if any(part.texts is not None for part in ordered):
         texts = tuple(sorted({text for part in ordered for text in part.texts or ()}))
         ordered = [_recode(part, texts) for part in ordered]
