@@ -300,9 +300,11 @@ def newest_steps(s: Session) -> dict[str, NewestStep]:
         isouter=True,
     )
     kinds = {kind.value: kind for kind in ChangeKind}
+    # Past the session, which would look at each row for mapped objects.
+    rows = s.connection().execute(query).all()
     return {
         tag: NewestStep(at_us, usable, kinds[kind])
-        for tag, at_us, usable, kind in s.execute(query)
+        for tag, at_us, usable, kind in rows
         if at_us is not None
     }
 

@@ -137,7 +137,7 @@ def _enter(session: Session, loops: int) -> None:
 def _series(kind: str, name: str, first: int, last: int) -> str:
     """A subquery of whole numbers from first to last."""
     if kind == "postgresql":
-        return f"generate_series({first}, {last}) AS {name}(n)"
+        return f"generate_series(CAST({first} AS bigint), {last}) AS {name}(n)"
     return (
         f"(WITH RECURSIVE r(n) AS (SELECT {first} UNION ALL SELECT n + 1 FROM r WHERE n < {last}) "
         f"SELECT n FROM r) AS {name}"
@@ -259,6 +259,7 @@ def _table(store: Store, loops: int) -> Iterator[tuple[str, str]]:
     middle = _tag(loops // 2)
     tags = [_tag(number) for number in range(1, min(200, loops) + 1)]
     yield "the newest result of each loop", _read(store, queries.newest_steps)
+    yield "the same by a window function, times as long", f"{_by_window(store):.0f} times"
     yield "one loop's history", _read(store, lambda s: queries.history(s, middle))
     yield (
         f"past steps of {len(tags)} loops",
@@ -291,6 +292,18 @@ def _best_s(work: Callable[[], object], runs: int) -> float:
 def _read(store: Store, query: Callable[[Session], object], runs: int = 5) -> str:
     with store.read() as session:
         return _best(lambda: query(session), runs)
+
+
+def _by_window(store: Store) -> float:
+    """How many times as long the newest results take when all rows are gone through for them."""
+    query = text(
+        "SELECT tag, at_us, usable, kind FROM (SELECT loop_id, at_us, usable, kind, row_number() "
+        "OVER (PARTITION BY loop_id ORDER BY at_us DESC) AS place FROM measurement "
+        "WHERE superseded_at IS NULL) AS placed JOIN loop ON id = loop_id WHERE place = 1"
+    )
+    with store.read() as session:
+        slow_s = _best_s(lambda: session.execute(query).all(), 1)
+        return slow_s / _best_s(lambda: queries.newest_steps(session), 5)
 
 
 def _saved(store: Store, tag: str) -> str:
