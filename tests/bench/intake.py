@@ -126,8 +126,8 @@ def time_job(path: Path, case: Case) -> dict[str, float]:
     seams: list[tuple[Any, str, str]] = [
         (exports, "read", "reading"),
         (response, "measure", "measuring"),
-        (nightly, "audit_loop", "loops"),
-        (writes, "save_loop", "saving"),
+        (nightly, "work_loop", "loops"),
+        (writes, "save_rows", "saving"),
         (nightly, "_publish", "publishing"),
     ]
     for module, name, clock in seams:
