@@ -69,6 +69,18 @@ def end_of_closed(loop_id: Any) -> Any:
     return func.coalesce(until, NEVER_US)
 
 
+def end_of_fixed(loop_id: Any) -> Any:
+    """Up to which instant a loop's steps stay as they are, as part of a statement."""
+    reach = LoopVersionRow.before_us + LoopVersionRow.after_us + 2 * LoopVersionRow.join_us
+    until = (
+        select(ClosedRow.until_us + reach)
+        .join_from(ClosedRow, LoopVersionRow, ClosedRow.loop_id == LoopVersionRow.loop_id)
+        .where(ClosedRow.loop_id == loop_id, LoopVersionRow.superseded_at.is_(None))
+        .scalar_subquery()
+    )
+    return func.coalesce(until, NEVER_US)
+
+
 def close(s: Session, until_us: Mapping[int, int]) -> None:
     """Closes the time of loops, by id, up to an instant; what was closed before stays closed."""
     for loop_id, new_us in until_us.items():

@@ -25,7 +25,7 @@ from audit.records import (
     Verdict,
 )
 from audit.store.bulk import portions
-from audit.store.closed import NEVER_US, closed_time, end_of_closed
+from audit.store.closed import end_of_closed, end_of_fixed
 from audit.store.codec import decode
 from audit.store.entries import NewestStep, StoredStep
 from audit.store.payload import StoredMeasured, change_of, measured_of, reasons_of
@@ -92,12 +92,9 @@ def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record
     end in the middle of what was taken, where the last step knows what the setpoint holds. None in
     the loop's closed time, nor across its end: what they say may have changed in between.
     """
-    closed = closed_time(s, tag)
-    closed_us = NEVER_US if closed is None else closed.until_us
-    if to_us <= closed_us:
-        return []
+    closed_us = end_of_closed(_loop_id(tag))
     of_loop = select(EdgeRow.data).where(
-        EdgeRow.loop_id == _loop_id(tag), EdgeRow.border_us > closed_us
+        EdgeRow.loop_id == _loop_id(tag), EdgeRow.border_us > closed_us, closed_us < to_us
     )
     before = of_loop.where(EdgeRow.side == "to", EdgeRow.border_us < from_us)
     after = of_loop.where(EdgeRow.side == "from", EdgeRow.border_us > to_us)
@@ -107,6 +104,7 @@ def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record
         .where(
             MeasurementRow.loop_id == _loop_id(tag),
             MeasurementRow.at_us > closed_us,
+            closed_us < to_us,
             _CURRENT,
         )
     )
@@ -125,7 +123,6 @@ def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
 
     Those in the loop's closed time, or within a change's reach of it, stay as they are.
     """
-    closed = closed_time(s, tag)
     resting = (
         select(
             MeasurementRow.at_us,
@@ -133,13 +130,15 @@ def touched(s: Session, tag: str, from_us: int, to_us: int) -> list[StoredStep]:
             MeasurementRow.depends_to_us,
             MeasurementRow.window_end_us,
         )
-        .where(MeasurementRow.loop_id == _loop_id(tag), _CURRENT)
+        .where(
+            MeasurementRow.loop_id == _loop_id(tag),
+            MeasurementRow.at_us > end_of_fixed(_loop_id(tag)),
+            _CURRENT,
+        )
         .where(
             or_(MeasurementRow.depends_from_us.is_(None), MeasurementRow.depends_from_us <= to_us)
         )
     )
-    if closed is not None:
-        resting = resting.where(MeasurementRow.at_us > closed.fixed_us)
     # Two ranges of one index; as one condition, or put in order here, all steps would be gone over.
     reaching = resting.where(MeasurementRow.depends_to_us >= from_us)
     still_open = resting.where(MeasurementRow.depends_to_us.is_(None))

@@ -220,7 +220,7 @@ def _fill_days(
     )
     day = "date('2025-01-01', '+' || (i.n / 4) || ' days')"
     if kind == "postgresql":
-        day = "date '2025-01-01' + i.n / 4"
+        day = "date '2025-01-01' + CAST(i.n / 4 AS integer)"
     session.execute(
         text(
             f"INSERT INTO day_record SELECT l.n, {day}, 86400000000, 80000000000, 86400000000, "
