@@ -28,6 +28,9 @@ Settle = Callable[[Whole, Floats], tuple[Whole, Floats]]
 MERGED_AT_ONCE = 4_000_000
 """Samples of a tag that are put in order at once."""
 _BUFFERS = 512
+_INDEXED_AT_ONCE = 4096
+_known: dict[tuple[str | int, ...], NDArray[np.int64]] = {}
+"""The stamps last read: at most one set of them."""
 _FEW = 16
 """A value that changes less often than once in so many samples is kept by its changes."""
 _PLACE = np.dtype(
@@ -57,21 +60,11 @@ class Part:
 
 @dataclass(frozen=True, eq=False)
 class ScratchFile:
-    """Where the pieces of a finished scratch file keep their places [k]; picklable."""
+    """A finished scratch file, and where its index lies: a place for each tag and piece."""
 
     path: str
-    places_at: tuple[int, ...]
-    tags: tuple[int, ...]
-
-    def places(self, code: int) -> NDArray[Any]:
-        """The places of a tag in the pieces it has samples in."""
-        raw = b""
-        with open(self.path, "rb", buffering=0) as file:
-            for at, tags in zip(self.places_at, self.tags, strict=True):
-                if code < tags:
-                    raw += os.pread(file.fileno(), _PLACE.itemsize, at + code * _PLACE.itemsize)
-        found = np.frombuffer(raw, _PLACE)
-        return found[found["count"] > 0]
+    index_at: int
+    pieces: int
 
 
 @dataclass(frozen=True, eq=False)
@@ -93,7 +86,8 @@ class ScratchColumn:
     def load(self, spans: Sequence[Span] | None = None) -> RawSamples:
         """The samples in the disjoint, ordered spans; None: all of them."""
         us, value = _load(self.file, self.code, spans)
-        return RawSamples(Samples(us, value, ~np.isnan(value)), self.texts)
+        good = ~np.isnan(value) if self.bad else np.ones(len(value), np.bool_)
+        return RawSamples(Samples(us, value, good), self.texts)
 
     def counted(self, spans: Sequence[Span]) -> tuple[int, int]:
         """How many samples lie in the spans: good ones, others."""
@@ -155,10 +149,12 @@ class ScratchWriter:
         self, settle: Settle, texts: Mapping[str, tuple[str, ...]]
     ) -> dict[str, ScratchColumn]:
         """The columns by tag. Tags whose samples did not come in order are put in order first."""
-        for code, total in enumerate(self._totals):
-            if not total.rising:
-                self._merge(code, total, settle)
-        file = ScratchFile(self._path, tuple(self._places_at), tuple(self._tags))
+        unsettled = [code for code, total in enumerate(self._totals) if not total.rising]
+        if unsettled:
+            file = self._indexed()
+            for code in unsettled:
+                self._merge(code, file, settle)
+        file = self._indexed()
         return {
             tag: ScratchColumn(
                 file,
@@ -201,12 +197,29 @@ class ScratchWriter:
             if views:
                 views[0] = views[0][written:]
 
-    def _merge(self, code: int, total: _Total, settle: Settle) -> None:
+    def _indexed(self) -> ScratchFile:
+        """The file with the places of each tag together: they lie by piece so far."""
+        at, pieces = self._end, len(self._places_at)
+        for first in range(0, len(self._totals), _INDEXED_AT_ONCE):
+            count = min(_INDEXED_AT_ONCE, len(self._totals) - first)
+            index = np.zeros((count, pieces), _PLACE)
+            for number, (start, tags) in enumerate(zip(self._places_at, self._tags, strict=True)):
+                own = min(count, max(tags - first, 0))
+                if own:
+                    held = np.empty(own, _PLACE)
+                    _fill(self._handle, held, start + first * _PLACE.itemsize)
+                    index[:own, number] = held
+            self._put([index])
+        return ScratchFile(self._path, at, pieces)
+
+    def _merge(self, code: int, file: ScratchFile, settle: Settle) -> None:
         """Put a tag's samples in order, some of its time after another, in place of the pieces."""
-        file = ScratchFile(self._path, tuple(self._places_at), tuple(self._tags))
         tag = next(tag for tag, known in self._codes.items() if known == code)
-        merged = _Total()
-        old_pieces = len(self._places_at)
+        total, merged = self._totals[code], _Total()
+        for at, tags in zip(self._places_at, self._tags, strict=True):
+            if code < tags:
+                nothing = np.zeros(1, _PLACE).tobytes()
+                os.pwrite(self._handle, nothing, at + code * _PLACE.itemsize)
         for span in _slices(total):
             us, value = settle(*_load(file, code, [span]))
             part = Part(tag, us, value, int(np.count_nonzero(np.isnan(value))))
@@ -219,10 +232,6 @@ class ScratchWriter:
                 self._places_at.append(at + us.nbytes + value.nbytes)
                 self._tags.append(len(places))
                 merged.add(part, first, last, rising)
-        nothing = np.zeros(1, _PLACE).tobytes()
-        for at, tags in zip(self._places_at[:old_pieces], self._tags[:old_pieces], strict=True):
-            if code < tags:
-                os.pwrite(self._handle, nothing, at + code * _PLACE.itemsize)
         self._totals[code] = merged
 
 
@@ -252,6 +261,9 @@ class _Total:
 
 def _by_changes(value: Floats) -> tuple[int, list[NDArray[Any]]]:
     """A value by its changes where they are few: their number, places and new values; else -1."""
+    first = value[: 4 * _FEW]
+    if np.count_nonzero(first[1:] != first[:-1]) > _FEW:  # not worth a look at the rest
+        return -1, [value]
     changes = np.flatnonzero(value[1:] != value[:-1])
     if len(changes) * _FEW >= len(value):
         return -1, [value]
@@ -281,19 +293,19 @@ def _slices(total: _Total) -> Iterator[Span]:
 
 def _load(file: ScratchFile, code: int, spans: Sequence[Span] | None) -> tuple[Whole, Floats]:
     """Stamps and values of a tag in the spans, in the order they were written."""
-    found: list[tuple[Whole, Floats]] = []
+    places = np.empty(file.pieces, _PLACE)
     with open(file.path, "rb", buffering=0) as stored:
-        for count, changes, stamps_at, values_at, first, last in file.places(code).tolist():
-            near = None if spans is None else [s for s in spans if s[0] <= last and s[1] >= first]
-            if near == []:
-                continue
-            us = np.empty(count, np.int64)
-            _fill(stored.fileno(), us, stamps_at)
-            value = _values(stored.fileno(), count, changes, values_at)
-            if near is not None and not (near[0][0] <= first and last <= near[0][1]):
-                inside = _inside(us, near)
-                us, value = us[inside], value[inside]
-            found.append((us, value))
+        handle = stored.fileno()
+        _fill(handle, places, file.index_at + code * places.nbytes)
+        near = places[places["count"] > 0]
+        if spans is not None:
+            reached = np.zeros(len(near), np.bool_)
+            for start, end in spans:
+                reached |= (near["last_us"] >= start) & (near["first_us"] <= end)
+            near = near[reached]
+        large = int(near["count"].sum()) > MERGED_AT_ONCE
+        groups = [near[at : at + 1] for at in range(len(near))] if large else [near]
+        found = [_only(spans, *_read(handle, file.path, group)) for group in groups]
     if len(found) == 1:
         return found[0]
     no_us, no_value = np.empty(0, np.int64), np.empty(0, np.float64)
@@ -303,22 +315,55 @@ def _load(file: ScratchFile, code: int, spans: Sequence[Span] | None) -> tuple[W
     )
 
 
-def _values(handle: int, count: int, changes: int, at: int) -> Floats:
-    if changes < 0:
-        value = np.empty(count, np.float64)
-        _fill(handle, value, at)
-        return value
-    starts, held = np.empty(changes, np.int64), np.empty(changes, np.float64)
-    _fill(handle, starts, at)
-    _fill(handle, held, at + starts.nbytes)
-    return np.repeat(held, np.diff(starts, append=count))
+def _read(handle: int, path: str, places: NDArray[Any]) -> tuple[Whole, Floats]:
+    """All of some places, one behind the other."""
+    us = _stamps(handle, path, places["stamps_at"].tolist(), places["count"].tolist())
+    value = np.empty(len(us), np.float64)
+    done = 0
+    for count, changes, _, values_at, *_ in places.tolist():
+        _put_values(handle, value[done : done + count], changes, values_at)
+        done += count
+    return us, value
 
 
-def _inside(us: Whole, spans: Sequence[Span]) -> NDArray[np.bool_]:
+def _only(spans: Sequence[Span] | None, us: Whole, value: Floats) -> tuple[Whole, Floats]:
+    """What lies in the spans."""
+    if spans is None or len(us) == 0:
+        return us, value
+    first, last = int(us.min()), int(us.max())
+    if any(start <= first and last <= end for start, end in spans):
+        return us, value
     inside = np.zeros(len(us), np.bool_)
     for start, end in spans:
         inside |= (us >= start) & (us <= end)
-    return inside
+    return us[inside], value[inside]
+
+
+def _stamps(handle: int, path: str, places: list[int], counts: list[int]) -> Whole:
+    """Stamps of some places, one behind the other; the last ones are kept, for tags share them."""
+    key: tuple[str | int, ...] = (path, *places)
+    if key not in _known:
+        us = np.empty(sum(counts), np.int64)
+        done = 0
+        for at, count in zip(places, counts, strict=True):
+            _fill(handle, us[done : done + count], at)
+            done += count
+        us.flags.writeable = False
+        _known.clear()
+        _known[key] = us
+    return _known[key]
+
+
+def _put_values(handle: int, value: Floats, changes: int, at: int) -> None:
+    """Read the values of a place into their place."""
+    if changes < 0:
+        _fill(handle, value, at)
+        return
+    starts, held = np.empty(changes, np.int64), np.empty(changes, np.float64)
+    _fill(handle, starts, at)
+    _fill(handle, held, at + starts.nbytes)
+    for start, stop, one in zip(starts, [*starts[1:], len(value)], held, strict=True):
+        value[start:stop] = one
 
 
 def _octets(array: NDArray[Any]) -> memoryview:

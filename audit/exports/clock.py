@@ -18,7 +18,6 @@ from typing import Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
-import pandas as pd
 import pyarrow as pa
 import pyarrow.compute as pc
 from numpy.typing import NDArray
@@ -311,6 +310,8 @@ def _pattern(column: Any, pattern: str) -> Stamps:
     """A strptime pattern; with ``%z`` in it the stamps are instants, else wall clock."""
     if "%" not in pattern or "%Z" in pattern:
         raise ValueError(f"{pattern!r} is no strptime pattern with offsets, if any, as %z")
+    import pandas as pd  # a large library that few sites' stamps need
+
     aware = "%z" in pattern
     texts = pd.Series(column.to_pylist(), dtype=object).str.strip()
     parsed = pd.to_datetime(texts, format=pattern, errors="coerce", utc=aware)

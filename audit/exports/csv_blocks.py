@@ -88,15 +88,14 @@ class Block:
 
 def look(data: NDArray[np.uint8], at: int, end: int) -> Seen:
     """What stands in data[at:end]; data[at - 1] is looked at for a CR LF."""
-    part = data[at:end]
-    text = part.tobytes()
+    return _seen(data[at:end].tobytes(), bool(data[at - 1] == _CR))
+
+
+def _seen(text: bytes, after_cr: bool) -> Seen:
+    """What stands in a text, by searches that are much faster than a look at each byte."""
+    crlf = text.count(b"\r\n") + int(after_cr and text[:1] == b"\n")
     odd = not text.isascii() or b"\0" in text
-    lf = part == _LF
-    cr, crlf = 0, 0
-    if b"\r" in text or (len(part) and data[at - 1] == _CR):
-        cr = text.count(b"\r")
-        crlf = int(np.count_nonzero(lf & (data[at - 1 : end - 1] == _CR)))
-    return Seen(int(np.count_nonzero(lf)), cr, crlf, b'"' in text, odd)
+    return Seen(text.count(b"\n"), text.count(b"\r"), crlf, b'"' in text, odd)
 
 
 def check_text(block: Block, path: str, final: bool = True) -> None:
@@ -175,7 +174,7 @@ class Cutter:
             more = self._stream.read(min(_READ_BYTES, size + 1 - end))
             self._final = not more
             data[end : end + len(more)] = np.frombuffer(more, np.uint8)
-            seen = seen.plus(look(data, end, end + len(more)))
+            seen = seen.plus(_seen(more, bool(data[end - 1] == _CR)))
             end += len(more)
         at = 4 if block.first_byte == 0 and data[1:4].tobytes() == codecs.BOM_UTF8 else 1
         return replace(block, data=data, at=min(at, end), end=end, seen=seen)

@@ -198,7 +198,7 @@ def _part(own: _Cells, read: Cells, sheet: Sheet, so_far: SoFar) -> Part:
         numbers = so_far.word_numbers(own.tag, read.texts, sheet)
         value = numbers[value.astype(np.int64)]
     all_good = own.good is None or bool(own.good.all())
-    if all_good and not read.held.any():
+    if all_good and (read.all_values or not read.held.any()):
         return Part(own.tag, own.us, value)
     good = np.ones(len(value), np.bool_) if own.good is None else own.good
     blank = good & (read.held == Cell.BLANK)

@@ -38,10 +38,11 @@ def pieces(
         names = tuple(str(name) for name in footer.schema.to_arrow_schema().names)
         check_names(names, source, path, None)
         asked = asked_for(names, source, wanted)
-        modes = [name for name in asked if wanted.get(name)]
+        plain = {footer.schema.column(at).path for at in range(len(footer.schema))}
+        modes = [name for name in asked if wanted.get(name) and name in plain]
         with pq.ParquetFile(stored, metadata=footer, read_dictionary=modes) as file:
             yield from _pieces(file, names, asked, path, threads, rows)
-    except (pa.ArrowException, OSError, EOFError) as error:
+    except (pa.ArrowException, OSError, EOFError, UnicodeDecodeError) as error:
         raise ExportRefused(
             path,
             f"not readable as Parquet: {error}",
@@ -74,7 +75,9 @@ def _plain(column: Any) -> Any:
     """The kinds of text that not every Arrow function knows, as plain text.
 
     Some writers leave the mark of a text column out; its bytes are taken for text where they are.
+    Raises ArrowInvalid for a text that is not UTF-8.
     """
+    column.validate(full=True)
     kind = column.type
     if pa.types.is_string_view(kind):
         return pc.cast(column, pa.string())

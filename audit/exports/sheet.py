@@ -64,6 +64,8 @@ class ArrowColumn:
             return self.array[row].as_py()
         except UnicodeDecodeError as error:
             return error.object
+        except (ValueError, OverflowError):  # a date or time beyond those of Python
+            return self.array.slice(row, 1).to_string(skip_new_lines=True)
 
 
 @dataclass(frozen=True)

@@ -8,9 +8,10 @@ and cannot write, however late it wakes up.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 from typing import Any
 
-from sqlalchemy import BigInteger, ColumnElement, Connection, select, update
+from sqlalchemy import BigInteger, Connection, bindparam, select, update
 from sqlalchemy.ext.compiler import compiles
 from sqlalchemy.orm import Session
 from sqlalchemy.sql.compiler import SQLCompiler
@@ -142,7 +143,20 @@ def running(session: Session) -> int | None:
 
 def renew(session: Connection | Session, lease: Lease) -> bool:
     """Puts off the end of a lease; False when it is no longer this holder's."""
-    return _touch(session, lease, expires_us=database_now_us() + _micros(lease.ttl_s))
+    connection = session.connection() if isinstance(session, Session) else session
+    values = {"held": lease.fence, "ttl_us": _micros(lease.ttl_s)}
+    return connection.execute(_renewal(), values).first() is not None
+
+
+@cache
+def _renewal() -> Any:
+    """Built once: every write begins with it."""
+    return (
+        update(LeaseRow)
+        .where(LeaseRow.fence == bindparam("held"), LeaseRow.holder.is_not(None))
+        .values(expires_us=database_now_us() + bindparam("ttl_us", type_=BigInteger))
+        .returning(LeaseRow.fence)
+    )
 
 
 def prove(session: Session, lease: Lease) -> None:
@@ -156,20 +170,11 @@ def prove(session: Session, lease: Lease) -> None:
 
 def release(connection: Connection, lease: Lease) -> None:
     """Gives the lease back; does nothing if it was taken over."""
-    _touch(connection, lease, holder=None, expires_us=0)
-
-
-def _touch(
-    session: Connection | Session, lease: Lease, **values: int | ColumnElement[int] | None
-) -> bool:
-    row = session.execute(
+    connection.execute(
         update(LeaseRow)
         .where(LeaseRow.fence == lease.fence, LeaseRow.holder.is_not(None))
-        .values(**values)
-        .returning(LeaseRow.fence)
-        .execution_options(synchronize_session=False)
-    ).first()
-    return row is not None
+        .values(holder=None, expires_us=0)
+    )
 
 
 def _micros(seconds: float) -> int:
