@@ -73,7 +73,7 @@ def loop_work(
         return None
     reading = context_.reading(loop)
     config = context_.config
-    past = _Past((), (), ())
+    past = _Past((), (), (), None)
     if loop.tag in context_.with_past:
         past = _past(store, loop, spans, days_known(spans, reading, config.timezone))
     return LoopWork(
@@ -87,16 +87,19 @@ def loop_work(
         touched=past.touched,
         days=past.days,
         states=context_.tag_states.get(loop.tag, {}),
+        closed_us=past.closed_us,
     )
 
 
 @dataclass(frozen=True, eq=False)
 class _Past:
-    """What is kept of a loop around fresh spans: slices, steps that may change, days."""
+    """What is kept of a loop around fresh spans: slices, steps that may change, days; and up to
+    where its past is closed."""
 
     kept: tuple[Record, ...]
     touched: tuple[int, ...]
     days: tuple[KeptDay, ...]
+    closed_us: int | None
 
 
 def _past(store: Store, loop: Loop, spans: Sequence[Span], days: tuple[date, date]) -> _Past:
@@ -114,7 +117,9 @@ def _past(store: Store, loop: Loop, spans: Sequence[Span], days: tuple[date, dat
             record for span in near for record in queries.edges_next_to(session, loop.tag, *span)
         ]
         found = queries.kept_days(session, loop.tag, *days)
-    return _Past(tuple(kept), tuple(touched), tuple(found))
+        closed = queries.closed_time(session, loop.tag)
+    closed_us = None if closed is None else closed.until_us
+    return _Past(tuple(kept), tuple(touched), tuple(found), closed_us)
 
 
 def spans_at_once(tags: Mapping[str, FreshTag], loops: Sequence[Loop]) -> list[Span]:

@@ -32,7 +32,7 @@ from audit.records import (
     spec_in_force,
 )
 from audit.weaving.precedence import FreshTag
-from audit.weaving.spans import Span, union
+from audit.weaving.spans import Span, inside, pick, union
 from audit.weaving.stretches import curve, dependence, edges, to_look_at, weave
 
 
@@ -42,7 +42,8 @@ class LoopWork:
 
     ``kept``: stored slices around the fresh spans. ``touched``: at_us of the stored steps whose
     result may change. ``days``: the stored day's records around the fresh spans.
-    ``states``: what the loop's tags last said.
+    ``states``: what the loop's tags last said. ``closed_us``: up to where the loop's past is
+    closed, for something was pruned there: no step is looked for in it, days are counted.
     """
 
     loop: Loop
@@ -55,20 +56,36 @@ class LoopWork:
     touched: tuple[int, ...]
     days: tuple[KeptDay, ...]
     states: Mapping[Role, TagState] = field(default_factory=dict)
+    closed_us: int | None = None
 
     def spans(self) -> list[Span]:
         """Every span some tag of the loop has fresh word of."""
         return union(span for tag in self.fresh.values() for span in tag.spans)
+
+    def open_spans(self) -> dict[Role, list[Span]]:
+        """The same by tag, after the closed time."""
+        spans = {role: list(tag.spans) for role, tag in self.fresh.items()}
+        if self.closed_us is None:
+            return spans
+        first_us = self.closed_us + 1
+        return {
+            role: [(max(start, first_us), end) for start, end in own if end >= first_us]
+            for role, own in spans.items()
+        }
 
 
 def audit_loop(work: LoopWork) -> LoopResult:
     """Find, measure and judge the setpoint changes that the fresh samples concern."""
     fresh = {role: _as_samples(role, tag.load(), work.loop) for role, tag in work.fresh.items()}
     replaced = {role: tag.spans for role, tag in work.fresh.items()}
-    record = weave(work.kept, fresh, replaced)
+    open_ = work.open_spans()
+    looked_at = fresh
+    if work.closed_us is not None:
+        looked_at = {r: pick(own, inside(own.t_us, open_[r])) for r, own in fresh.items()}
+    record = weave(work.kept, looked_at, open_)
     steps = [measure_step(record, change, work) for change in _concerned(record, work)]
     found = {measured.step.change.at_us for measured in steps}
-    borders = sorted({span for tag in work.fresh.values() for span in tag.spans})
+    borders = sorted({span for own in open_.values() for span in own})
     return LoopResult(
         tag=work.loop.tag,
         steps=tuple(steps),
@@ -85,7 +102,8 @@ def _as_samples(role: Role, raw: RawSamples, loop: Loop) -> Samples:
 
 def _concerned(record: Record, work: LoopWork) -> list[SetpointChange]:
     """The changes near the fresh spans, and those stored earlier that rest on them."""
-    spans = to_look_at(record, work.spans(), work.loop.windows)
+    spans = union(span for own in work.open_spans().values() for span in own)
+    spans = to_look_at(record, spans, work.loop.windows)
     touched = set(work.touched)
     return [
         change

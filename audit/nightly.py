@@ -118,7 +118,8 @@ def _logged(audit: _Run) -> Iterator[None]:
             writes.end_run(session, run_id, audit.clock(), "failed", counts, why)
         raise
     with audit.store.write(audit.lease) as session:
-        writes.end_run(session, run_id, audit.clock(), "finished", audit.tally.counts(), None)
+        counts = {**audit.tally.counts(), "store_bytes": queries.size_bytes(session)}
+        writes.end_run(session, run_id, audit.clock(), "finished", counts, None)
 
 
 def _enter_register(audit: _Run, accept_older: bool) -> None:

@@ -15,6 +15,7 @@ import sites
 from audit import retention
 from audit.retention import Kind
 from audit.site import open_site
+from audit.store import queries
 
 Step = Mapping[str, Any]
 
@@ -100,6 +101,19 @@ def test_the_next_export_goes_on_as_if_nothing_had_been_pruned(twins: Twins) -> 
     assert len(whole) == 8 + 9 + 9
 
 
+def test_a_correction_of_closed_time_changes_no_step_and_is_counted(twins: Twins) -> None:
+    before, _ = twins.steps()
+    twins.give("a.csv", plant(FIRST, 4))
+    twins.audit()
+    pruned, whole = twins.steps()
+    assert pruned == before
+    assert whole != before
+    with sites.opened(twins.pruned) as store, store.read() as session:
+        newest = {seen.path[-5:]: seen for seen in queries.exports(session)}["a.csv"]
+    assert newest.account.taken > 0
+    assert newest.account.balance == 0
+
+
 def test_a_piece_of_closed_time_leads_to_no_step_that_is_none(twins: Twins) -> None:
     """What a part of the record seems to say where the setpoint's moves between are not known."""
     record = plant(FIRST, 1)
@@ -121,3 +135,13 @@ def test_a_correction_of_what_is_not_closed_is_taken_as_ever(twins: Twins) -> No
     twins.audit()
     pruned, whole = twins.steps()
     assert pruned == whole
+
+
+def test_late_data_and_the_next_export_in_one_audit(twins: Twins) -> None:
+    before, _ = twins.steps()
+    twins.give("z.csv", plant(FIRST + timedelta(minutes=20), 7, hours=0.5))
+    twins.give("c.csv", plant(LATER + HOURS, 3))
+    twins.audit()
+    pruned, whole = twins.steps(LATER)
+    assert pruned == whole
+    assert twins.steps()[0][:8] == before[:8]

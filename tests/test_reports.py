@@ -215,7 +215,7 @@ def test_an_unknown_tag_is_answered_with_those_like_it(filled: tuple[Site, Store
 
 def test_the_status_accounts_for_every_cell(filled: tuple[Site, Store]) -> None:
     _, store = filled
-    found = reports.status(store)
+    found = reports.status(store, (), stored.NOW)
     cells = found["cells"]
     parts = ("taken", "duplicate", "replaced", "blank", "bad_quality", "unregistered")
     assert cells["read"] == 14
@@ -232,7 +232,7 @@ def test_all_reports_are_json_without_nan(filled: tuple[Site, Store]) -> None:
         reports.ranking(store, site),
         reports.history(store, site, "FIC-101"),
         reports.history(store, site, "LIC-102"),
-        reports.status(store),
+        reports.status(store, (), stored.NOW),
     ):
         assert json.loads(json.dumps(found, allow_nan=False)) == found
 

@@ -137,8 +137,9 @@ def _store_upgrade(words: argparse.Namespace) -> int:
 
 
 def _store_status(words: argparse.Namespace) -> int:
-    with open_store(_reading(words).config.store_url) as store:
-        found = reports.status(store)
+    config = _reading(words).config
+    with open_store(config.store_url) as store:
+        found = reports.status(store, config.exports, datetime.now(UTC))
     if words.json:
         screen.print_json(found)
     else:

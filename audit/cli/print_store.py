@@ -12,6 +12,8 @@ from audit.cli.screen import table
 from audit.reports.contract import Json
 
 NEWEST_FILES = 20
+SIZE = "store_bytes"
+"""What a run counts for the growth; the size is shown by itself."""
 CELLS = {
     "rows": "ROWS",
     "read": "READ",
@@ -38,6 +40,8 @@ def print_status(console: Console, found: Json, everything: bool = False) -> Non
         )
         return
     console.print(f"Schema: {schema['current']}, current. Site: {found['site'] or 'none yet'}.")
+    for sentence in found["quiet"]:
+        console.print(f"Feed: {sentence}")
     loops, specs, nights = found["loops"], found["specs"], found["nights"]
     console.print(
         f"Loops: {loops['current']}, and {loops['retired']} retired. Spec versions: "
@@ -97,7 +101,9 @@ def _print_runs(console: Console, runs: list[Json]) -> None:
     console.print(Text("Last runs, newest first (times in UTC)", style="bold"))
     rows = table("STARTED", "RUN", "STATE", "TOOK", "COUNTS")
     for run in runs[:5]:
-        counts = ", ".join(f"{key} {count}" for key, count in run["counts"].items() if count)
+        counts = ", ".join(
+            f"{key} {count}" for key, count in run["counts"].items() if count and key != SIZE
+        )
         rows.add_row(
             _utc(run["started_at"]),
             run["kind"],

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Mapping, Sequence
+from datetime import datetime
 from functools import reduce
 
-from audit.records import CellAccount, Spec
+from audit import feed
+from audit.feed_facts import feed_facts
+from audit.records import CellAccount, ExportSource, Spec
 from audit.reports import contract, store_size
 from audit.reports.contract import Json
 from audit.run_report import add
@@ -18,10 +21,11 @@ RUNS_LOOKED_AT = 200
 """Newest runs the growth is measured from: more than there are nights in 90 days."""
 
 
-def status(store: Store) -> Json:
-    """Schema, site, size, counts, nights, the last runs, the account of cells of every export file.
+def status(store: Store, exports: Sequence[ExportSource], now: datetime) -> Json:
+    """Schema, site, feed, size, counts, nights, last runs, the cells of every export file.
 
-    Where the store has no schema of this program yet, only ``url`` and ``schema`` are there.
+    ``exports``: the site's. Where the store has no schema of this program yet, only ``url`` and
+    ``schema`` are there.
     """
     schema = store.schema()
     head = {
@@ -31,8 +35,9 @@ def status(store: Store) -> Json:
     if schema.current != schema.head:
         return head
     with store.read() as session:
-        exports = queries.exports(session)
-        cells = reduce(add, (seen.account for seen in exports), CellAccount())
+        seen_exports = queries.exports(session)
+        cells = reduce(add, (seen.account for seen in seen_exports), CellAccount())
+        at_work = queries.running(session)
         loops = queries.loops(session, include_retired=True)
         steps, newest = queries.step_counts(session), queries.newest_steps(session)
         nights, runs = queries.nights(session), queries.runs(session, RUNS_LOOKED_AT)
@@ -41,7 +46,7 @@ def status(store: Store) -> Json:
             steps["measurements"],
             max((step.at_us for step in newest.values()), default=None),
         )
-        return head | {
+        found = {
             "site": queries.site_name(session),
             "size": store_size.size(size),
             "growth": store_size.growth(size, runs),
@@ -54,11 +59,15 @@ def status(store: Store) -> Json:
                 nights[-1].cutoff if nights else None,
             ),
             "nights": _nights(nights),
-            "exports": dict(Counter(seen.state for seen in exports)),
-            "runs": [_run(run) for run in runs[:RUNS_SHOWN]],
-            "files": [_file(seen) for seen in exports],
+            "exports": dict(Counter(seen.state for seen in seen_exports)),
+            "runs": [_run(run, at_work) for run in runs[:RUNS_SHOWN]],
+            "files": [_file(seen) for seen in seen_exports],
             "cells": contract.account(cells),
         }
+    current = [row.loop for row in loops if row.retired_at is None]
+    night = nights[-1].night if nights else now.date()
+    quiet = feed.sentences(feed_facts(store, current, exports, now, night)) if current else ()
+    return head | {"quiet": list(quiet)} | found
 
 
 def _loops(stored: Sequence[StoredLoop]) -> Json:
@@ -82,12 +91,13 @@ def _nights(nights: Sequence[NightInfo]) -> Json:
     }
 
 
-def _run(run: RunInfo) -> Json:
+def _run(run: RunInfo, at_work: int | None) -> Json:
+    unended = "running" if run.id == at_work else "cut off"
     return {
         "kind": run.kind,
         "started_at": contract.stamp(run.started_at),
         "ended_at": contract.stamp(run.ended_at),
-        "state": run.state,
+        "state": run.state if run.ended_at else unended,
         "counts": dict(run.counts),
         "error": run.error,
     }

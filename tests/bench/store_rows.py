@@ -268,7 +268,7 @@ def _table(store: Store, loops: int) -> Iterator[tuple[str, str]]:
     yield "one loop's newest twelve steps saved", _saved(store, middle)
     lines, took = _dumped(store)
     yield f"dump, the first {lines} lines", f"{lines / took:.0f} lines/s"
-    yield "store status", _best(lambda: reports.status(store), runs=3)
+    yield "store status", _best(lambda: reports.status(store, (), some.NOW), runs=3)
     yield "size of the store alone", _read(store, queries.size_bytes)
     for kind in (Kind.SUPERSEDED, Kind.SAMPLES, Kind.EDGES):
         yield f"prune {kind.value}, dry run", _best(partial(_look, store, kind), runs=1)
