@@ -165,11 +165,11 @@ def time_job(path: Path, case: Case, cores: int, measuring: bool) -> dict[str, f
         for used in clocks.values():
             used.spent_s = 0.0
         whole_s, steps = audit(path, case, case.loops)
-        others = [_peak_mb(number) for number in ids if number != os.getpid()]
+        others = [peak_mb_of(number) for number in ids if number != os.getpid()]
     return {
         "whole_s": whole_s,
         "steps": steps,
-        "peak_mb": _peak_mb(os.getpid()),
+        "peak_mb": peak_mb_of(os.getpid()),
         "workers_mb": sum(others),
         **{f"{name}_s": clock.spent_s for name, clock in clocks.items()},
     }
@@ -190,7 +190,7 @@ def audit(export: Path, case: Case, loops: int) -> tuple[float, int]:
             return time.perf_counter() - started, report.steps_new
 
 
-def _peak_mb(process: int) -> float:
+def peak_mb_of(process: int) -> float:
     """Most memory a process of this machine has held so far (Linux)."""
     for line in Path(f"/proc/{process}/status").read_text().splitlines():
         if line.startswith("VmHWM:"):

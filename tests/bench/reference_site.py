@@ -65,9 +65,14 @@ def table(loops: int, first_day: int = 0, days: int = 1) -> pa.Table:
     return pa.table(columns)
 
 
-def write_wide_csv(path: Path, loops: int, first_day: int = 0, days: int = 1) -> None:
+def write_wide_csv(
+    path: Path, loops: int, first_day: int = 0, days: int = 1, every_s: int = 1
+) -> None:
+    """One row each ``every_s`` seconds."""
     options = pacsv.WriteOptions(quoting_style="none", batch_size=1 << 14)
-    pacsv.write_csv(table(loops, first_day, days), path, options)
+    whole = table(loops, first_day, days)
+    rows = np.arange(0, whole.num_rows, every_s)
+    pacsv.write_csv(whole if every_s == 1 else whole.take(rows), path, options)
 
 
 def write_narrow_csv(path: Path, loops: int) -> None:
