@@ -93,9 +93,12 @@ def look(data: NDArray[np.uint8], at: int, end: int) -> Seen:
 
 def _seen(text: bytes, after_cr: bool) -> Seen:
     """What stands in a text, by searches that are much faster than a look at each byte."""
-    crlf = text.count(b"\r\n") + int(after_cr and text[:1] == b"\n")
+    lines = int(np.count_nonzero(np.frombuffer(text, np.uint8) == _LF))
     odd = not text.isascii() or b"\0" in text
-    return Seen(text.count(b"\n"), text.count(b"\r"), crlf, b'"' in text, odd)
+    cr, crlf = 0, int(after_cr and text[:1] == b"\n")
+    if b"\r" in text:
+        cr, crlf = text.count(b"\r"), crlf + text.count(b"\r\n")
+    return Seen(lines, cr, crlf, b'"' in text, odd)
 
 
 def check_text(block: Block, path: str, final: bool = True) -> None:

@@ -69,11 +69,18 @@ def _narrow(
     used = np.array([name in wanted for name in names] or [False], np.bool_)[code[rows]]
     so_far.tally.unregistered += int(np.count_nonzero(~used))
     rows, good = _qualities(sheet, source, rows[used], so_far, lambda row: names[code[row]])
-    order = np.argsort(code[rows], kind="stable")
-    rows, good = rows[order], good[order]
+    rows, good = _in_order(code, len(names), rows, good)
     column = sheet.columns[source.value].take(rows)
     every = _Cells("", source.value, column, stamps.us[rows], good, rows)
     return _by_tag(every, names, code[rows], source, wanted, sheet, so_far)
+
+
+def _in_order(code: Whole, tags: int, rows: Whole, good: Flag) -> tuple[Whole, Flag]:
+    """Rows, and which are good, sorted by their tag's code; those of a tag stay as they stand."""
+    own = code[rows]
+    small = own.astype(np.int16) if tags < 1 << 15 else own  # numpy sorts these by their digits
+    order = np.argsort(small, kind="stable")
+    return rows[order], good[order]
 
 
 def _by_tag(
