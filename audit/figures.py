@@ -93,7 +93,7 @@ def interval(
         places = decimals(value, low, high, limit)
         least = "at least " if at_least else ""
         text = f"{least}{with_unit(number(value, places), unit)}"
-        if (low is None and high is None) or low == high == value:
+        if (low is None and high is None) or _one_value(value, low, high):
             return text
         return f"{text} ({kind}{': ' if kind else ''}{_bounds(low, high, places)})"
     if low is not None and high is not None:
@@ -112,6 +112,13 @@ def interval(
 def lone(number_: float) -> str:
     """A number without an interval: three significant digits, no zeros behind."""
     return plain(float(number(number_, _places(abs(number_), 3))))
+
+
+def _one_value(value: float, low: float | None, high: float | None) -> bool:
+    """Whether the interval is no wider than the digits a number is kept to."""
+    if low is None or high is None:
+        return False
+    return high - low <= 1e-9 * max(abs(value), abs(low), abs(high))
 
 
 def _bounds(low: float | None, high: float | None, places: int) -> str:

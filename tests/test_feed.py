@@ -244,9 +244,10 @@ def test_a_tag_without_samples_for_a_day_beyond_its_declared_silence(
 def test_what_went_silent_is_named_with_its_time() -> None:
     found = facts(FIC_2={Role.PV: state(age_h=30.0, held_h=99.0), Role.OUTPUT: state(age_h=26.0)})
     assert feed.sentences(found) == (
-        "No good sample any more, though others keep coming, from tags of 1 loop (time without, "
+        "No good sample any more, though others keep coming, from tags of 1 loop (for how long, "
         "newest good sample): FIC-2 (process variable, 30 h, 2026-03-12 19:15 UTC; "
-        "controller output, 26 h, 2026-03-12 23:15 UTC).",
+        "controller output, 26 h, 2026-03-12 23:15 UTC). Has the tag got another name, or has its "
+        "transmitter failed?",
     )
 
 
@@ -276,8 +277,9 @@ def test_outputs_that_react_before_their_setpoints_are_told_with_the_time() -> N
     found = clocks([reaction(-12.0)] * 4 + [reaction(-11.0)] * 2 + [reaction(0.0)] * 4)
     assert found == (
         "The clocks of setpoint and controller output differ in 1 loop, the output is stamped "
-        "before the setpoint it answers: FIC-1 by about 12 s (11 to 13), in 6 changes. Times "
-        "counted from the setpoint are off by as much."
+        "before the setpoint it answers: FIC-1 by about 12 s (11 to 13), in 6 changes. If it "
+        "is the setpoint's that is wrong, the times counted from it are off by as much; have both "
+        "sources' clocks checked."
     )
 
 

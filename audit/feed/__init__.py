@@ -9,7 +9,7 @@ from __future__ import annotations
 from datetime import timedelta
 
 from audit.feed import clocks, flat, share
-from audit.feed.facts import Facts, counted, listed
+from audit.feed.facts import Facts, counted, hours, listed
 
 __all__ = ["DAYS", "REACTIONS", "Facts", "sentences"]
 
@@ -33,10 +33,10 @@ def sentences(facts: Facts) -> tuple[str, ...]:
         return ("No export has given a good sample yet; nothing can be judged.",)
     found: list[str] = []
     if facts.asked - facts.newest > EXPORTS_STOPPED:
-        old = (facts.asked - facts.newest) / timedelta(hours=1)
+        old = hours((facts.asked - facts.newest) // timedelta(microseconds=1))
         found.append(
-            f"The exports have stopped: the newest good sample is {old:.0f} h old "
-            f"({facts.newest:%Y-%m-%d %H:%M} UTC)."
+            f"The exports have stopped: the newest good sample is {old} old "
+            f"({facts.newest:%Y-%m-%d %H:%M} UTC). See to the job that exports."
         )
     absent = facts.absent()
     if absent:

@@ -36,8 +36,8 @@ def differing(facts: Facts) -> list[str]:
         return []
     return [
         f"The clocks of setpoint and controller output differ in {counted(texts)}, the output is "
-        f"stamped before the setpoint it answers: {listed(texts)}. Times counted from the setpoint "
-        "are off by as much."
+        f"stamped before the setpoint it answers: {listed(texts)}. If it is the setpoint's that is "
+        "wrong, the times counted from it are off by as much; have both sources' clocks checked."
     ]
 
 

@@ -83,4 +83,8 @@ def when(at_us: int) -> str:
 
 
 def hours(span_us: int) -> str:
-    return f"{timedelta(microseconds=span_us) / timedelta(hours=1):.0f} h"
+    """A span in hours, from three days on in days."""
+    span = timedelta(microseconds=span_us)
+    if span > timedelta(days=3):
+        return f"{span / timedelta(days=1):.1f} days"
+    return f"{span / timedelta(hours=1):.0f} h"

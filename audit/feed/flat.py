@@ -54,14 +54,15 @@ def flat(facts: Facts) -> list[str]:
         held
         for loop in facts.loops
         if loop.tag not in known and (held := _held(facts, loop, Role.OUTPUT))
-        if _is_flat(facts, held) and not _at_limit(held)
+        if _is_flat(facts, held) and not _at_limit(held) and _held(facts, loop, Role.PV)
     ]
     sentences = [_flat_sentence(stuck, len(looked_at))] if stuck else []
     if outputs:
         texts = [held.text for held in outputs]
         sentences.append(
             f"The controller output of {counted(texts)} in automatic keeps one and the same value "
-            f"to the last digit while the process variable moves: {listed(texts)}."
+            f"to the last digit while the process variable moves: {listed(texts)}. Is the tag "
+            "stuck, or the controller not at work?"
         )
     return sentences
 
@@ -126,7 +127,8 @@ def silent(facts: Facts) -> list[str]:
         return []
     return [
         "No good sample any more, though others keep coming, from tags of "
-        f"{counted(items)} (time without, newest good sample): {listed(items)}."
+        f"{counted(items)} (for how long, newest good sample): {listed(items)}. Has the tag got another name, or has its "
+        "transmitter failed?"
     ]
 
 

@@ -74,7 +74,7 @@ def recognise(t: Array, v: Array, window_s: float) -> Archive:
     if len(length) >= LEAST - 1:
         found = _exception(length, np.abs(differences(v)), chance)
         found = found or _swinging(t, v, length, chance)
-    return found or _few(t, v, length) or EVERY
+    return found or _few(t, v, length) or _untold(t, v)
 
 
 def _bends(t: Array, v: Array) -> Array:
@@ -90,6 +90,12 @@ def _few(t: Array, v: Array, length: Array) -> Archive | None:
         return None
     off = quantile(np.abs(_bends(t, v)), 0.8)
     return Archive(Kept.FEW, off, 0.0, off, off)
+
+
+def _untold(t: Array, v: Array) -> Archive:
+    """Irregular without an archive's traces: no deadband, or one within how the samples bend."""
+    bends = np.abs(_bends(t, v))
+    return Archive(high=quantile(bends, 0.8)) if len(bends) else EVERY
 
 
 def scan_s(t: Array) -> float:
