@@ -127,8 +127,8 @@ def silent(facts: Facts) -> list[str]:
         return []
     return [
         "No good sample any more, though others keep coming, from tags of "
-        f"{counted(items)} (for how long, newest good sample): {listed(items)}. Has the tag got another name, or has its "
-        "transmitter failed?"
+        f"{counted(items)} (for how long, newest good sample): {listed(items)}. Has the tag got "
+        "another name, or has its transmitter failed?"
     ]
 
 
