@@ -17,8 +17,8 @@ if TYPE_CHECKING:
 WHAT = {
     "superseded": "measurements that were replaced or withdrawn, verdicts, unused samples",
     "steps": "setpoint changes with their measurements; baselines stay",
-    "samples": "samples of setpoint changes; their measurements stay",
-    "edges": "slices of record at the borders of exports",
+    "samples": "samples of setpoint changes; what was measured stays, and cannot be measured again",
+    "edges": "slices of record at the borders of exports; they go with the samples of that time",
     "revisions": "revisions of nights' lists but the first and the newest",
     "lists": "lists of nights",
     "exports": "accounts of export contents that were replaced",
@@ -62,13 +62,14 @@ def _notes(done: Pruning) -> list[str]:
     if any(one.before is None for one in done.kinds):
         notes.append("No night has been ranked yet: what standings may rest on stays.")
     elif len({one.before for one in done.kinds}) > 1:
-        notes.append("What the newest night rests on stays, whatever its age.")
+        notes.append("What the newest night rests on stays, whatever its age: see BEFORE.")
     if any(_closes(one) for one in done.kinds):
-        notes.append("Late data for that time are counted, but change no setpoint change any more.")
+        would = "would be counted, but would" if done.dry_run else "are counted, but"
+        notes.append(f"Late data for that time {would} change no setpoint change any more.")
     if done.vacuumed is False:
         notes.append("PostgreSQL makes the space free for new rows by itself (autovacuum).")
     elif done.vacuumed:
-        notes.append("The file was made smaller.")
+        notes.append("The file was written anew, without what was free in it.")
     elif not done.dry_run:
         notes.append(
             "The space is used for new rows. An SQLite file gets smaller by --vacuum alone; on "
