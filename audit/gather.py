@@ -58,6 +58,7 @@ class LoopContext:
     tag_sources: Mapping[str, str]
     tag_states: Mapping[str, Mapping[Role, TagState]]
     with_past: frozenset[str]
+    now_us: int
 
     def reading(self, loop: Loop) -> Reading:
         return reading_of(loop, self.tag_sources, self.config.exports)
@@ -88,6 +89,7 @@ def loop_work(
         days=past.days,
         states=context_.tag_states.get(loop.tag, {}),
         closed_us=past.closed_us,
+        now_us=context_.now_us,
     )
 
 

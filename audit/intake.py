@@ -70,12 +70,15 @@ class Seen:
 
 @dataclass(frozen=True, eq=False)
 class Found:
-    """New files, those known as they are, sources that cannot be listed, files found twice."""
+    """New files, those known as they are, sources that cannot be listed, files found twice,
+    sources without a file, and files to be read again that are gone, with the tags."""
 
     new: list[NewFile]
     known: dict[str, NewFile]
     refused: list[ExportRefused]
     twice: list[Fault]
+    empty: list[ExportSource]
+    gone: dict[str, frozenset[str]]
 
 
 def find(sources: Sequence[ExportSource], seen: Mapping[str, Seen]) -> Found:
@@ -84,20 +87,28 @@ def find(sources: Sequence[ExportSource], seen: Mapping[str, Seen]) -> Found:
     A file without a stamp counts as new each time. A known one is read again for tags it was not
     asked for. Of two sources that find the same file the first has it.
     """
-    found = Found([], {}, [], [])
+    found = Found([], {}, [], [], [], {})
     met: dict[str, str] = {}
+    paths: set[str] = set()
     for source in sources:
         try:
             files = exports.discover(source)
         except ExportRefused as refused:
             found.refused.append(refused)
             continue
+        if not files:
+            found.empty.append(source)
         for file in files:
+            paths.add(file.path)
             first = met.setdefault(exports.same_file(file, source), source.name)
             if first == source.name:
                 _sort_in(NewFile(file, source), seen.get(file.path), found)
             else:
                 found.twice.append(_found_twice(file, source, first))
+    if not found.refused:  # else files that cannot be listed would seem to be gone
+        found.gone.update(
+            {p: one.missing for p, one in seen.items() if one.missing and p not in paths}
+        )
     return found
 
 

@@ -44,6 +44,7 @@ class LoopWork:
     result may change. ``days``: the stored day's records around the fresh spans.
     ``states``: what the loop's tags last said. ``closed_us``: up to where the loop's past is
     closed, for something was pruned there: no step is looked for in it, days are counted.
+    ``now_us``: what is stamped later says nothing of what a tag last said.
     """
 
     loop: Loop
@@ -57,6 +58,7 @@ class LoopWork:
     days: tuple[KeptDay, ...]
     states: Mapping[Role, TagState] = field(default_factory=dict)
     closed_us: int | None = None
+    now_us: int | None = None
 
     def spans(self) -> list[Span]:
         """Every span some tag of the loop has fresh word of."""
@@ -92,8 +94,17 @@ def audit_loop(work: LoopWork) -> LoopResult:
         withdrawn=tuple(at_us for at_us in work.touched if at_us not in found),
         edges=tuple(edges(record, borders, work.loop.windows)),
         days=tuple(_days(work, fresh, replaced)),
-        tag_states=tag_states.follow_all(fresh, work.states),
+        tag_states=tag_states.follow_all(_until(fresh, work.now_us), work.states),
     )
+
+
+def _until(fresh: Mapping[Role, Samples], now_us: int | None) -> Mapping[Role, Samples]:
+    if now_us is None:
+        return fresh
+    return {
+        role: own.between(int(own.t_us[0]), now_us) if len(own) else own
+        for role, own in fresh.items()
+    }
 
 
 def _as_samples(role: Role, raw: RawSamples, loop: Loop) -> Samples:

@@ -82,7 +82,7 @@ def run(
             _take_exports(audit)
             published = _publish(audit, _nights(audit, nights))
             asked = now if nights is None else min(now, site.config.cutoff(published[-1]))
-            audit.tally.quiet = _quiet(audit, asked, published[-1])
+            audit.tally.quiet = (*audit.tally.no_files(), *_quiet(audit, asked, published[-1]))
         return audit.tally.report()
 
 
@@ -143,6 +143,8 @@ def _take_exports(audit: _Run) -> None:
     audit.tally.files_skipped += len(found.known) - sum(new.only is not None for new in found.new)
     audit.tally.files_refused.extend(_fault(refused) for refused in found.refused)
     audit.tally.faults.extend(found.twice)
+    audit.tally.missed(found.gone)
+    audit.tally.empty_sources.extend(found.empty)
     done = 0
     for batch in intake.batches(found.new, wanted, audit.pool, audit.scratch):
         done += len(batch)
@@ -245,12 +247,18 @@ def _begin(
             file = result.new.file
             if result.refused is not None:
                 audit.tally.files_refused.append(_fault(result.refused))
-                writes.refuse_export(session, file, result.refused.message, audit.now)
+                writes.refuse_export(session, file, _reason(result.refused), audit.now)
             elif result.read is not None:
                 read = replace(result.read, account=next(left))
                 audit.tally.read(read.account, read.faults)
+                audit.tally.ahead(file.path, read, to_us(audit.now))
                 ids.append(writes.begin_export(session, file, read, audit.now, wanted))
     return ids
+
+
+def _reason(refused: ExportRefused) -> str:
+    line = "" if refused.line is None else f"line {refused.line}: "
+    return f"{line}{refused.reason} — {refused.remedy}"
 
 
 def _fault(refused: ExportRefused) -> Fault:
@@ -265,6 +273,7 @@ def _context(audit: _Run) -> LoopContext:
             queries.tag_sources(session),
             queries.tag_states(session),
             queries.with_past(session),
+            to_us(audit.now),
         )
 
 

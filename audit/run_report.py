@@ -9,7 +9,7 @@ from datetime import date
 from typing import Protocol
 
 from audit.errors import Fault
-from audit.records import CellAccount
+from audit.records import CellAccount, ExportRead, ExportSource, instant
 from audit.store.writes import LoopRows, SavedLoop
 
 
@@ -56,6 +56,7 @@ class Tally:
     steps: Counter[str] = field(default_factory=Counter)
     faults: list[Fault] = field(default_factory=list)
     nights: list[date] = field(default_factory=list)
+    empty_sources: list[ExportSource] = field(default_factory=list)
     quiet: tuple[str, ...] = ()
     earliest_changed_us: int | None = None
 
@@ -64,6 +65,38 @@ class Tally:
         self.files_new += 1
         self.account = add(self.account, account)
         self.faults.extend(faults)
+
+    def ahead(self, path: str, read: ExportRead, now_us: int) -> None:
+        """Samples of a file that are stamped after the time of the audit."""
+        found = [column.good_until(now_us)[1] for column in read.columns.values()]
+        if sum(found):
+            newest = (
+                ""
+                if read.last_us is None
+                else f", up to {instant(read.last_us):%Y-%m-%d %H:%M} UTC"
+            )
+            problem = f"{sum(found)} samples are stamped in the future{newest}"
+            remedy = "see to the clock of their source; the exports stay taken as they are"
+            self.faults.append(Fault(path, problem, remedy))
+
+    def missed(self, gone: Mapping[str, frozenset[str]]) -> None:
+        """Exports that were to be read again for new tags, and are no longer there."""
+        if gone:
+            first = min(gone)
+            others = f" (and {len(gone) - 1} more)" if len(gone) > 1 else ""
+            problem = (
+                f"it is no longer there{others}, so what it held of {len(gone[first])} tags that "
+                "the register names since is not known"
+            )
+            self.faults.append(Fault(first, problem, "put it back if these days matter"))
+
+    def no_files(self) -> tuple[str, ...]:
+        """Sentences on kinds of export of which no file is found."""
+        return tuple(
+            f"No file is found for [[exports]] '{source.name}' ({source.files}): is its folder "
+            "there, and filled?"
+            for source in self.empty_sources
+        )
 
     def not_kept(self, paths: Iterable[str]) -> None:
         """Exports hold again somewhere, and are no longer there to be read again."""

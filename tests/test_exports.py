@@ -22,6 +22,7 @@ from export_files import (
 )
 
 from audit.exports import discover, first_stamp, peek
+from audit.records import FileLimits
 
 
 @pytest.mark.parametrize("ending", PACKED)
@@ -149,3 +150,14 @@ def test_first_stamp_of_what_cannot_be_read(tmp_path: Path) -> None:
         source = a_source(tmp_path, files=name)
         (file,) = discover(source)
         assert first_stamp(file, source) is None
+
+
+def test_texts_that_are_no_modes_cost_their_tag_alone(tmp_path: Path) -> None:
+    limits = FileLimits(most_texts=2)
+    rows = [f"2026-03-14T08:00:0{s}Z,1.5,50,M{s},1" for s in range(4)]
+    head = WIDE.splitlines()[0]
+    got = read_bytes(tmp_path, "\n".join([head, *rows]) + "\n", limits=limits)
+    assert set(got.columns) == {"FIC-1.PV", "FIC-1.SP"}
+    assert got.account.refused == {"no_mode": 4}
+    long = read_bytes(tmp_path, WIDE, limits=FileLimits(longest_text=3))
+    assert long.account.refused == {"no_mode": 4}

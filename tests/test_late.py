@@ -11,6 +11,8 @@ from test_nightly import LOOPS, SPECS, lay, plant
 
 import sites
 from audit import gather
+from audit.records import to_us
+from audit.store import queries
 from sites import NOW, audit, content
 
 HEAD, FLOW, WARM = LOOPS.splitlines(keepends=True)
@@ -146,3 +148,45 @@ def test_a_record_worked_through_in_parts_gives_the_same_content(
     report = audit(folder)
     assert report.steps_new > 15
     assert content(folder) == reference
+
+
+def test_samples_of_the_future_are_named_and_say_nothing_of_the_feed(
+    record: sites.Plant, tmp_path: Path
+) -> None:
+    folder = lay(tmp_path)
+    text = sites.wide_csv(record)
+    last = text.splitlines()[-1].split(",")
+    ahead = ",".join(["2026-03-20T00:00:00Z", *last[1:]])
+    sites.write_csv(folder / "exports" / "all.csv", f"{text}{ahead}\n")
+    report = audit(folder)
+    (fault,) = report.faults
+    assert "6 samples are stamped in the future, up to 2026-03-20 00:00 UTC" in fault.problem
+    with sites.opened(folder) as store, store.read() as session:
+        states = queries.tag_states(session)
+    assert {state.newest_us for state in states["FIC-101"].values()} == {
+        to_us(record.start) + round(float(record.t_s[-1]) * 1e6)
+    }
+
+
+def test_exports_without_a_file_are_said(tmp_path: Path) -> None:
+    folder = lay(tmp_path)
+    report = audit(folder)
+    assert "No file is found for [[exports]] 'dcs' (exports/*.csv*)" in report.quiet[0]
+
+
+def test_an_export_that_is_gone_when_a_loop_is_added_is_named(
+    record: sites.Plant, tmp_path: Path
+) -> None:
+    folder = sites.SiteFiles(HEAD + FLOW, SPECS, sites.WIDE).lay(tmp_path)
+    (folder / "specs.csv").write_text("".join(SPECS.splitlines(keepends=True)[:2]))
+    half = len(record.t_s) // 2
+    sites.write_csv(folder / "exports" / "a.csv", sites.wide_csv(record.rows(0, half)))
+    sites.write_csv(folder / "exports" / "b.csv", sites.wide_csv(record.rows(half, 2 * half)))
+    audit(folder)
+    (folder / "exports" / "a.csv").unlink()
+    (folder / "loops.csv").write_text(LOOPS)
+    (folder / "specs.csv").write_text(SPECS)
+    report = audit(folder, now=NOW + timedelta(minutes=1))
+    (fault,) = report.faults
+    assert fault.file == "exports/a.csv"
+    assert "no longer there" in fault.problem

@@ -67,9 +67,8 @@ def print_findings(console: Console, found: Findings) -> None:
     if faults:
         console.print(f"{files}; what is at fault has to be put right before an audit.")
     else:
-        console.print(
-            f"{found.loops} loops and {found.specs} spec rows read, {files}: all can be read."
-        )
+        can = ": all can be read" if found.files else ""
+        console.print(f"{found.loops} loops and {found.specs} spec rows read, {files}{can}.")
 
 
 def _print_some(console: Console, heading: str, lines: Sequence[str]) -> None:

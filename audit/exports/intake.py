@@ -92,6 +92,8 @@ def _read(
         columns = writer.finish(
             lambda us, value: layouts.settled(us, value, so_far), so_far.texts()
         )
+    for tag in so_far.no_modes & columns.keys():
+        so_far.tally.refuse_taken("no_mode", columns.pop(tag).count)
     return _result(content.content_hash(), columns, wanted, so_far)
 
 

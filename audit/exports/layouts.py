@@ -202,7 +202,9 @@ def _part(own: _Cells, read: Cells, sheet: Sheet, so_far: SoFar) -> Part:
     """Samples of one tag; a cell of bad quality is a sample without value, whatever it holds."""
     value = read.value
     if read.texts is not None and len(read.texts):
-        numbers = so_far.word_numbers(own.tag, read.texts, sheet)
+        numbers = so_far.word_numbers(own.tag, read.texts)
+        if numbers is None:
+            return _no_mode(own, sheet, so_far)
         value = numbers[value.astype(np.int64)]
     all_good = own.good is None or bool(own.good.all())
     if all_good and (read.all_values or not read.held.any()):
@@ -225,6 +227,20 @@ def _part(own: _Cells, read: Cells, sheet: Sheet, so_far: SoFar) -> Part:
     kept = ~(blank | refused)
     value = np.where(good, value, np.nan)[kept]
     return Part(own.tag, own.us[kept], value, int(np.count_nonzero(~good[kept])))
+
+
+def _no_mode(own: _Cells, sheet: Sheet, so_far: SoFar) -> Part:
+    """Nothing of a tag whose texts are no modes; its cells are refused."""
+    place = dict(zip(own.rows[:1].tolist(), [0], strict=False))
+    so_far.tally.refuse(
+        sheet,
+        "no_mode",
+        own.rows,
+        lambda row: own.column.shown(place.get(row, 0)),
+        own.name,
+        lambda row: own.tag,
+    )
+    return Part(own.tag, own.us[:0], np.empty(0))
 
 
 def settled(

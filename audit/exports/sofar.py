@@ -12,7 +12,6 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from audit.errors import ExportRefused
 from audit.exports.clock import RowsSoFar
 from audit.exports.eras import Eras
 from audit.exports.sheet import Sheet
@@ -39,6 +38,7 @@ class SoFar:
     tags: dict[str, int] = field(default_factory=dict)
     first_us: int | None = None
     last_us: int | None = None
+    no_modes: set[str] = field(default_factory=set)
     _words: dict[str, dict[str, int]] = field(default_factory=dict)
     _order: Order = field(default_factory=Order)
     _eras: Eras = field(default_factory=Eras)
@@ -66,23 +66,17 @@ class SoFar:
         found = [self.tags.setdefault(tag, len(self.tags)) for tag in tags]
         return np.array(found, np.int64)
 
-    def word_numbers(self, tag: str, texts: Sequence[str], sheet: Sheet) -> NDArray[np.float64]:
+    def word_numbers(self, tag: str, texts: Sequence[str]) -> NDArray[np.float64] | None:
         """The number of each of a mode tag's texts, new ones counted on.
 
-        Raises ExportRefused for texts that are no modes: too many, or too long.
+        None for a tag whose texts are too many, or too long, to be modes: none of it is taken.
         """
         known = self._words.setdefault(tag, {})
         found = np.array([known.setdefault(text, len(known)) for text in texts], np.float64)
         longest = max(map(len, texts), default=0)
         if len(known) > self.limits.most_texts or longest > self.limits.longest_text:
-            raise ExportRefused(
-                sheet.path,
-                f"tag {tag} has {len(known)} different texts, one of {longest} characters: "
-                "no mode has so many, or so long ones",
-                "see that loops.csv names the mode tag; the limits are most_texts and longest_text "
-                "in [intake] of site.toml",
-            )
-        return found
+            self.no_modes.add(tag)
+        return None if tag in self.no_modes else found
 
     def texts(self) -> dict[str, tuple[str, ...]]:
         """The texts of each mode tag by their number."""

@@ -41,6 +41,10 @@ REFUSED = {
         "no code of the declared quality scheme",
         "declare quality_scheme as the file has it",
     ),
+    "no_mode": (
+        "the tag's texts are too many, or too long, to be modes",
+        "see that loops.csv names the mode tag; most_texts and longest_text in [intake]",
+    ),
     "not_a_number": (
         "no number",
         "plain numbers up to 1e30 with the declared decimal and thousands marks, or the declared "
@@ -98,6 +102,11 @@ class Tally:
             found = repr(text_of(row))[:_TEXT_SHOWN]
             where = found if line is not None else f"{found} in row {sheet.first_row + row + 1}"
             self._show(reason, sheet.path, line, where, column, tag_of(row))
+
+    def refuse_taken(self, reason: str, cells: int) -> None:
+        """Cells that were taken for good first."""
+        if cells:
+            self._refused[reason] += cells
 
     def account(self) -> CellAccount:
         """The account of the file."""
