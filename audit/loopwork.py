@@ -33,7 +33,7 @@ from audit.records import (
 )
 from audit.weaving.precedence import FreshTag
 from audit.weaving.spans import Span, inside, pick, union
-from audit.weaving.stretches import curve, dependence, edges, to_look_at, weave
+from audit.weaving.stretches import curve, dependence, edges, seams, to_look_at, weave
 
 
 @dataclass(frozen=True, eq=False)
@@ -116,10 +116,12 @@ def _concerned(record: Record, work: LoopWork) -> list[SetpointChange]:
     spans = union(span for own in work.open_spans().values() for span in own)
     spans = to_look_at(record, spans, work.loop.windows)
     touched = set(work.touched)
+    false = set(seams(record, work.kept, work.open_spans().get(Role.SP, ())).tolist())
     return [
         change
         for change in setpoints.find(record, work.loop, work.reading)
-        if change.at_us in touched or any(a <= change.at_us <= b for a, b in spans)
+        if change.at_us not in false
+        and (change.at_us in touched or any(a <= change.at_us <= b for a, b in spans))
     ]
 
 

@@ -17,6 +17,7 @@ from functools import cache
 from itertools import pairwise
 from pathlib import Path
 from tempfile import TemporaryDirectory
+from typing import Any
 
 import damaged_plant as plant
 import pytest
@@ -310,3 +311,24 @@ def check_accounts(report: RunReport, new: Mapping[str, CellAccount]) -> None:
     refused = sum((Counter(one.refused) for one in new.values()), Counter[str]())
     assert report.account.refused == refused
     assert [one.balance for one in (report.account, *new.values())] == [0] * (1 + len(new))
+
+
+@pytest.mark.parametrize(
+    "coming",
+    [
+        # each file begins some rows before the end of the one before it; one audit each
+        [("a", 0, 147), ("b", 147, 885), ("c", 844, 3000)],
+        [("b", 147, 885), ("a", 0, 147), ("c", 844, 3000)],
+        [("a", 0, 147), ("b", 86, 885), ("c", 844, 3000)],
+        # the last audit takes two files far apart: a, c (FIC-1 and TIC-2 gain a step at 06:52:48)
+        [("b", 402, 1776), ("c", 2963, 3000), ("a", 262, 436, "d", 1739, 2969), ("e", 0, 283)],
+    ],
+)
+def test_files_that_overlap_make_no_setpoint_change_of_their_own(coming: list[Any]) -> None:
+    of = table("wide.csv")
+    with works("wide.csv") as own:
+        for files in coming:
+            for name, first, last in zip(files[::3], files[1::3], files[2::3], strict=True):
+                of.write(own.folder, name, of.all_lines(range(first, last)))
+            own.audit()
+        assert tuple(own.content()) == undamaged()

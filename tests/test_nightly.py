@@ -328,7 +328,7 @@ def test_a_quiet_feed_is_said(record: sites.Plant, tmp_path: Path) -> None:
     sites.write_csv(folder / "exports" / "all.csv", sites.wide_csv(record))
     assert audit(folder, now=datetime(2026, 3, 2, 2, 0, tzinfo=UTC)).quiet == ()
     (stopped,) = audit(folder, now=datetime(2026, 3, 4, 9, 0, tzinfo=UTC)).quiet
-    assert stopped.startswith("The exports have stopped: the newest good sample is 72 h old")
+    assert stopped.startswith("The exports have stopped: the newest good sample is 3.0 days old")
 
 
 def test_a_loop_whose_tags_no_export_names_is_in_the_list_and_said(

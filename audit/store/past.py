@@ -109,10 +109,14 @@ def edges_next_to(s: Session, tag: str, from_us: int, to_us: int) -> list[Record
         )
     )
     at_us = MeasurementRow.at_us
+    last = steps.add_columns(at_us).where(at_us < from_us).order_by(at_us.desc()).limit(1)
+    known = s.execute(last).all()
+    if known:  # an edge before it is older word of what the setpoint holds
+        before = before.where(EdgeRow.border_us > known[0].at_us)
     found = [
         *s.scalars(before.order_by(EdgeRow.border_us.desc()).limit(1)),
         *s.scalars(after.order_by(EdgeRow.border_us).limit(2)),
-        *s.scalars(steps.where(at_us < from_us).order_by(at_us.desc()).limit(1)),
+        *(row.data for row in known),
         *s.scalars(steps.where(at_us > to_us).order_by(at_us).limit(1)),
     ]
     return [decode(data) for data in found]

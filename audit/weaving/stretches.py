@@ -10,6 +10,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from itertools import pairwise
 
 import numpy as np
+from numpy.typing import NDArray
 
 from audit.records import (
     Between,
@@ -72,6 +73,25 @@ def _pieces(part: Samples, parts: Sequence[Samples]) -> list[Samples]:
     cuts = np.unique(part.t_us.searchsorted([_first_us(other) for other in parts]))
     ends = [0, *cuts[(cuts > 0) & (cuts < len(part))].tolist(), len(part)]
     return [Samples(part.t_us[a:b], part.value[a:b], part.good[a:b]) for a, b in pairwise(ends)]
+
+
+def seams(record: Record, kept: Iterable[Record], replaced: Iterable[Span]) -> NDArray[np.int64]:
+    """Stamps of setpoint samples [k] whose predecessor in the record may not be the true one.
+
+    Samples of one kept slice follow one another, and so do those at a replaced span. Between two
+    slices with nothing new in between, samples may have been dropped: what differs there is no
+    move, or is one whose own slice is kept.
+    """
+    stamps = record.of(Role.SP).only_good().t_us
+    before, after = stamps[:-1], stamps[1:]
+    follows = np.zeros(len(after), np.bool_)
+    for slice_ in kept:
+        own = slice_.of(Role.SP).only_good().t_us
+        if len(own) > 1:
+            follows |= (before >= own[0]) & (after <= own[-1])
+    for start, end in replaced:
+        follows |= (before <= end) & (after >= start)
+    return after[~follows]
 
 
 def to_look_at(record: Record, spans: Iterable[Span], windows: Windows) -> list[Span]:
