@@ -322,6 +322,8 @@ def check_accounts(report: RunReport, new: Mapping[str, CellAccount]) -> None:
         [("a", 0, 147), ("b", 86, 885), ("c", 844, 3000)],
         # the last audit takes two files far apart: a, c (FIC-1 and TIC-2 gain a step at 06:52:48)
         [("b", 402, 1776), ("c", 2963, 3000), ("a", 262, 436, "d", 1739, 2969), ("e", 0, 283)],
+        # an edge that was kept before what lies in front of it was filled
+        [("c", 0, 364), ("a", 2972, 3000), ("e", 2716, 3000), ("b", 256, 3000), ("d", 2225, 3000)],
     ],
 )
 def test_files_that_overlap_make_no_setpoint_change_of_their_own(coming: list[Any]) -> None:

@@ -88,7 +88,8 @@ def seams(record: Record, kept: Iterable[Record], replaced: Iterable[Span]) -> N
     for slice_ in kept:
         own = slice_.of(Role.SP).only_good().t_us
         if len(own) > 1:
-            follows |= (before >= own[0]) & (after <= own[-1])
+            place = np.minimum(np.searchsorted(own, before), len(own) - 2)
+            follows |= (own[place] == before) & (own[place + 1] == after)
     for start, end in replaced:
         follows |= (before <= end) & (after >= start)
     return after[~follows]
