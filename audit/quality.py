@@ -1,4 +1,4 @@
-"""Samples come in, flags go out: automatic, output saturated, out of range, silences, bad quality.
+"""Samples come in, flags go out: in automatic, output saturated, silences, bad quality.
 
 Nothing is deleted here: a sample that is flagged stays where it was.
 """
@@ -41,27 +41,6 @@ def saturated(output: Samples, loop: Loop) -> NDArray[np.bool_]:
     value = output.value[output.good]
     at_limit[output.good] = (value <= low) | (value >= high)
     return at_limit
-
-
-RANGE_MARGIN = 0.001
-"""Within this share of the range of one of its ends a value is at its end (common practice, no
-source)."""
-
-
-def out_of_range(samples: Samples, loop: Loop) -> NDArray[np.bool_]:
-    """Which good samples of the process variable are at or beyond an end of its range, shape [n].
-
-    A transmitter there is at its end: the value is a bound, not a measurement. None where the range
-    is unknown.
-    """
-    outside = np.zeros(len(samples), np.bool_)
-    if loop.range_low is None or loop.range_high is None:
-        return outside
-    margin = RANGE_MARGIN * (loop.range_high - loop.range_low)
-    value = samples.value[samples.good]
-    low, high = loop.range_low + margin, loop.range_high - margin
-    outside[samples.good] = (value <= low) | (value >= high)
-    return outside
 
 
 def gaps(samples: Samples, silence_us: int) -> list[tuple[int, int]]:

@@ -2,11 +2,11 @@
 
 from alembic import context
 
-from audit.store.tables import Base
+from audit.store.tables import SiteRow
 
 context.configure(
     connection=context.config.attributes["connection"],
-    target_metadata=Base.metadata,
+    target_metadata=SiteRow.metadata,
     render_as_batch=True,
     transactional_ddl=True,
 )

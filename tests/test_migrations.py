@@ -20,11 +20,11 @@ from sqlalchemy.exc import DBAPIError
 from audit.errors import StoreUnready
 from audit.records import LoopResult, Role, TagState
 from audit.store import Store, open_store, queries, writes
+from audit.store.base import Base
 from audit.store.closed import close
 from audit.store.dump import dump
 from audit.store.engine import Purpose
 from audit.store.schema import alembic_config
-from audit.store.tables import Base
 
 
 @contextmanager

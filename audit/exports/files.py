@@ -12,7 +12,6 @@ import io
 import tempfile
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
-from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any, BinaryIO
 
@@ -24,10 +23,8 @@ from audit.exports.stored import Stored, stored
 from audit.records import ExportFile, ExportSource
 
 __all__ = [
-    "Fetched",
     "Opened",
     "discover",
-    "fetch",
     "on_disk",
     "opened",
     "revision",
@@ -216,21 +213,6 @@ def streamed(file: ExportFile, source: ExportSource) -> Iterator[BinaryIO]:
                 yield copy
         else:
             yield io.BufferedReader(_Raw(content), PIECE)
-
-
-@dataclass(frozen=True)
-class Fetched:
-    """One file's bytes: ``content_hash`` sha256 as stored, ``data`` after decompression."""
-
-    content_hash: str
-    data: bytes
-
-
-def fetch(file: ExportFile, source: ExportSource) -> Fetched:
-    """All of a file's content at once. Refusals as ``opened``."""
-    with opened(file, source) as content:
-        data = b"".join(iter(lambda: content.read(_COPIED), b""))
-        return Fetched(content.content_hash, data)
 
 
 class _Raw(io.RawIOBase):

@@ -10,7 +10,7 @@ from sqlalchemy import Dialect, Table
 from sqlalchemy.orm import Session
 from sqlalchemy.types import JSON, LargeBinary
 
-from audit.store.tables import Base
+from audit.store.base import Base
 
 T = TypeVar("T")
 

@@ -12,7 +12,7 @@ from sqlalchemy import bindparam, delete, func, select
 from sqlalchemy.orm import Session
 
 from audit.records import to_us
-from audit.store.tables import Base
+from audit.store.base import Base
 
 PORTION = 500
 """Rows taken out in one transaction: some hundredths of a second."""

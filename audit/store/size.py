@@ -16,8 +16,8 @@ from sqlalchemy import LargeBinary, cast, func, select, text
 from sqlalchemy.orm import Session
 
 from audit.records import DAY_US, instant
+from audit.store.base import Base
 from audit.store.tables import (
-    Base,
     CurveRow,
     DayRow,
     EdgeRow,

@@ -8,59 +8,18 @@ What was measured or published is never overwritten: it gets ``superseded_at`` a
 from __future__ import annotations
 
 from datetime import date, datetime
-from typing import Annotated, Any
 
 from sqlalchemy import (
-    JSON,
-    BigInteger,
     CheckConstraint,
     ForeignKey,
     ForeignKeyConstraint,
     Index,
-    Integer,
-    LargeBinary,
-    MetaData,
-    Text,
     UniqueConstraint,
     text,
 )
-from sqlalchemy.orm import DeclarativeBase, Mapped, mapped_column
+from sqlalchemy.orm import Mapped, mapped_column
 
-from audit.store.columns import Real, UtcDateTime
-
-Micros = Annotated[int, mapped_column(BigInteger)]
-Json = Annotated[Any, mapped_column(JSON)]
-Key = Annotated[int, mapped_column(Integer, primary_key=True)]
-KeyMicros = Annotated[int, mapped_column(BigInteger, primary_key=True)]
-KeyText = Annotated[str, mapped_column(Text, primary_key=True)]
-OfLoop = Annotated[int, mapped_column(ForeignKey("loop.id"), primary_key=True)]
-
-
-class Base(DeclarativeBase):
-    """Every constraint gets its name from here, so that a migration can find it again."""
-
-    metadata = MetaData(
-        naming_convention={
-            "ix": "ix_%(table_name)s_%(column_0_N_name)s",
-            "uq": "uq_%(table_name)s_%(column_0_N_name)s",
-            "ck": "ck_%(table_name)s_%(constraint_name)s",
-            "fk": "fk_%(table_name)s_%(column_0_N_name)s_%(referred_table_name)s",
-            "pk": "pk_%(table_name)s",
-        }
-    )
-    type_annotation_map = {  # noqa: RUF012 (SQLAlchemy reads it as a plain class attribute)
-        str: Text,
-        int: Integer,
-        float: Real,
-        bytes: LargeBinary,
-        datetime: UtcDateTime,
-    }
-
-
-def _one_current(name: str, *columns: str) -> Index:
-    """A unique index over the rows that have no successor."""
-    current = text("superseded_at IS NULL")
-    return Index(name, *columns, unique=True, sqlite_where=current, postgresql_where=current)
+from audit.store.base import Base, Json, Key, KeyMicros, KeyText, Micros, OfLoop, one_current
 
 
 class SiteRow(Base):
@@ -96,7 +55,7 @@ class LoopVersionRow(Base):
     """One wording of a loop's row in the register. A retired loop's current one says since when."""
 
     __tablename__ = "loop_version"
-    __table_args__ = (_one_current("uq_loop_version_current", "loop_id"),)
+    __table_args__ = (one_current("uq_loop_version_current", "loop_id"),)
     loop_id: Mapped[OfLoop]
     version: Mapped[Key]
     entered_at: Mapped[datetime]
@@ -171,7 +130,7 @@ class ExportRow(Base):
         UniqueConstraint("path", "content_hash"),
         CheckConstraint("state IN ('reading', 'taken', 'refused')", name="state"),
         CheckConstraint("first_us <= last_us", name="span"),
-        _one_current("uq_export_current", "path"),
+        one_current("uq_export_current", "path"),
     )
     id: Mapped[Key]
     source: Mapped[str]
@@ -226,7 +185,7 @@ class MeasurementRow(Base):
         ForeignKeyConstraint(
             ["loop_id", "at_us", "curve_number"], ["curve.loop_id", "curve.at_us", "curve.number"]
         ),
-        _one_current("uq_measurement_current", "loop_id", "at_us"),
+        one_current("uq_measurement_current", "loop_id", "at_us"),
         Index(
             None,
             "loop_id",
